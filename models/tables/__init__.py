@@ -1,0 +1,66 @@
+"""The one definition of every stored table: columns, kinds, units, meaning.
+
+Parquet schemas, DuckDB tables, column comments and the documentation page are all derived from it.
+"""
+
+from models.errors import UnknownName
+from models.tables.intake import FILES, PASSES, PLATE_READS, READINGS
+from models.tables.lots import GATE_RUNS, LOT_VALUE_SOURCES, LOT_VALUES, RECIPES
+from models.tables.results import ANALYSES, ESTIMATES, FINDINGS, FITS, RATES, SERIES, WELLS
+from models.tables.table import Column, Table
+
+TABLES: tuple[Table, ...] = (
+    PASSES,
+    FILES,
+    PLATE_READS,
+    READINGS,
+    RECIPES,
+    ANALYSES,
+    WELLS,
+    RATES,
+    FINDINGS,
+    GATE_RUNS,
+    SERIES,
+    FITS,
+    ESTIMATES,
+    LOT_VALUES,
+    LOT_VALUE_SOURCES,
+)
+
+
+def table(name: str) -> Table:
+    """Return the table with this name.
+
+    Raises
+    ------
+    UnknownName
+        If there is no such table.
+    """
+    for each in TABLES:
+        if each.name == name:
+            return each
+    known = ", ".join(each.name for each in TABLES)
+    raise UnknownName(f"there is no table '{name}'", remedy=f"tables are {known}")
+
+
+__all__ = [
+    "ANALYSES",
+    "ESTIMATES",
+    "FILES",
+    "FINDINGS",
+    "FITS",
+    "GATE_RUNS",
+    "LOT_VALUES",
+    "LOT_VALUE_SOURCES",
+    "PASSES",
+    "PLATE_READS",
+    "RATES",
+    "READINGS",
+    "RECIPES",
+    "SERIES",
+    "TABLES",
+    "WELLS",
+    "Column",
+    "Table",
+    "table",
+]

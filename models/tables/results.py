@@ -1,0 +1,166 @@
+"""Tables of what was made of a plate read: analysis, wells, rates, findings, series, fits, estimates."""
+
+from models.tables import keys
+from models.tables.table import Column, Table
+
+ANALYSES = Table(
+    "analyses",
+    "One revision of one plate read's results",
+    ("analysis_id",),
+    (
+        keys.ANALYSIS_ID,
+        keys.PLATE_READ_ID,
+        keys.MAP_ID,
+        keys.ASSAY,
+        keys.RECIPE_ID,
+        keys.PASS_ID,
+        Column("revision", "integer", "Revisions of this plate read's results, counted from 1"),
+        Column("computed_at", "timestamp", "When the results were loaded, UTC"),
+        keys.STANDING,
+        Column("superseded_by", "text", "The analysis that replaced this one; NULL while it is current", nullable=True),
+    ),
+    "warehouse",
+)
+
+WELLS = Table(
+    "wells",
+    "What each well of an analysed plate read held, and its standing",
+    ("analysis_id", "well"),
+    (
+        keys.ANALYSIS_ID,
+        keys.WELL,
+        Column("row_number", "integer", "Plate row, counted from 1"),
+        Column("column_number", "integer", "Plate column, counted from 1"),
+        Column("role", "text", "sample, reference, blank, enzyme_blank, standard or empty"),
+        keys.LOT.optional("The enzyme lot; NULL in wells without enzyme"),
+        keys.SUBSTRATE_UM,
+        keys.ENZYME_NM,
+        keys.ENZYME_NG_PER_ML,
+        keys.MODULATOR,
+        keys.MODULATOR_UM,
+        Column("product_um", "real", "Known product in a standard", "umol/L", nullable=True),
+        keys.SERIES_ID.optional("The series this well belongs to; NULL in blanks, standards and empty wells"),
+        keys.STANDING,
+    ),
+)
+
+RATES = Table(
+    "rates",
+    "Initial rate of each sample, reference and blank well over its window, blank subtracted for enzyme wells",
+    ("analysis_id", "well"),
+    (
+        keys.ANALYSIS_ID,
+        keys.WELL,
+        Column("v0_um_per_s", "real", "Initial rate, blank subtracted", "umol/L/s", nullable=True),
+        Column("v0_se_um_per_s", "real", "Standard error of the rate, blank's error included", "umol/L/s", nullable=True),
+        Column("raw_rate_um_per_s", "real", "Slope before the blank is subtracted", "umol/L/s", nullable=True),
+        Column("blank_rate_um_per_s", "real", "Slope of the matching blank over the same window", "umol/L/s", nullable=True),
+        Column("blank_rate_se_um_per_s", "real", "Standard error of the blank's slope", "umol/L/s", nullable=True),
+        Column("blank_source", "text", "same_level, plate or none: which blanks were matched"),
+        Column("mean_substrate_um", "real", "Mean substrate over the window: what the rate is paired with", "umol/L", nullable=True),
+        Column("window_first_read", "integer", "First read of the window, counted from 1", nullable=True),
+        Column("window_last_read", "integer", "Last read of the window", nullable=True),
+        Column("window_start_s", "real", "Time of the window's first read", "s", nullable=True),
+        Column("window_end_s", "real", "Time of the window's last read", "s", nullable=True),
+        Column("window_point_count", "integer", "Usable reads in the window"),
+        Column("conversion", "real", "Share of what can be consumed that is consumed at the window's end", "1", nullable=True),
+        Column("shortest_conversion", "real", "The same at the end of the shortest usable window", "1", nullable=True),
+        Column("slope_change", "real", "Relative change of slope over the window, from its quadratic term", "1", nullable=True),
+        Column("slope_change_t", "real", "t value of that change", "1", nullable=True),
+        Column("early_slope_change", "real", "Relative change of slope over the reads that come before the conversion limit, whatever the window", "1", nullable=True),
+        Column("early_slope_change_t", "real", "t value of that change", "1", nullable=True),
+        Column("lag_s", "real", "Time before the window that was left out as lag; 0 where there is none", "s", nullable=True),
+        Column("shape", "text", "straight, falling, lag, burst, or unread where there is no rate"),
+        Column("overflow_count", "integer", "Reads past the linear limit or overflowed, all of the curve"),
+        Column("missing_count", "integer", "Reads missing in the curve"),
+    ),
+)
+
+FINDINGS = Table(
+    "findings",
+    "One gate's outcome on one subject where it did not pass",
+    ("finding_id",),
+    (
+        Column("finding_id", "text", "Digest of the analysis, the gate and its subject"),
+        keys.ANALYSIS_ID,
+        Column("gate", "text", "Name of the gate"),
+        Column("subject", "text", "well, series or plate_read"),
+        keys.WELL.optional("The well; NULL where the subject is a series or the plate read"),
+        keys.SERIES_ID.optional("The series; NULL where the subject is no series"),
+        Column("outcome", "text", "breach, or not_assessed where the gate could not be computed"),
+        Column("severity", "text", "hold or void; none for not_assessed"),
+        Column("measured", "real", "What was measured, in the unit of its row", nullable=True),
+        Column("limit_value", "real", "The limit in force, in the unit of its row", nullable=True),
+        keys.UNIT,
+        Column("sentence", "text", "What a reviewer reads: measured value, limit, and what it does"),
+    ),
+)
+
+SERIES = Table(
+    "series",
+    "Wells of one plate read that share lot, enzyme level and modulator level and differ in substrate",
+    ("series_id",),
+    (
+        keys.SERIES_ID,
+        keys.ANALYSIS_ID,
+        keys.LOT,
+        Column("role", "text", "sample or reference"),
+        keys.ENZYME_NM,
+        keys.ENZYME_NG_PER_ML,
+        keys.MODULATOR,
+        keys.MODULATOR_UM,
+        Column("well_count", "integer", "Wells in the series"),
+        Column("clear_well_count", "integer", "Wells that were clear and so were fitted"),
+        Column("level_count", "integer", "Distinct substrate levels among the clear wells"),
+        Column("lowest_substrate_um", "real", "Lowest substrate among the clear wells", "umol/L", nullable=True),
+        Column("highest_substrate_um", "real", "Highest substrate among the clear wells", "umol/L", nullable=True),
+        Column("law", "text", "The rate law chosen; NULL where nothing could be fitted", nullable=True),
+        Column("refusal", "text", "Why the clear wells could not be fitted; NULL where they were", nullable=True),
+        keys.STANDING,
+    ),
+)
+
+FITS = Table(
+    "fits",
+    "One rate law fitted to one series, with the clear wells and beside it with all that are not void",
+    ("fit_id",),
+    (
+        keys.FIT_ID,
+        keys.SERIES_ID,
+        keys.ANALYSIS_ID,
+        keys.LAW,
+        keys.WELLS_FITTED,
+        Column("chosen", "flag", "Whether this law was chosen for these wells"),
+        Column("converged", "flag", "Whether the solver reached the optimum"),
+        Column("trusted", "flag", "Whether the uncertainty can be trusted"),
+        Column("distrust", "text", "Why the uncertainty cannot be trusted; NULL where it can", nullable=True),
+        Column("point_count", "integer", "Rates fitted"),
+        Column("degrees_of_freedom", "integer", "Rates less constants"),
+        Column("weighted_residual_sum", "real", "Sum of squared residuals, each over its variance", "1"),
+        Column("aicc", "real", "Akaike's information criterion, corrected for few points", "1", nullable=True),
+        Column("evidence_weight", "real", "Akaike weight among the candidate laws", "1", nullable=True),
+    ),
+)
+
+ESTIMATES = Table(
+    "estimates",
+    "One fitted constant with its 95 % interval, in one revision",
+    ("estimate_id",),
+    (
+        keys.ESTIMATE_ID,
+        keys.FIT_ID,
+        keys.SERIES_ID,
+        keys.ANALYSIS_ID,
+        keys.ASSAY,
+        keys.LOT,
+        keys.LAW,
+        keys.WELLS_FITTED,
+        Column("chosen", "flag", "Whether the estimate's law was chosen for these wells"),
+        keys.CONSTANT,
+        keys.VALUE,
+        keys.STANDARD_ERROR,
+        keys.LOW,
+        keys.HIGH,
+        keys.UNIT,
+    ),
+)
