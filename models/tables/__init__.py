@@ -4,7 +4,7 @@ Parquet schemas, DuckDB tables, column comments and the documentation page are a
 """
 
 from models.errors import UnknownName
-from models.tables.intake import FILES, PASSES, PLATE_READS, READINGS
+from models.tables.intake import FILES, PASSES, PLATE_MAPS, PLATE_READS, READINGS
 from models.tables.lots import GATE_RUNS, LOT_VALUE_SOURCES, LOT_VALUES, RECIPES
 from models.tables.results import ANALYSES, ESTIMATES, FINDINGS, FITS, RATES, SERIES, WELLS
 from models.tables.table import Column, Table
@@ -12,6 +12,7 @@ from models.tables.table import Column, Table
 TABLES: tuple[Table, ...] = (
     PASSES,
     FILES,
+    PLATE_MAPS,
     PLATE_READS,
     READINGS,
     RECIPES,
@@ -53,6 +54,7 @@ __all__ = [
     "LOT_VALUES",
     "LOT_VALUE_SOURCES",
     "PASSES",
+    "PLATE_MAPS",
     "PLATE_READS",
     "RATES",
     "READINGS",

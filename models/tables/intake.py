@@ -30,9 +30,30 @@ FILES = Table(
         Column("file_name", "text", "Name under which the file was first seen"),
         Column("byte_count", "integer", "Size of the file", "byte"),
         Column("received_at", "timestamp", "When the file was first pulled, UTC"),
-        Column("profile", "text", "Export profile that read it; NULL for plate maps and quarantined files", nullable=True),
+        Column(
+            "profile",
+            "text",
+            "Export profile that read it; NULL for plate maps and quarantined files",
+            nullable=True,
+        ),
         Column("reason", "text", "Why the file is in quarantine; NULL where it was read", nullable=True),
         keys.PASS_ID,
+    ),
+    "warehouse",
+)
+
+PLATE_MAPS = Table(
+    "plate_maps",
+    "Which plates each accepted plate map describes; the latest map of a plate counts",
+    ("map_id", "plate_id"),
+    (
+        keys.MAP_ID,
+        keys.PLATE_ID,
+        Column(
+            "assay", "text", "Assay that the map names; NULL where it leaves that to the site", nullable=True
+        ),
+        Column("mapped_well_count", "integer", "Wells that the map describes on this plate"),
+        Column("received_at", "timestamp", "When the map was first pulled, UTC"),
     ),
     "warehouse",
 )
@@ -47,13 +68,26 @@ PLATE_READS = Table(
         Column("place_in_export", "integer", "Which plate of the file this is, counted from 1"),
         keys.PLATE_ID,
         Column("plate_format", "integer", "Wells of the plate: 96, 384 or 1536"),
-        Column("started_at", "timestamp", "When the read began, UTC; NULL where the export does not say", nullable=True),
+        Column(
+            "started_at",
+            "timestamp",
+            "When the read began, UTC; NULL where the export does not say",
+            nullable=True,
+        ),
         Column("well_count", "integer", "Wells that were read"),
         Column("read_count", "integer", "Reads of the best-read well in the busiest channel"),
         Column("channels", "text", "Channels in the file, separated by commas"),
         Column("duration_s", "real", "Time from the first to the last read", "s"),
-        Column("temperature_low_c", "real", "Lowest temperature reported during the read", "degC", nullable=True),
-        Column("temperature_high_c", "real", "Highest temperature reported during the read", "degC", nullable=True),
+        Column(
+            "temperature_low_c", "real", "Lowest temperature reported during the read", "degC", nullable=True
+        ),
+        Column(
+            "temperature_high_c",
+            "real",
+            "Highest temperature reported during the read",
+            "degC",
+            nullable=True,
+        ),
     ),
     "warehouse",
 )

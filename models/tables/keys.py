@@ -19,7 +19,9 @@ LOT_VALUE_ID = Column("lot_value_id", "text", "Digest of lot, assay, constant an
 ASSAY = Column("assay", "text", "Name of the assay, as its file in the site's configuration is called")
 LOT = Column("lot", "text", "The enzyme lot")
 WELL = Column("well", "text", "Well name: row letters and column number without padding, such as B7")
-CHANNEL = Column("channel", "text", "Channel of the read, such as a wavelength; 'signal' where there is one only")
+CHANNEL = Column(
+    "channel", "text", "Channel of the read, such as a wavelength; 'signal' where there is one only"
+)
 LAW = Column("law", "text", "Name of the rate law")
 CONSTANT = Column("constant", "text", "Name of the constant: km, vmax, kcat, kcat_per_km, k_half, hill_n ...")
 WELLS_FITTED = Column("wells", "text", "Which wells the fit rests on: 'clear', or 'all' that are not void")
@@ -34,6 +36,10 @@ MODULATOR_UM = Column("modulator_um", "real", "Modulator concentration", "umol/L
 # A constant's value carries its unit in the row, because one column holds constants of several dimensions.
 VALUE = Column("value", "real", "The constant, in the unit of its row")
 STANDARD_ERROR = Column("standard_error", "real", "Standard error, in the unit of its row", nullable=True)
-LOW = Column("low", "real", "Lower end of the 95 % interval; NULL where the data leave it open", nullable=True)
-HIGH = Column("high", "real", "Upper end of the 95 % interval; NULL where the data leave it open", nullable=True)
+LOW = Column(
+    "low", "real", "Lower end of the 95 % interval; NULL where the data leave it open", nullable=True
+)
+HIGH = Column(
+    "high", "real", "Upper end of the 95 % interval; NULL where the data leave it open", nullable=True
+)
 UNIT = Column("unit", "text", "Unit of the row's value; '1' for a pure number")

@@ -17,7 +17,12 @@ ANALYSES = Table(
         Column("revision", "integer", "Revisions of this plate read's results, counted from 1"),
         Column("computed_at", "timestamp", "When the results were loaded, UTC"),
         keys.STANDING,
-        Column("superseded_by", "text", "The analysis that replaced this one; NULL while it is current", nullable=True),
+        Column(
+            "superseded_by",
+            "text",
+            "The analysis that replaced this one; NULL while it is current",
+            nullable=True,
+        ),
     ),
     "warehouse",
 )
@@ -52,24 +57,76 @@ RATES = Table(
         keys.ANALYSIS_ID,
         keys.WELL,
         Column("v0_um_per_s", "real", "Initial rate, blank subtracted", "umol/L/s", nullable=True),
-        Column("v0_se_um_per_s", "real", "Standard error of the rate, blank's error included", "umol/L/s", nullable=True),
-        Column("raw_rate_um_per_s", "real", "Slope before the blank is subtracted", "umol/L/s", nullable=True),
-        Column("blank_rate_um_per_s", "real", "Slope of the matching blank over the same window", "umol/L/s", nullable=True),
-        Column("blank_rate_se_um_per_s", "real", "Standard error of the blank's slope", "umol/L/s", nullable=True),
+        Column(
+            "v0_se_um_per_s",
+            "real",
+            "Standard error of the rate, blank's error included",
+            "umol/L/s",
+            nullable=True,
+        ),
+        Column(
+            "raw_rate_um_per_s", "real", "Slope before the blank is subtracted", "umol/L/s", nullable=True
+        ),
+        Column(
+            "blank_rate_um_per_s",
+            "real",
+            "Slope of the matching blank over the same window",
+            "umol/L/s",
+            nullable=True,
+        ),
+        Column(
+            "blank_rate_se_um_per_s", "real", "Standard error of the blank's slope", "umol/L/s", nullable=True
+        ),
         Column("blank_source", "text", "same_level, plate or none: which blanks were matched"),
-        Column("mean_substrate_um", "real", "Mean substrate over the window: what the rate is paired with", "umol/L", nullable=True),
+        Column(
+            "mean_substrate_um",
+            "real",
+            "Mean substrate over the window: what the rate is paired with",
+            "umol/L",
+            nullable=True,
+        ),
         Column("window_first_read", "integer", "First read of the window, counted from 1", nullable=True),
         Column("window_last_read", "integer", "Last read of the window", nullable=True),
         Column("window_start_s", "real", "Time of the window's first read", "s", nullable=True),
         Column("window_end_s", "real", "Time of the window's last read", "s", nullable=True),
         Column("window_point_count", "integer", "Usable reads in the window"),
-        Column("conversion", "real", "Share of what can be consumed that is consumed at the window's end", "1", nullable=True),
-        Column("shortest_conversion", "real", "The same at the end of the shortest usable window", "1", nullable=True),
-        Column("slope_change", "real", "Relative change of slope over the window, from its quadratic term", "1", nullable=True),
+        Column(
+            "conversion",
+            "real",
+            "Share of what can be consumed that is consumed at the window's end",
+            "1",
+            nullable=True,
+        ),
+        Column(
+            "shortest_conversion",
+            "real",
+            "The same at the end of the shortest usable window",
+            "1",
+            nullable=True,
+        ),
+        Column(
+            "slope_change",
+            "real",
+            "Relative change of slope over the window, from its quadratic term",
+            "1",
+            nullable=True,
+        ),
         Column("slope_change_t", "real", "t value of that change", "1", nullable=True),
-        Column("early_slope_change", "real", "Relative change of slope over the reads that come before the conversion limit, whatever the window", "1", nullable=True),
+        Column(
+            "early_slope_change",
+            "real",
+            "Relative change of slope over the reads that come before the conversion limit, whatever the window",
+            "1",
+            nullable=True,
+        ),
         Column("early_slope_change_t", "real", "t value of that change", "1", nullable=True),
-        Column("lag_s", "real", "Time before the window that was left out as lag; 0 where there is none", "s", nullable=True),
+        Column(
+            "lag_s",
+            "real",
+            "Time before the window that was left out as lag; 0 where there is none",
+            "s",
+            nullable=True,
+        ),
         Column("shape", "text", "straight, falling, lag, burst, or unread where there is no rate"),
         Column("overflow_count", "integer", "Reads past the linear limit or overflowed, all of the curve"),
         Column("missing_count", "integer", "Reads missing in the curve"),
@@ -112,10 +169,16 @@ SERIES = Table(
         Column("well_count", "integer", "Wells in the series"),
         Column("clear_well_count", "integer", "Wells that were clear and so were fitted"),
         Column("level_count", "integer", "Distinct substrate levels among the clear wells"),
-        Column("lowest_substrate_um", "real", "Lowest substrate among the clear wells", "umol/L", nullable=True),
-        Column("highest_substrate_um", "real", "Highest substrate among the clear wells", "umol/L", nullable=True),
+        Column(
+            "lowest_substrate_um", "real", "Lowest substrate among the clear wells", "umol/L", nullable=True
+        ),
+        Column(
+            "highest_substrate_um", "real", "Highest substrate among the clear wells", "umol/L", nullable=True
+        ),
         Column("law", "text", "The rate law chosen; NULL where nothing could be fitted", nullable=True),
-        Column("refusal", "text", "Why the clear wells could not be fitted; NULL where they were", nullable=True),
+        Column(
+            "refusal", "text", "Why the clear wells could not be fitted; NULL where they were", nullable=True
+        ),
         keys.STANDING,
     ),
 )
@@ -137,7 +200,9 @@ FITS = Table(
         Column("point_count", "integer", "Rates fitted"),
         Column("degrees_of_freedom", "integer", "Rates less constants"),
         Column("weighted_residual_sum", "real", "Sum of squared residuals, each over its variance", "1"),
-        Column("aicc", "real", "Akaike's information criterion, corrected for few points", "1", nullable=True),
+        Column(
+            "aicc", "real", "Akaike's information criterion, corrected for few points", "1", nullable=True
+        ),
         Column("evidence_weight", "real", "Akaike weight among the candidate laws", "1", nullable=True),
     ),
 )

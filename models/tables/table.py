@@ -115,7 +115,9 @@ class Table:
             if isinstance(array, pa.ChunkedArray):
                 array = array.combine_chunks()
             if array.null_count and not column.nullable:
-                raise pa.ArrowInvalid(f"{self.name}.{column.name} holds {array.null_count} NULLs but must be known")
+                raise pa.ArrowInvalid(
+                    f"{self.name}.{column.name} holds {array.null_count} NULLs but must be known"
+                )
             arrays.append(array)
         return pa.Table.from_arrays(arrays, schema=self.arrow_schema())
 
