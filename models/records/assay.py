@@ -127,7 +127,7 @@ class Assay(Record):
     product: str = Field(min_length=1)
     """The product, or the species whose signal is read."""
     plates: tuple[str, ...] = ()
-    """Patterns of plate ids that belong to this assay, with * and ?; a plate map may name the assay instead."""
+    """Patterns of plate ids that belong to this assay, with * and ?; a plate map may name it instead."""
     laws: tuple[str, ...] = ("michaelis_menten",)
     """Candidate rate laws, the simplest first."""
     molar_mass_g_per_mol: float | None = Field(default=None, gt=0)
@@ -148,7 +148,7 @@ class Assay(Record):
     """What the read schedule should have been."""
     conditions: Conditions = Conditions()
     """Conditions to report."""
-    gates: dict[str, dict[str, SettingValue]] = {}
+    gates: dict[str, dict[str, SettingValue]] = Field(default_factory=dict)
     """Gate limits that differ from the site's, by gate and setting."""
 
     @model_validator(mode="after")

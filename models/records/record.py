@@ -11,5 +11,9 @@ class Record(BaseModel):
     """A frozen record that refuses keys it does not know and numbers that are not finite."""
 
     model_config = ConfigDict(
-        frozen=True, extra="forbid", str_strip_whitespace=True, allow_inf_nan=False, use_attribute_docstrings=True
+        frozen=True,
+        extra="forbid",
+        str_strip_whitespace=True,
+        allow_inf_nan=False,
+        use_attribute_docstrings=True,
     )

@@ -1,4 +1,4 @@
-"""Tables of what is said of lots, and of how it was checked: lot values, their sources, gate runs, recipes."""
+"""Tables of what is said of lots and how it was checked: lot values, sources, gate runs, recipes."""
 
 from models.tables import keys
 from models.tables.table import Column, Table

@@ -51,7 +51,7 @@ WELLS = Table(
 
 RATES = Table(
     "rates",
-    "Initial rate of each sample, reference and blank well over its window, blank subtracted for enzyme wells",
+    "Initial rate of each well that was read for one, over its window, blank subtracted for enzyme wells",
     ("analysis_id", "well"),
     (
         keys.ANALYSIS_ID,
@@ -115,7 +115,7 @@ RATES = Table(
         Column(
             "early_slope_change",
             "real",
-            "Relative change of slope over the reads that come before the conversion limit, whatever the window",
+            "Relative change of slope over the reads before the conversion limit, whatever the window",
             "1",
             nullable=True,
         ),

@@ -109,7 +109,7 @@ class Table:
         pyarrow.ArrowInvalid
             If a value does not fit the column's type, or a column that must be known has a NULL.
         """
-        arrays: list[pa.Array] = []
+        arrays: list[pa.Array[pa.Scalar[pa.DataType]]] = []
         for column in self.columns:
             array = pa.array(frame[column.name], type=_ARROW[column.kind], from_pandas=True)
             if isinstance(array, pa.ChunkedArray):
