@@ -1,0 +1,61 @@
+"""Hold the rates against the gates and say which wells stand.
+
+The rules are in `checks`; this stage hands them the frames and keeps what they say.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import pandas as pd
+
+from checks.assess import assess
+from checks.gates.gate import GateInput
+from checks.verdicts import well_standings, without_consequences
+from flows.stages.work import GatedBatch, PlateWork, RatedBatch
+
+
+def gate_batch(rated: RatedBatch) -> GatedBatch:
+    """Assess wells and plate reads of a batch and set each well's standing.
+
+    Parameters
+    ----------
+    rated
+        The batch with the rate of every well.
+
+    Returns
+    -------
+    GatedBatch
+        Findings without those that only follow from another, and wells with `standing`.
+    """
+    assessment = assess("wells", gate_input(rated), limits_by_recipe(rated.plates))
+    findings = without_consequences(assessment.findings)
+    wells = rated.wells.assign(standing=well_standings(rated.wells, findings))
+    return GatedBatch(rated, wells, findings, assessment.runs)
+
+
+def gate_input(
+    rated: RatedBatch, series: pd.DataFrame | None = None, estimates: pd.DataFrame | None = None
+) -> GateInput:
+    """Frames of a batch as the gates want them, series and estimates only once there are any."""
+    analyses = pd.DataFrame(
+        {
+            "analysis_id": [work.analysis_id for work in rated.plates],
+            "recipe_id": [work.recipe.recipe_id for work in rated.plates],
+            "assay": [work.recipe.assay_name for work in rated.plates],
+        }
+    )
+    return GateInput(
+        analyses=analyses,
+        wells=rated.wells,
+        readings=rated.reads,
+        rates=rated.rates,
+        series=series,
+        estimates=estimates,
+        schedules={work.recipe.recipe_id: work.recipe.assay.schedule for work in rated.plates},
+    )
+
+
+def limits_by_recipe(plates: Sequence[PlateWork]) -> dict[str, dict[str, dict[str, bool | int | float]]]:
+    """Gate limits in force, by recipe."""
+    return {work.recipe.recipe_id: work.recipe.limits for work in plates}

@@ -1,0 +1,82 @@
+"""What travels down the line between stages: plate reads with their map and recipe, and what is made of them.
+
+Plain frozen records; nothing here reads, writes or computes.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+
+import pandas as pd
+
+from checks.assess import GateRun
+from flows.site.recipes import Recipe
+from models.identity import result_id
+
+
+@dataclass(frozen=True)
+class PlateWork:
+    """One plate read that is ready to be analysed.
+
+    Attributes
+    ----------
+    readings
+        Readings of the assay's channel, columns of the `readings` table.
+    wells
+        The plate map's wells, columns of the `wells` table from `well` to `product_um`.
+    """
+
+    plate_read_id: str
+    plate_id: str
+    map_id: str
+    recipe: Recipe
+    readings: pd.DataFrame
+    wells: pd.DataFrame
+
+    @property
+    def analysis_id(self) -> str:
+        """Digest of what fixes the results of this plate read: its bytes, its map, its recipe, no decisions."""
+        return result_id("analysis", self.plate_read_id, self.map_id, self.recipe.recipe_id, [])
+
+
+@dataclass(frozen=True)
+class RatedBatch:
+    """Plate reads with the rate of every well, before anything is judged.
+
+    Attributes
+    ----------
+    wells
+        Columns of the `wells` table without `standing`, and `plate` and `series` as numbers within the batch.
+    reads
+        analysis_id, well, read_number, time_s, signal, state: every read, past the linear limit said so.
+    rates
+        Columns of the `rates` table, row for row with `wells` of a role that has a rate.
+    series
+        series_id, analysis_id, assay, lot, role, enzyme and modulator levels, `series` and `plate` numbers.
+    """
+
+    plates: Sequence[PlateWork]
+    wells: pd.DataFrame
+    reads: pd.DataFrame
+    rates: pd.DataFrame
+    series: pd.DataFrame
+
+
+@dataclass(frozen=True)
+class GatedBatch:
+    """Rated plate reads with the findings on wells and plate reads, and each well's standing."""
+
+    rated: RatedBatch
+    wells: pd.DataFrame
+    findings: pd.DataFrame
+    runs: Sequence[GateRun]
+
+
+@dataclass(frozen=True)
+class FittedBatch:
+    """All that is to be stored of a batch, by table name, and the gate runs behind it."""
+
+    plates: Sequence[PlateWork]
+    tables: dict[str, pd.DataFrame]
+    runs: Sequence[GateRun] = field(default_factory=tuple)
