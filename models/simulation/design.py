@@ -48,6 +48,8 @@ class Design:
         Signal of a well before any turnover.
     overflow_above
         Signal above which the instrument writes an overflow.
+    reagent_um
+        Turnover at which a reagent beside the substrate is used up and the reaction stops [umol/L].
     dead_time_s
         Time from the start of the reaction to the first read [s].
     temperature_c
@@ -60,6 +62,7 @@ class Design:
     signal_per_um: float
     baseline_signal: float = 0.08
     overflow_above: float = np.inf
+    reagent_um: float = np.inf
     dead_time_s: float = 0.0
     temperature_c: float = 25.0
 

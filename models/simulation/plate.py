@@ -192,6 +192,7 @@ def simulate_plate(
 
     vmax = kcat * bench.enzyme_nm / 1000.0
     turned_over = _react(bench, vmax, k, order, hill, design.time_s + design.dead_time_s)
+    turned_over = np.minimum(turned_over, design.reagent_um)
     turned_over += wells["product_um"].fillna(0.0).to_numpy(float)[:, None]
     baseline = design.baseline_signal + noise.baseline_sd * scatter[2]
     signal = baseline[:, None] + design.signal_per_um * turned_over + noise.signal_sd * read_noise

@@ -231,6 +231,15 @@ def test_unknown_lots_and_wells_are_errors():
         simulate(f.Unsaturated(1.0, "other"))
 
 
+def test_turnover_stops_where_a_reagent_runs_out():
+    design = dataclasses.replace(triplicate_design(), reagent_um=12.0)
+    plate = simulate(noise=Noise(), design=design)
+    turned_over = (plate.signal - plate.signal[:, :1]) / design.signal_per_um
+    free = (simulate(noise=Noise()).signal - plate.signal[:, :1]) / design.signal_per_um
+    assert free.max() > 25.0
+    np.testing.assert_allclose(turned_over, np.minimum(free, 12.0), atol=1e-9)
+
+
 def test_the_reaction_may_have_begun_before_the_first_read():
     clean, late = (
         simulate(noise=Noise(), design=dataclasses.replace(triplicate_design(), dead_time_s=d))
