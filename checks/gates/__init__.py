@@ -1,0 +1,56 @@
+"""The gates: one module each, and the registry that names them.
+
+A new gate is a new module and one line here. Importing this package does not import Great Expectations.
+"""
+
+from checks.gates import (
+    blank_drift,
+    detector_range,
+    initial_slope_nonlinear,
+    read_schedule,
+    saturation_not_reached,
+    substrate_depletion,
+)
+from checks.gates.gate import Gate, GateInput, Limits, Measure, Setting
+from checks.gates.limits import resolve
+
+GATES: dict[str, Gate] = {
+    module.GATE.name: module.GATE
+    for module in (
+        detector_range,
+        read_schedule,
+        substrate_depletion,
+        initial_slope_nonlinear,
+        blank_drift,
+        saturation_not_reached,
+    )
+}
+
+
+def resolve_limits(
+    site: Limits, assay: Limits, *, where: tuple[str, str] = ("gates.toml", "the assay")
+) -> Limits:
+    """Limits in force: every gate with every setting, the assay's over the site's over the defaults.
+
+    Parameters
+    ----------
+    site, assay
+        By gate and setting, only what differs; `on = false` turns a gate off.
+    where
+        What an error calls the two.
+
+    Returns
+    -------
+    Limits
+        Every gate with `on` and all of its settings.
+
+    Raises
+    ------
+    ConfigurationError
+        If a gate or setting is unknown (the nearest name is suggested), or a value is of the wrong kind or
+        out of its range.
+    """
+    return resolve(GATES, site, assay, where)
+
+
+__all__ = ["GATES", "Gate", "GateInput", "Limits", "Measure", "Setting", "resolve_limits"]
