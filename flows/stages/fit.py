@@ -11,6 +11,7 @@ import pandas as pd
 
 from checks.assess import Assessment, assess
 from checks.verdicts import plate_read_standing, series_standings, without_consequences
+from flows.frames import rows
 from flows.stages.gate import gate_input, limits_by_recipe
 from flows.stages.work import FittedBatch, GatedBatch, RatedBatch
 from models.identity import result_id
@@ -103,9 +104,7 @@ def _stored(rated: RatedBatch, result: FitResult, wells_fitted: str) -> tuple[pd
     of_series = rated.series.set_index("series")
     fits = result.fits.join(of_series[["series_id", "analysis_id"]], on="series")
     fits["wells"] = wells_fitted
-    fits["fit_id"] = [
-        result_id("fit", row.series_id, row.law, wells_fitted) for row in fits.itertuples()
-    ]
+    fits["fit_id"] = [result_id("fit", row.series_id, row.law, wells_fitted) for row in rows(fits)]
     masses = [rated.plates[plate].recipe.assay.molar_mass_g_per_mol for plate in rated.series["plate"]]
     derived = turnover(
         result,
@@ -119,9 +118,7 @@ def _stored(rated: RatedBatch, result: FitResult, wells_fitted: str) -> tuple[pd
         fits[["series_id", "law", "fit_id"]], on=["series_id", "law"], how="left", validate="m:1"
     )
     constants["wells"] = wells_fitted
-    constants["estimate_id"] = [
-        result_id("estimate", row.fit_id, row.constant) for row in constants.itertuples()
-    ]
+    constants["estimate_id"] = [result_id("estimate", row.fit_id, row.constant) for row in rows(constants)]
     return fits, constants
 
 

@@ -9,13 +9,15 @@ from __future__ import annotations
 
 import pandas as pd
 
+from flows.site.layout import Site
+from flows.warehouse.writer import loader
 from models.identity import result_id
 from models.kinetics.laws import law
 from models.kinetics.selection import choose_law
 from models.statistics.lots import combine_plate_reads
 from models.tables import LOT_VALUE_SOURCES, LOT_VALUES
 
-# Vmax belongs to an enzyme level, not to a lot; where the enzyme's amount is known, kcat says what a lot can do.
+# Vmax belongs to an enzyme level, not to a lot; where the enzyme's amount is known, a turnover stands for it.
 LEVEL_BOUND = "vmax"
 PER_ENZYME = ("kcat", "specific_activity")
 
@@ -27,8 +29,8 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
     ----------
     current
         A row an estimate of the clear wells of an unmodulated series that is not superseded: columns
-        estimate_id, series_id, plate_read_id, assay, lot, role, law, constant, value, standard_error, low, high,
-        unit, aicc, series_standing, measured_at.
+        estimate_id, series_id, plate_read_id, assay, lot, role, law, constant, value, standard_error, low,
+        high, unit, aicc, series_standing, measured_at.
     pass_id
         The pass that these values are written by.
 
@@ -37,13 +39,16 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
     tuple of DataFrame
         Rows of `lot_values` and of `lot_value_sources`.
     """
-    values, sources = [], []
-    for (assay, lot, role), of_lot in current.groupby(["assay", "lot", "role"], sort=True):
+    values: list[dict[str, object]] = []
+    sources: list[dict[str, str]] = []
+    for key, of_lot in current.groupby(["assay", "lot", "role"], sort=True):
+        assay, lot, role = (str(part) for part in key)
         held = of_lot["series_standing"] != "clear"
         rest = of_lot[~held] if (~held).any() else of_lot
         fitted = rest[rest["law"] == _law_of_lot(rest)]
         constants = set(fitted["constant"])
-        for constant, rows in fitted.groupby("constant", sort=True):
+        for name, rows in fitted.groupby("constant", sort=True):
+            constant = str(name)
             if constant == LEVEL_BOUND and constants & set(PER_ENZYME):
                 continue
             value = combine_plate_reads(
@@ -91,3 +96,38 @@ def _law_of_lot(rows: pd.DataFrame) -> str:
     if total.empty:
         return str(min(rows["law"], key=lambda name: law(name).rank))
     return choose_law({str(name): float(aicc) for name, aicc in total.items()})
+
+
+_ESTIMATES_OF_LOTS = """
+    SELECT e.estimate_id, e.series_id, c.plate_read_id, e.assay, e.lot, s.role, e.law, e.constant,
+           e.value, e.standard_error, e.low, e.high, e.unit, t.aicc,
+           s.standing AS series_standing, c.measured_at
+    FROM estimates e
+    JOIN fits t USING (fit_id)
+    JOIN series s ON s.series_id = e.series_id
+    JOIN current_analyses c ON c.analysis_id = e.analysis_id
+    SEMI JOIN wanted w ON w.assay = e.assay AND w.lot = e.lot
+    WHERE e.wells = 'clear' AND (s.modulator IS NULL OR coalesce(s.modulator_um, 0) = 0)
+    ORDER BY e.estimate_id
+"""
+
+
+def current_estimates(site: Site, series: pd.DataFrame) -> pd.DataFrame:
+    """Current estimates, of all candidate laws, of every lot that these series belong to.
+
+    Parameters
+    ----------
+    site
+        The site; its warehouse holds the estimates already.
+    series
+        Rows with columns assay and lot.
+
+    Returns
+    -------
+    DataFrame
+        What `lot_values` takes.
+    """
+    with loader(site) as connection:
+        connection.register("wanted", series[["assay", "lot"]].drop_duplicates())
+        estimates: pd.DataFrame = connection.sql(_ESTIMATES_OF_LOTS).df()
+        return estimates

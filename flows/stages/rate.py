@@ -10,6 +10,7 @@ from collections.abc import Sequence
 import numpy as np
 import pandas as pd
 
+from flows.frames import rows
 from flows.stages.work import PlateWork, RatedBatch
 from models.identity import known, result_id
 from models.kinetics.curves import CurveBatch
@@ -84,7 +85,7 @@ def _number_series(wells: pd.DataFrame, plates: Sequence[PlateWork]) -> tuple[pd
             row.modulator if isinstance(row.modulator, str) else None,
             known(row.modulator_um),
         )
-        for row in series.itertuples()
+        for row in rows(series)
     ]
     names = dict(zip(series["series"], series["series_id"], strict=True))
     wells["series_id"] = [names.get(number) for number in wells["series"]]
@@ -126,10 +127,7 @@ def _curves(
     per_substrate_um = np.array([assay.signal_per_um * assay.product_per_substrate for assay in assays])
     substrate_um = rated["substrate_um"].to_numpy(dtype=float)
     consumable_um = np.array(
-        [
-            assays[p].consumable_um(s) if s > 0 else np.nan
-            for p, s in zip(plate, substrate_um, strict=True)
-        ]
+        [assays[p].consumable_um(s) if s > 0 else np.nan for p, s in zip(plate, substrate_um, strict=True)]
     )
     from_blank = np.array([assay.signal.product_zero == "blank" for assay in assays])
     batch = CurveBatch(
@@ -158,7 +156,8 @@ def _rate_settings(rated: pd.DataFrame, plates: Sequence[PlateWork]) -> RateSett
     plate = rated["plate"].to_numpy(dtype=np.intp)
 
     def limit(gate: str, setting: str) -> np.ndarray:
-        return np.array([float(work.recipe.limits[gate][setting]) for work in plates])[plate]
+        of_plates = np.array([float(work.recipe.limits[gate][setting]) for work in plates])
+        return of_plates[plate]
 
     return RateSettings(
         depletion_limit=limit("substrate_depletion", "limit"),

@@ -36,7 +36,7 @@ class PlateWork:
 
     @property
     def analysis_id(self) -> str:
-        """Digest of what fixes the results of this plate read: its bytes, its map, its recipe, no decisions."""
+        """Digest of what fixes this plate read's results: its bytes, its map, its recipe, no decisions."""
         return result_id("analysis", self.plate_read_id, self.map_id, self.recipe.recipe_id, [])
 
 

@@ -1,0 +1,56 @@
+"""The pass as a Prefect flow: the same steps in the same order, each of them a task.
+
+Importing this module imports Prefect, which takes seconds; only what needs it imports it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import TypeVar
+
+from prefect import flow, task
+from prefect.artifacts import create_table_artifact
+from prefect.cache_policies import NO_CACHE
+from prefect.settings import PREFECT_FLOWS_HEARTBEAT_FREQUENCY, temporary_settings
+
+from flows.overnight.nightly import run_pass
+from flows.overnight.report import PassReport
+from flows.site.layout import Site, open_site
+
+Result = TypeVar("Result")
+
+
+def run_as_task(name: str, step: Callable[..., Result], *given: object) -> Result:
+    """Carry a step out as a Prefect task: its frames stay in memory and are neither cached nor stored."""
+    done: Result = task(step, name=name, cache_policy=NO_CACHE, persist_result=False)(*given)
+    return done
+
+
+@flow(name="overnight", persist_result=False, validate_parameters=False)
+def overnight(site_root: str) -> PassReport:
+    """One pass over a site's inbox.
+
+    Parameters
+    ----------
+    site_root
+        The site's folder.
+    """
+    report = run_pass(open_site(Path(site_root)), lambda: datetime.now(UTC), run_as_task)
+    create_table_artifact(key="pass-report", table=[report.counts()], description="What the pass did")
+    return report
+
+
+def run_flow(site: Site) -> PassReport:
+    """Run the flow once, on the server that the environment names or on one of Prefect's own.
+
+    Raises
+    ------
+    HalfsatError
+        As `run_pass` does.
+    """
+    # A pass by hand is watched by a person; joining the heartbeat thread would cost a second.
+    with temporary_settings({PREFECT_FLOWS_HEARTBEAT_FREQUENCY: None}):
+        report: PassReport = overnight(str(site.root))
+    return report

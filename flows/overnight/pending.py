@@ -1,0 +1,176 @@
+"""Which staged plate reads are ready to be analysed, and what the others wait for.
+
+A plate read is ready when it has no analysis yet and its plate has a plate map, an assay and a profile.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from fnmatch import fnmatchcase
+from functools import lru_cache
+from typing import Any
+
+from checks.gates import resolve_limits
+from flows.frames import rows
+from flows.lake import read_rows
+from flows.overnight.report import Waiting
+from flows.site.archive import fetch
+from flows.site.configuration import Configuration
+from flows.site.layout import Site
+from flows.site.recipes import Recipe, code_version
+from flows.stages.read import PlateMap, read_plate_map
+from flows.stages.work import PlateWork
+from flows.warehouse.writer import loader
+from models.errors import HalfsatError
+from models.tables import READINGS
+
+_NOT_ANALYSED = """
+    SELECT p.plate_read_id, p.plate_id, p.channels, f.file_name, f.profile,
+           m.map_id, m.assay, m.file_name AS map_name
+    FROM plate_reads p
+    JOIN files f ON f.file_id = p.export_id
+    LEFT JOIN (
+        SELECT m.plate_id, m.map_id, m.assay, g.file_name
+        FROM plate_maps m JOIN files g ON g.file_id = m.map_id
+        QUALIFY row_number() OVER (PARTITION BY m.plate_id ORDER BY m.received_at DESC, m.map_id DESC) = 1
+    ) m ON m.plate_id = p.plate_id
+    ANTI JOIN analyses a ON a.plate_read_id = p.plate_read_id
+    ORDER BY f.received_at, f.file_name, p.place_in_export
+"""
+
+
+@dataclass(frozen=True)
+class Ready:
+    """A plate read that can be analysed, before its readings are loaded."""
+
+    plate_read_id: str
+    plate_id: str
+    map_id: str
+    map_name: str
+    channel: str
+    recipe: Recipe
+
+
+def find_pending(site: Site, configuration: Configuration) -> tuple[list[Ready], list[Waiting]]:
+    """Sort the plate reads that have no analysis into those that are ready and those that wait.
+
+    Parameters
+    ----------
+    site
+        The site; its warehouse says what is staged.
+    configuration
+        Assays, profiles and limits that are in force now.
+    """
+    with loader(site) as connection:
+        found = connection.sql(_NOT_ANALYSED).df().astype(object)
+    found = found.where(found.notna(), None)
+    ready: list[Ready] = []
+    waiting: list[Waiting] = []
+    recipes = _RecipeBook(configuration)
+    for row in rows(found):
+        try:
+            ready.append(_make_ready(row, configuration, recipes))
+        except HalfsatError as error:
+            waiting.append(Waiting(str(row.plate_id), str(error)))
+    return ready, waiting
+
+
+def load_work(site: Site, ready: Sequence[Ready]) -> Iterator[PlateWork]:
+    """Read the readings and the plate map of each plate read that is ready.
+
+    Raises
+    ------
+    SiteError
+        If raw archive or lake have lost or changed a file.
+    """
+    plate_maps = _PlateMaps(site)
+    for each in ready:
+        readings = read_rows(site, READINGS.name, each.plate_read_id)
+        if each.channel:
+            readings = readings[readings["channel"] == each.channel].reset_index(drop=True)
+        plate_map = plate_maps.of(each.map_id, each.map_name)[each.plate_id]
+        yield PlateWork(
+            each.plate_read_id, each.plate_id, each.map_id, each.recipe, readings, plate_map.wells
+        )
+
+
+class _RecipeBook:
+    """Recipes by assay and profile, each made once."""
+
+    def __init__(self, configuration: Configuration) -> None:
+        self.configuration = configuration
+        self._made: dict[tuple[str, str], Recipe] = {}
+
+    def of(self, assay_name: str, profile_name: str) -> Recipe:
+        key = (assay_name, profile_name)
+        if key not in self._made:
+            assay = self.configuration.assays[assay_name]
+            limits = resolve_limits(self.configuration.gates, assay.gates)
+            profile = self.configuration.profiles[profile_name]
+            self._made[key] = Recipe(assay_name, assay, profile_name, profile, limits, code_version())
+        return self._made[key]
+
+
+class _PlateMaps:
+    """Plate maps from the raw archive; those of the last few files are remembered."""
+
+    def __init__(self, site: Site) -> None:
+        self.of = lru_cache(maxsize=8)(lambda map_id, name: self._read(site, map_id, name))
+
+    @staticmethod
+    def _read(site: Site, map_id: str, name: str) -> dict[str, PlateMap]:
+        return {each.plate_id: each for each in read_plate_map(fetch(site, map_id), name)}
+
+
+def _make_ready(row: Any, configuration: Configuration, recipes: _RecipeBook) -> Ready:
+    if row.map_id is None:
+        raise HalfsatError("no plate map for this plate yet", remedy="drop the plate map into the inbox")
+    if row.profile not in configuration.profiles:
+        raise HalfsatError(
+            f"the profile '{row.profile}' that read its export is gone",
+            remedy="put it back in config/profiles",
+        )
+    assay_name = _assay_of(row.plate_id, row.assay, configuration)
+    channel = _channel_of(row.channels.split(","), assay_name, configuration)
+    recipe = recipes.of(assay_name, row.profile)
+    return Ready(row.plate_read_id, row.plate_id, row.map_id, row.map_name, channel, recipe)
+
+
+def _assay_of(plate_id: str, named: str | None, configuration: Configuration) -> str:
+    """Assay that the plate map names, or the one whose plate patterns fit."""
+    if named is not None:
+        if named not in configuration.assays:
+            known = ", ".join(sorted(configuration.assays))
+            raise HalfsatError(
+                f"its plate map names the assay '{named}', which is not configured",
+                remedy=f"assays here are {known}",
+            )
+        return named
+    fitting = [
+        name
+        for name, assay in configuration.assays.items()
+        if any(fnmatchcase(plate_id, pattern) for pattern in assay.plates)
+    ]
+    if len(fitting) != 1:
+        found = f"the assays {', '.join(fitting)} all claim it" if fitting else "no assay claims it"
+        raise HalfsatError(found, remedy="name the assay in the plate map, or mend 'plates' in config/assays")
+    return fitting[0]
+
+
+def _channel_of(channels: list[str], assay_name: str, configuration: Configuration) -> str:
+    """Channel of the export that the assay reads."""
+    wanted = configuration.assays[assay_name].signal.channel
+    if wanted is None:
+        if len(channels) == 1:
+            return channels[0]
+        raise HalfsatError(
+            f"its export has the channels {', '.join(channels)}",
+            remedy=f"say signal.channel in config/assays/{assay_name}.toml",
+        )
+    if wanted not in channels:
+        raise HalfsatError(
+            f"its export has no channel '{wanted}', but {', '.join(channels)}",
+            remedy=f"mend signal.channel in config/assays/{assay_name}.toml or the profile",
+        )
+    return wanted

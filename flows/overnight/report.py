@@ -1,0 +1,64 @@
+"""What one pass did, in a record that a command prints and a scheduler keeps. Holds no results."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from datetime import datetime
+
+
+@dataclass(frozen=True)
+class Waiting:
+    """A plate read that cannot be analysed yet, and what it waits for."""
+
+    plate_id: str
+    reason: str
+
+
+@dataclass(frozen=True)
+class PassReport:
+    """What one pass of the overnight flow did.
+
+    Attributes
+    ----------
+    export_count, map_count
+        Files accepted in this pass.
+    quarantined
+        File name and reason of each file put into quarantine in this pass.
+    waiting
+        Plate reads without plate map or assay, whenever they came in.
+    analysis_ids
+        Plate reads analysed in this pass.
+    held_count
+        Wells and series that this pass left waiting for a person.
+    """
+
+    pass_id: str
+    started_at: datetime
+    finished_at: datetime
+    export_count: int
+    map_count: int
+    quarantined: tuple[tuple[str, str], ...] = ()
+    waiting: tuple[Waiting, ...] = ()
+    analysis_ids: tuple[str, ...] = ()
+    held_count: int = 0
+
+    def counts(self) -> dict[str, int]:
+        """The pass in numbers."""
+        return {
+            "exports": self.export_count,
+            "plate maps": self.map_count,
+            "quarantined": len(self.quarantined),
+            "waiting": len(self.waiting),
+            "plate reads analysed": len(self.analysis_ids),
+            "held": self.held_count,
+        }
+
+    @property
+    def nothing_new(self) -> bool:
+        """Whether the pass found no new file and nothing to analyse."""
+        return not (self.export_count or self.map_count or self.quarantined or self.analysis_ids)
+
+    @property
+    def needs_attention(self) -> bool:
+        """Whether something was held, quarantined or left waiting."""
+        return bool(self.quarantined or self.waiting or self.held_count)
