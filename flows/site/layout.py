@@ -58,9 +58,9 @@ class Site:
         return self.root / "lake"
 
     @property
-    def gate_runs(self) -> Path:
+    def gate_documents(self) -> Path:
         """Suites and results of the gates, as JSON."""
-        return self.lake / "gate_runs"
+        return self.lake / "gate_documents"
 
     @property
     def ledger(self) -> Path:
@@ -111,7 +111,7 @@ def create_site(root: Path, config_source: Path) -> Site:
     SiteError
         If the folder already is a site or holds other things, or the configuration is not there.
     """
-    site = Site(root.expanduser().absolute())
+    site = _site_at(root)
     if not (config_source / "site.toml").is_file():
         raise SiteError("there is no site.toml to start from", where=str(config_source))
     if site.config.exists():
@@ -151,7 +151,7 @@ def open_site(root: Path) -> Site:
     SiteError
         If the folder is missing, is no site, or has lost a part that cannot be made again.
     """
-    site = Site(root.expanduser().absolute())
+    site = _site_at(root)
     if not site.root.is_dir():
         raise SiteError(
             "there is no such folder", where=str(root), remedy=f"type: halfsat site new {_typed(root)}"
@@ -169,6 +169,17 @@ def open_site(root: Path) -> Site:
             )
     if not os.access(site.root, os.R_OK | os.X_OK):
         raise SiteError("the folder may not be read", where=str(root), remedy="ask for read permission on it")
+    return site
+
+
+def _site_at(root: Path) -> Site:
+    site = Site(root.expanduser().absolute())
+    # DuckDB takes these for patterns, wherever they stand in a path.
+    unusable = sorted(set(str(site.root)) & set("*?["))
+    if unusable:
+        raise SiteError(
+            f"a site's path may not hold '{unusable[0]}'", where=str(root), remedy="choose another folder"
+        )
     return site
 
 

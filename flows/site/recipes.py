@@ -7,10 +7,11 @@ from __future__ import annotations
 
 import importlib.metadata
 import json
-from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import cache, cached_property
 from pathlib import Path
+
+from pydantic import ValidationError
 
 import checks
 import models
@@ -19,7 +20,7 @@ from flows.site.layout import Site
 from models.errors import SiteError
 from models.identity import Json, canonical_json, content_id
 from models.records.assay import Assay
-from models.records.record import Record
+from models.records.export_profile import ExportProfile
 
 DIGEST_LENGTH = 12
 
@@ -45,7 +46,7 @@ class Recipe:
     assay_name: str
     assay: Assay
     profile_name: str
-    profile: Record
+    profile: ExportProfile
     limits: Limits
     code_version: str
 
@@ -97,13 +98,13 @@ def keep_recipe(site: Site, recipe: Recipe) -> bool:
     return True
 
 
-def read_recipe_document(site: Site, recipe_id: str) -> Mapping[str, Json]:
-    """Return a kept recipe as the JSON it was kept as, after checking its hash.
+def read_recipe(site: Site, recipe_id: str) -> Recipe:
+    """Return a kept recipe after checking its hash.
 
     Raises
     ------
     SiteError
-        If it is missing or has changed.
+        If it is missing, has changed, or was kept by a version of halfsat whose records this one cannot read.
     """
     path = recipe_path(site, recipe_id)
     try:
@@ -120,8 +121,22 @@ def read_recipe_document(site: Site, recipe_id: str) -> Mapping[str, Json]:
             where=str(path),
             remedy="bring it back from a backup of the site",
         )
-    document: Mapping[str, Json] = json.loads(content)
-    return document
+    document = json.loads(content)
+    try:
+        return Recipe(
+            document["assay_name"],
+            Assay.model_validate_json(canonical_json(document["assay"])),
+            document["profile_name"],
+            ExportProfile.model_validate_json(canonical_json(document["profile"])),
+            document["limits"],
+            document["code_version"],
+        )
+    except (KeyError, ValidationError) as error:
+        raise SiteError(
+            f"the recipe {recipe_id[:12]} cannot be used by this version of halfsat",
+            where=str(path),
+            remedy="use the version that is named in it",
+        ) from error
 
 
 @cache

@@ -1,0 +1,1 @@
+"""The room of the analyst and the auditor: how answers are written out, and where a number came from."""

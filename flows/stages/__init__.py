@@ -1,0 +1,1 @@
+"""The steps of the line, as plain functions: pull, read, gate, fit, load, publish."""

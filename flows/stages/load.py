@@ -1,0 +1,159 @@
+"""Store what a pass has made: lake, then ledger, then warehouse.
+
+The order is what makes a kill harmless. Lake files that no ledger entry names are only spare: the next pass
+makes them again or passes them by. The ledger's line is the moment from which the results exist: it names
+every lake file with its hash. A warehouse that has not followed is brought up from those by `repair`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from datetime import UTC, datetime
+from pathlib import Path
+
+import pandas as pd
+import pyarrow as pa
+
+from flows import lake, ledger
+from flows.lake import LakeFile
+from flows.ledger import Entry
+from flows.site.durable import sweep_parts
+from flows.site.layout import Site
+from flows.warehouse import writer
+from flows.warehouse.writer import Batch, DamagedWarehouse
+from models.errors import LedgerError
+from models.identity import Json, content_id, result_id
+from models.tables import ANALYSES, FILES, PLATE_READS, READINGS
+
+LOADING_KINDS = ("analysis_loaded", "tables_loaded")
+
+
+def load_results(
+    site: Site, pass_id: str, tables: Mapping[str, pd.DataFrame], now: datetime
+) -> ledger.Entry | None:
+    """Store rows of any tables as one batch. The caller holds the pass lock.
+
+    Parameters
+    ----------
+    pass_id
+        The pass that made them.
+    tables
+        Rows by table name, with the tables' columns. `readings` must be in the lake already (one file a
+        plate read); those of every row in `plate_reads` are recorded with the batch.
+    now
+        When, UTC.
+
+    Returns
+    -------
+    Entry or None
+        The ledger's entry, None where there was not one row.
+
+    Raises
+    ------
+    SiteError
+        If readings of a plate read are not in the lake, or the warehouse cannot be opened.
+    KeyError, ValueError, pyarrow.ArrowInvalid
+        If rows do not fit their table.
+    """
+    given = {name: frame for name, frame in sorted(tables.items()) if len(frame) and name != READINGS.name}
+    if not given:
+        return None
+    encoded = {name: lake.encode_rows(name, frame) for name, frame in given.items()}
+    digests: dict[str, Json] = {name: content_id(content) for name, content in encoded.items()}
+    batch_id = result_id("batch", pass_id, digests)
+    files = [
+        lake.write_encoded(site, name, batch_id, content, len(given[name]))
+        for name, content in encoded.items()
+    ]
+    if PLATE_READS.name in given:
+        files += [
+            lake.describe(site, READINGS.name, each) for each in given[PLATE_READS.name]["plate_read_id"]
+        ]
+    kind: ledger.Kind = "analysis_loaded" if ANALYSES.name in given else "tables_loaded"
+    entry = ledger.append(site, kind, _body(pass_id, batch_id, given, files), at=now)
+    writer.load(site, given, Batch(batch_id, entry.seq, entry.time, files))
+    return entry
+
+
+def repair(site: Site) -> int:
+    """Bring the warehouse up to the ledger: load every recorded batch that it lacks, from the lake.
+
+    A damaged or missing warehouse is made anew this way; a damaged one is put aside under another name. What
+    killed writes left behind is cleared away. The caller holds the pass lock.
+
+    Returns
+    -------
+    int
+        Batches that were loaded.
+
+    Raises
+    ------
+    SiteError
+        If a lake file that a batch rests on is missing or has changed.
+    """
+    for folder in (site.lake, site.warehouse, site.raw, site.quarantine):
+        sweep_parts(folder)
+    try:
+        with writer.loader(site) as connection:
+            present = writer.loaded_batches(connection)
+    except DamagedWarehouse:
+        site.loader_file.rename(_aside(site.loader_file))
+        site.loader_file.with_name(site.loader_file.name + ".wal").unlink(missing_ok=True)
+        present = set()
+    loaded = 0
+    for entry in ledger.entries(site):
+        if entry.kind in LOADING_KINDS and entry.body.get("batch_id") not in present:
+            batch, rows = _recorded(site, entry)
+            loaded += writer.load(site, rows, batch)
+    return loaded
+
+
+def _body(
+    pass_id: str, batch_id: str, given: Mapping[str, pd.DataFrame], files: list[LakeFile]
+) -> dict[str, Json]:
+    body: dict[str, Json] = {
+        "pass_id": pass_id,
+        "batch_id": batch_id,
+        "lake_files": [
+            {
+                "path": each.path,
+                "sha256": each.sha256,
+                "table_name": each.table_name,
+                "row_count": each.row_count,
+                "byte_count": each.byte_count,
+            }
+            for each in files
+        ],
+    }
+    for name, columns in (
+        (ANALYSES.name, ("analysis_id", "plate_read_id", "map_id", "recipe_id")),
+        (PLATE_READS.name, ("plate_read_id", "export_id", "place_in_export")),
+        (FILES.name, ("file_id", "kind")),
+    ):
+        if name in given:
+            records = given[name][list(columns)].to_dict(orient="records")
+            body[name] = [{str(key): value for key, value in row.items()} for row in records]
+    return body
+
+
+def _recorded(site: Site, entry: Entry) -> tuple[Batch, dict[str, pa.Table]]:
+    try:
+        files = [LakeFile(**each) for each in entry.body["lake_files"]]  # type: ignore[union-attr, arg-type]
+        batch = Batch(str(entry.body["batch_id"]), entry.seq, entry.time, files)
+    except (KeyError, TypeError) as error:
+        raise LedgerError(
+            "the entry does not say which lake files were loaded",
+            where=f"{site.ledger_file}, line {entry.seq}",
+            remedy="bring ledger/ back from a backup of the site",
+        ) from error
+    rows = {
+        each.table_name: lake.read_arrow(site, each.path, each.sha256)
+        for each in files
+        if each.table_name != READINGS.name
+    }
+    return batch, rows
+
+
+def _aside(path: Path) -> Path:
+    stamp = datetime.fromtimestamp(path.stat().st_mtime, UTC).strftime("%Y%m%dT%H%M%S%f")
+    return path.with_name(f"{path.stem}.damaged-{stamp}.duckdb")

@@ -1,0 +1,1 @@
+"""The warehouse: tables and views in DuckDB, one writer, and the published copy that everyone else reads."""
