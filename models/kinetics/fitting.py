@@ -1,0 +1,270 @@
+"""From rates to constants: every series of a batch fitted with its candidate laws, weighted, judged and
+chosen.
+
+Laws are fitted in batches, weights pooled plate by plate; what cannot be fitted becomes a refusal. This
+module knows neither gates nor lots.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+
+from models.kinetics.intervals import profile_intervals
+from models.kinetics.law_fits import LawFit
+from models.kinetics.laws import RateLaw, law
+from models.kinetics.laws.law import Floats
+from models.kinetics.packing import Packed
+from models.kinetics.rate_rows import RateRows
+from models.kinetics.refusals import Refusal, refuse_fit, refuse_law
+from models.kinetics.replicate_weights import WeightedFit, fit_with_weights, plate_cv
+from models.kinetics.selection import aicc, choose_law, evidence_weights
+from models.statistics.sums import sum_rows
+
+Integers = NDArray[np.int_]
+Flags = NDArray[np.bool_]
+
+FIT_COLUMNS = (
+    "series",
+    "law",
+    "chosen",
+    "converged",
+    "trusted",
+    "distrust",
+    "point_count",
+    "degrees_of_freedom",
+    "weighted_residual_sum",
+    "aicc",
+    "evidence_weight",
+)
+CONSTANT_COLUMNS = (
+    "series",
+    "law",
+    "chosen",
+    "constant",
+    "value",
+    "standard_error",
+    "low",
+    "high",
+    "unit",
+)
+REFUSAL_COLUMNS = ("series", "kind", "reason")
+
+CV_LAW = "michaelis_menten"
+"""Replicates are compared about this law: any smooth law does, since only differences within a level
+count."""
+
+
+@dataclass(frozen=True)
+class FitResult:
+    """Fits of a batch of series.
+
+    Attributes
+    ----------
+    fits
+        A row a series and law that could be fitted: series, law, chosen, converged, trusted, distrust,
+        point_count, degrees_of_freedom, weighted_residual_sum, aicc, evidence_weight.
+    constants
+        A row a constant: series, law, chosen, constant, value, standard_error, low, high, unit. low and high
+        are NaN where the 95 % interval is open.
+    refusals
+        A row a series that no law could be fitted to: series, kind, reason.
+    covariance
+        Covariance of the constants, in the law's order, by series and law; NaN where it is not known.
+    plate_cv
+        Replicate coefficient of variation that the weights used, by plate.
+    """
+
+    fits: pd.DataFrame
+    constants: pd.DataFrame
+    refusals: pd.DataFrame
+    covariance: Mapping[tuple[int, str], Floats] = field(repr=False)
+    plate_cv: Mapping[int, float]
+
+
+@dataclass(frozen=True)
+class _Candidate:
+    """One law on one series, fitted."""
+
+    fit: dict[str, object]
+    constants: list[dict[str, object]]
+    covariance: Floats
+
+
+def fit_rates(rates: pd.DataFrame, series_laws: Sequence[tuple[str, ...]]) -> FitResult:
+    """Fit every series with each of its candidate laws.
+
+    Parameters
+    ----------
+    rates
+        Columns series, plate (integers), substrate_um (the mean over the window), nominal_substrate_um,
+        v_um_per_s, v_se_um_per_s. Rates that are not known (NaN) and wells without substrate are left out.
+    series_laws
+        Names of the candidate laws of each series, by series number; a series without a row is refused.
+
+    Returns
+    -------
+    FitResult
+
+    Raises
+    ------
+    UnknownName
+        If a series names a law that is not in the registry.
+    """
+    names = sorted({name for laws in series_laws for name in laws}, key=lambda name: law(name).rank)
+    rows = RateRows.of(rates)
+    refused = {
+        number: refusal for number in range(len(series_laws)) if (refusal := rows.refusal(number)) is not None
+    }
+    cv = _cv_by_plate(rows, refused)
+    candidates: dict[int, dict[str, _Candidate]] = {}
+    reasons: dict[int, dict[str, Refusal]] = {}
+    for name in names:
+        each = law(name)
+        eligible = []
+        for number, laws in enumerate(series_laws):
+            if name not in laws or number in refused:
+                continue
+            refusal = refuse_law(each, *rows.counts(number))
+            if refusal is None:
+                eligible.append(number)
+            else:
+                reasons.setdefault(number, {})[name] = refusal
+        fitted, failed = _fit_candidates(each, rows, np.array(eligible, dtype=np.intp), cv)
+        for number, candidate in fitted.items():
+            candidates.setdefault(number, {})[name] = candidate
+        for number, refusal in failed.items():
+            reasons.setdefault(number, {})[name] = refusal
+    for number in range(len(series_laws)):
+        if number not in candidates and number not in refused:
+            refused[number] = _first_reason(series_laws[number], reasons.get(number, {}))
+    return _result(candidates, refused, {int(p): float(c) for p, c in zip(rows.plates, cv, strict=True)})
+
+
+def _first_reason(laws: tuple[str, ...], reasons: Mapping[str, Refusal]) -> Refusal:
+    return next(reasons[name] for name in sorted(laws, key=lambda name: law(name).rank) if name in reasons)
+
+
+def _cv_by_plate(rows: RateRows, refused: Mapping[int, Refusal]) -> Floats:
+    """Replicate CV of each plate, about Michaelis-Menten or, with too few levels for that, about each level's
+    mean."""
+    packed = rows.packed(np.array([n for n in np.unique(rows.series) if n not in refused], dtype=np.intp))
+    if packed.series.size == 0:
+        return np.zeros(rows.plates.size)
+    plate = rows.plate_of(packed.series)
+    usable = np.ones(packed.series.size, dtype=bool)
+    return plate_cv(law(CV_LAW), packed, plate, packed.spread(rows.level_um), usable, rows.plates.size)
+
+
+def _fit_candidates(
+    each: RateLaw, rows: RateRows, eligible: Integers, cv: Floats
+) -> tuple[dict[int, _Candidate], dict[int, Refusal]]:
+    if eligible.size == 0:
+        return {}, {}
+    packed = rows.packed(eligible)
+    weighted = fit_with_weights(each, packed, cv[rows.plate_of(packed.series)])
+    fit = weighted.fit
+    low, high = profile_intervals(fit, packed.conditions, packed.rate, weighted.weights)
+    criterion = _aicc(packed, weighted)
+    half = np.log(fit.constants[1])
+    limits = each.log_limits(packed.conditions, weighted.weights)
+    fitted, failed = {}, {}
+    for column, number in enumerate(packed.series):
+        refusal = refuse_fit(
+            each,
+            float(fit.constants[0, column]),
+            float(half[column]),
+            float(limits[0][0, column]),
+            float(limits[1][0, column]),
+            bool(fit.converged[column]),
+        )
+        if refusal is not None:
+            failed[int(number)] = refusal
+            continue
+        fitted[int(number)] = _candidate(int(number), fit, column, low, high, float(criterion[column]))
+    return fitted, failed
+
+
+def _aicc(packed: Packed, weighted: WeightedFit) -> Floats:
+    log_variance = -np.log(np.where(packed.present, weighted.weights, 1.0))
+    fit = weighted.fit
+    return aicc(fit.residual_sum, sum_rows(log_variance), fit.point_count, fit.law.constant_count)
+
+
+def _candidate(
+    number: int, fit: LawFit, column: int, low: Floats, high: Floats, criterion: float
+) -> _Candidate:
+    distrust = _distrust(fit, column, low, high)
+    errors = fit.standard_error[:, column]
+    row = {
+        "series": number,
+        "law": fit.law.name,
+        "converged": bool(fit.converged[column]),
+        "trusted": distrust is None,
+        "distrust": distrust,
+        "point_count": int(fit.point_count[column]),
+        "degrees_of_freedom": int(fit.degrees_of_freedom[column]),
+        "weighted_residual_sum": float(fit.residual_sum[column]),
+        "aicc": criterion,
+    }
+    constants = [
+        {
+            "series": number,
+            "law": fit.law.name,
+            "constant": constant.name,
+            "value": float(fit.constants[k, column]),
+            "standard_error": float(errors[k]),
+            "low": float(low[k, column]),
+            "high": float(high[k, column]),
+            "unit": constant.unit,
+        }
+        for k, constant in enumerate(fit.law.constants)
+    ]
+    return _Candidate(row, constants, fit.covariance[column])
+
+
+def _distrust(fit: LawFit, column: int, low: Floats, high: Floats) -> str | None:
+    """Why the uncertainty of a fit that converged cannot be trusted, or None."""
+    if not fit.full_rank[column]:
+        return "the data do not tell the constants apart"
+    if fit.at_limit[column]:
+        return "a constant lies at its limit"
+    ends = ((low, "below"), (high, "above"))
+    is_open = [
+        f"{constant.name} is open {side}"
+        for k, constant in enumerate(fit.law.constants)
+        for values, side in ends
+        if not np.isfinite(values[k, column])
+    ]
+    return ", ".join(is_open) if is_open else None
+
+
+def _result(
+    candidates: Mapping[int, dict[str, _Candidate]], refused: Mapping[int, Refusal], cv: dict[int, float]
+) -> FitResult:
+    fits: list[dict[str, object]] = []
+    constants: list[dict[str, object]] = []
+    covariance: dict[tuple[int, str], Floats] = {}
+    for number in sorted(candidates):
+        of_series = candidates[number]
+        criteria = {name: float(str(each.fit["aicc"])) for name, each in of_series.items()}
+        chosen, evidence = choose_law(criteria), evidence_weights(criteria)
+        for name, each in of_series.items():
+            fits.append({**each.fit, "chosen": name == chosen, "evidence_weight": evidence[name]})
+            constants.extend({**row, "chosen": name == chosen} for row in each.constants)
+            covariance[number, name] = each.covariance
+    refusals = [
+        {"series": number, "kind": str(refusal.kind), "reason": refusal.reason}
+        for number, refusal in sorted(refused.items())
+    ]
+    return FitResult(
+        pd.DataFrame(fits, columns=list(FIT_COLUMNS)),
+        pd.DataFrame(constants, columns=list(CONSTANT_COLUMNS)),
+        pd.DataFrame(refusals, columns=list(REFUSAL_COLUMNS)),
+        covariance,
+        cv,
+    )

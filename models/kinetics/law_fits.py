@@ -1,0 +1,204 @@
+"""One rate law fitted to a batch of series with given weights: constants, covariance, rank, limits.
+
+This is the array interface beneath `models.kinetics.fitting`: no weights are made and nothing is chosen here.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from models.kinetics.laws.law import Conditions, Floats, RateLaw
+from models.kinetics.least_squares import CHUNK, Minimum, best_start, minimise
+from models.kinetics.stragglers import settle
+from models.statistics.sums import sum_rows
+
+Flags = NDArray[np.bool_]
+
+_SMALLEST_PIVOT = 1e-10
+"""Share of a constant's information that must be its own: below it, the Jacobian's rank is in doubt."""
+
+
+@dataclass(frozen=True)
+class LawFit:
+    """Fits of one law.
+
+    Attributes
+    ----------
+    law
+        The law.
+    constants
+        Amplitude and shape constants, in the law's order and units, shape (constants, series).
+    residual_sum
+        Weighted sum of squared residuals, shape (series,).
+    point_count
+        Rates with a weight, shape (series,).
+    covariance
+        Of the constants, scaled by the residual variance, shape (series, constants, constants); NaN where the
+        Jacobian has not full rank.
+    converged
+        Whether the search came to rest.
+    at_limit
+        Whether a shape constant lies at its limit.
+    full_rank
+        Whether the Jacobian has full rank.
+    """
+
+    law: RateLaw
+    constants: Floats
+    residual_sum: Floats
+    point_count: Floats
+    covariance: Floats
+    converged: Flags
+    at_limit: Flags
+    full_rank: Flags
+
+    @property
+    def degrees_of_freedom(self) -> Floats:
+        """Rates less constants, shape (series,)."""
+        return self.point_count - self.law.constant_count
+
+    @property
+    def standard_error(self) -> Floats:
+        """Standard errors, shape (constants, series)."""
+        with np.errstate(invalid="ignore"):
+            errors: Floats = np.sqrt(np.diagonal(self.covariance, axis1=1, axis2=2).T)
+        return errors
+
+
+def fit_law(
+    law: RateLaw,
+    conditions: Conditions,
+    rates: Floats,
+    weights: Floats | None = None,
+    start: Floats | None = None,
+) -> LawFit:
+    """Fit one law to every series of a batch by weighted least squares.
+
+    Parameters
+    ----------
+    law
+        The rate law.
+    conditions
+        Substrate and modulator, shape (levels, series).
+    rates
+        Rates, shape (levels, series); any finite value where the weight is 0.
+    weights
+        One over the variance up to a factor, shape (levels, series); None for equal weights.
+    start
+        Start values of the constants, shape (constants, series), the amplitude first (it is eliminated and
+        its start not used). None takes the law's own.
+
+    Returns
+    -------
+    LawFit
+    """
+    weights = np.ones_like(rates) if weights is None else weights
+    series_count = rates.shape[1]
+    parts = []
+    for first in range(0, series_count, CHUNK):
+        cut = slice(first, first + CHUNK)
+        columns = np.arange(series_count)[cut]
+        parts.append(
+            _fit_chunk(
+                law,
+                conditions.select(columns),
+                rates[:, columns],
+                weights[:, columns],
+                None if start is None else np.log(start[1:, columns]),
+            )
+        )
+    return _joined(law, parts, series_count)
+
+
+def _fit_chunk(
+    law: RateLaw, conditions: Conditions, rates: Floats, weights: Floats, log_start: Floats | None
+) -> LawFit:
+    lower, upper = law.log_limits(conditions, weights)
+    if log_start is None:
+        log_start = best_start(law, conditions, rates, weights)
+    log_start = np.clip(log_start, lower, upper)
+    minimum = minimise(law, conditions, rates, weights, log_start, lower, upper)
+    minimum = settle(law, conditions, rates, weights, minimum, lower, upper)
+    return _described(law, conditions, weights, minimum, lower, upper)
+
+
+def _described(
+    law: RateLaw, conditions: Conditions, weights: Floats, minimum: Minimum, lower: Floats, upper: Floats
+) -> LawFit:
+    point_count = np.count_nonzero(weights > 0, axis=0).astype(np.float64)
+    shape_constants = np.exp(minimum.log_constants)
+    shape, slopes = law.evaluate(conditions, tuple(shape_constants))
+    # Derivatives by the logarithm of every constant: the information is then free of units.
+    columns = [minimum.amplitude * shape, *(minimum.amplitude * slope for slope in slopes)]
+    information = [[sum_rows(weights * a * b) for b in columns] for a in columns]
+    inverse, full_rank = _inverted(information)
+    constants = np.vstack([minimum.amplitude, shape_constants])
+    with np.errstate(all="ignore"):
+        scale = minimum.residual_sum / (point_count - law.constant_count)
+    scale = np.where(point_count > law.constant_count, scale, np.nan)
+    covariance = inverse * (constants.T[:, :, None] * constants.T[:, None, :]) * scale[:, None, None]
+    margin = 1e-9
+    at_limit = np.any(
+        (minimum.log_constants <= lower + margin) | (minimum.log_constants >= upper - margin), axis=0
+    )
+    return LawFit(
+        law=law,
+        constants=constants,
+        residual_sum=minimum.residual_sum,
+        point_count=point_count,
+        covariance=np.where(full_rank[:, None, None], covariance, np.nan),
+        converged=minimum.converged,
+        at_limit=at_limit,
+        full_rank=full_rank,
+    )
+
+
+def _inverted(matrix: list[list[Floats]]) -> tuple[Floats, Flags]:
+    """Inverse of a symmetric matrix a series, shape (series, n, n), by Gauss-Jordan on the correlation form.
+
+    Written out elementwise so that a series gives the same bits in every batch; the smallest pivot tells the
+    rank.
+    """
+    count = len(matrix)
+    with np.errstate(all="ignore"):
+        scale = [np.sqrt(matrix[k][k]) for k in range(count)]
+        work = [[matrix[k][m] / (scale[k] * scale[m]) for m in range(count)] for k in range(count)]
+        identity = [[np.full_like(scale[0], float(k == m)) for m in range(count)] for k in range(count)]
+        smallest = np.full_like(scale[0], np.inf)
+        for k in range(count):
+            pivot = work[k][k]
+            smallest = np.minimum(smallest, np.where(np.isfinite(pivot), pivot, 0.0))
+            work[k] = [entry / pivot for entry in work[k]]
+            identity[k] = [entry / pivot for entry in identity[k]]
+            for m in range(count):
+                if m != k:
+                    factor = work[m][k]
+                    work[m] = [a - factor * b for a, b in zip(work[m], work[k], strict=True)]
+                    identity[m] = [a - factor * b for a, b in zip(identity[m], identity[k], strict=True)]
+        inverse = np.array(
+            [[identity[k][m] / (scale[k] * scale[m]) for m in range(count)] for k in range(count)]
+        )
+    return np.moveaxis(inverse, 2, 0), smallest > _SMALLEST_PIVOT
+
+
+def _joined(law: RateLaw, parts: list[LawFit], series_count: int) -> LawFit:
+    if len(parts) == 1:
+        return parts[0]
+    count = law.constant_count
+    if not parts:
+        none, flags = np.empty(0), np.empty(0, dtype=bool)
+        shape = (series_count, count, count)
+        return LawFit(law, np.empty((count, 0)), none, none, np.empty(shape), flags, flags, flags)
+    return LawFit(
+        law=law,
+        constants=np.concatenate([part.constants for part in parts], axis=1),
+        residual_sum=np.concatenate([part.residual_sum for part in parts]),
+        point_count=np.concatenate([part.point_count for part in parts]),
+        covariance=np.concatenate([part.covariance for part in parts]),
+        converged=np.concatenate([part.converged for part in parts]),
+        at_limit=np.concatenate([part.at_limit for part in parts]),
+        full_rank=np.concatenate([part.full_rank for part in parts]),
+    )

@@ -1,0 +1,357 @@
+"""Which reads of a progress curve make its initial rate: end of the lag, conversion limit, straightness.
+
+Curvature is judged beyond what depletion explains: beyond the course that the series' fit predicts, or, where
+there is none, beyond the band between a straight line and first-order decay.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from models.kinetics.prediction import SeriesCourse
+from models.kinetics.transients import fit_transient
+from models.kinetics.windows import WindowFits, all_windows, windows_from
+from models.statistics.moderation import moderate_variances
+
+Floats = NDArray[np.float64]
+Integers = NDArray[np.int_]
+Flags = NDArray[np.bool_]
+
+_LAG_TIME_CONSTANTS = 3.0
+"""A window starts when exp(-3) = 5 % of the lag is left at its first read, far less on average over it."""
+_STRETCHES = (1.0, 0.5, 0.25)
+"""Shares of the reads before the conversion limit on which curvature is looked for: a short lag is lost in a
+long one."""
+_FEWEST_FOR_CURVATURE = 6
+_STEADY_SHARE = 0.15
+"""A burst goes on at more than this share of its first rate; what falls further is falling."""
+
+
+@dataclass(frozen=True)
+class Curves:
+    """Curves of one plate read with the rules for their windows; arrays (reads, wells) and (wells,).
+
+    `net_um` is product less the matching blank; `plain` marks wells whose whole course is one window
+    (blanks).
+    """
+
+    time_s: Floats
+    net_um: Floats
+    substrate_um: Floats
+    consumable_um: Floats
+    zero_is_blank: Flags
+    plain: Flags
+    depletion_limit: Floats
+    slope_change_limit: Floats
+    slope_change_t_limit: Floats
+    shortest_points: Integers
+
+
+@dataclass(frozen=True)
+class Choice:
+    """The window of each well and what was seen of its curvature, shape (wells,) each."""
+
+    start: Integers
+    end: Integers
+    shortest_end: Integers
+    readable: Flags
+    usable_count: Floats
+    first_s: Floats
+    early_um: Floats
+    lagging: Flags
+    lag_s: Floats
+    slope_change: Floats
+    slope_change_t: Floats
+    depletion_slope_change: Floats
+    early_slope_change: Floats
+    early_slope_change_t: Floats
+    falls_early: Flags
+    bursts: Flags
+    bends: Flags
+    plain: Flags
+    depletion_limit: Floats
+
+    def shape(self, shortest_conversion: Floats) -> NDArray[np.object_]:
+        """straight, falling, lag, burst or unread, shape (wells,)."""
+        shape = np.full(self.start.size, "straight", dtype=object)
+        with np.errstate(invalid="ignore"):
+            shape[self.bends & (self.plain | (shortest_conversion > self.depletion_limit))] = "falling"
+        shape[self.falls_early] = "falling"
+        shape[self.bursts] = "burst"
+        shape[self.lagging] = "lag"
+        shape[~self.readable] = "unread"
+        return shape
+
+
+@dataclass(frozen=True)
+class _Bend:
+    """Curvature beyond depletion of one window a well: change of slope over the slope, its t, and the raw
+    ones."""
+
+    change: Floats
+    t: Floats
+    raw_change: Floats
+    raw_t: Floats
+
+
+def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
+    """Choose the window of every well.
+
+    Parameters
+    ----------
+    curves
+        Curves of one plate read and the rules.
+    course
+        What the series' fits predict; wells it does not know are judged by their own reads.
+
+    Returns
+    -------
+    Choice
+    """
+    wells = np.arange(curves.net_um.shape[1])
+    usable = np.isfinite(curves.net_um) & np.isfinite(curves.time_s)
+    running = np.cumsum(usable, axis=0, dtype=np.intp)
+    usable_count = running[-1] if running.size else np.zeros(wells.size)
+    readable = usable_count >= curves.shortest_points
+    first = np.argmax(usable, axis=0)
+    last = usable.shape[0] - 1 - np.argmax(usable[::-1], axis=0)
+    first_s = curves.time_s[first, wells]
+    early_um = _early_mean(curves.net_um, running, usable)
+
+    fits = windows_from(curves.time_s, curves.net_um, first)
+    shortest_end = _read_with_count(running, curves.shortest_points)
+    before = np.where(curves.zero_is_blank, _own_before(fits, shortest_end, first_s), 0.0)
+    end = _conversion_end(curves, course, fits, first_s, before, last)
+    end = np.where(curves.plain, last, np.maximum(end, shortest_end))
+
+    predicted = _depletion(curves, course, fits.pick(end), first_s, before)
+    excess = windows_from(curves.time_s, curves.net_um - predicted, first)
+    noise = _read_variance(fits.pick(end), readable)
+    early = _bend(fits.pick(end), excess.pick(end), noise, course.known)
+    enough = running[end, wells] >= np.maximum(curves.shortest_points, _FEWEST_FOR_CURVATURE)
+    lagging, falls = _curved_early(curves, fits, excess, noise, course.known, running, end)
+    lagging &= readable & ~curves.plain & enough
+    falls &= readable & ~curves.plain & enough & ~lagging
+
+    start, lag_shortest = _after_lag(curves, lagging, first, shortest_end, early_um)
+    late_fits, late_excess = fits, excess
+    if lagging.any():
+        start_s = curves.time_s[start, wells]
+        late_fits = windows_from(curves.time_s, curves.net_um, start)
+        done = late_fits.pick(lag_shortest).at(start_s) - np.where(curves.zero_is_blank, 0.0, early_um)
+        late_end = _conversion_end(curves, course, late_fits, start_s, np.where(lagging, done, before), last)
+        end = np.where(lagging, np.maximum(late_end, lag_shortest), end)
+        late_predicted = _depletion(
+            curves, course, late_fits.pick(end), start_s, np.where(lagging, done, before)
+        )
+        late_excess = windows_from(curves.time_s, curves.net_um - late_predicted, start)
+        shortest_end = np.where(lagging, lag_shortest, shortest_end)
+
+    end = _straight_end(curves, late_fits, late_excess, noise, course.known, shortest_end, end)
+    bend = _bend(late_fits.pick(end), late_excess.pick(end), noise, course.known)
+    bursts = np.zeros(wells.size, dtype=bool)
+    for well in np.flatnonzero(falls):
+        bursts[well] = _is_burst(curves.time_s[:, well], curves.net_um[:, well], usable[:, well], last[well])
+    with np.errstate(invalid="ignore"):
+        bends = (bend.raw_change < -curves.slope_change_limit) & (-bend.raw_t > curves.slope_change_t_limit)
+    return Choice(
+        start=start,
+        end=end,
+        shortest_end=shortest_end,
+        readable=readable,
+        usable_count=usable_count.astype(np.float64),
+        first_s=first_s,
+        early_um=early_um,
+        lagging=lagging,
+        lag_s=np.where(lagging, curves.time_s[start, wells] - first_s, 0.0),
+        slope_change=bend.change,
+        slope_change_t=bend.t,
+        depletion_slope_change=bend.raw_change - bend.change,
+        early_slope_change=early.change,
+        early_slope_change_t=early.t,
+        falls_early=falls,
+        bursts=bursts,
+        bends=bends,
+        plain=curves.plain,
+        depletion_limit=curves.depletion_limit,
+    )
+
+
+def _read_with_count(running: Integers, count: Integers) -> Integers:
+    """First read at which so many reads are usable, or the last read."""
+    reached = running >= count
+    read: Integers = np.where(reached.any(axis=0), np.argmax(reached, axis=0), running.shape[0] - 1)
+    return read
+
+
+def _early_mean(net_um: Floats, running: Integers, usable: Flags) -> Floats:
+    """Mean of the first three usable reads: where the curve stands before a lag ends."""
+    early = usable & (running <= 3)
+    with np.errstate(all="ignore"):
+        mean: Floats = np.sum(np.where(early, net_um, 0.0), axis=0) / np.sum(early, axis=0)
+    return mean
+
+
+def _own_before(fits: WindowFits, shortest_end: Integers, first_s: Floats) -> Floats:
+    """What was consumed before the first read, counted from the blank [umol/L]."""
+    return fits.pick(shortest_end).at(first_s)
+
+
+def _conversion_end(
+    curves: Curves, course: SeriesCourse, fits: WindowFits, start_s: Floats, before: Floats, last: Integers
+) -> Integers:
+    """Last read at which conversion stays within the limit: predicted, or by the line of the well itself."""
+    consumed = before + course.consumed(curves.time_s, start_s, curves.substrate_um - before)
+    with np.errstate(invalid="ignore"):
+        own = np.where(
+            curves.zero_is_blank, fits.at(fits.end_s), before + fits.slope * (fits.end_s - start_s)
+        )
+        consumed = np.where(course.known, consumed, own)
+        beyond = consumed > curves.depletion_limit * curves.consumable_um
+    reads = np.arange(consumed.shape[0])[:, None]
+    within = ~beyond & (reads <= last) & np.isfinite(curves.net_um)
+    final = within.shape[0] - 1 - np.argmax(within[::-1], axis=0)
+    return np.where(within.any(axis=0), final, 0)
+
+
+def _depletion(
+    curves: Curves, course: SeriesCourse, line: WindowFits, start_s: Floats, before: Floats
+) -> Floats:
+    """Product course [umol/L] that depletion alone gives: predicted, or first-order decay at the well's own
+    rate."""
+    left = curves.substrate_um - before
+    predicted = course.consumed(curves.time_s, start_s, left)
+    with np.errstate(all="ignore"):
+        turnover = np.maximum(line.slope, 0.0) / np.maximum(left - (line.mean - line.at(start_s)), 0.1 * left)
+        since = np.maximum(curves.time_s - start_s, 0.0)
+        first_order = left * -np.expm1(-turnover * since)
+    usable = np.isfinite(first_order) & np.isfinite(curves.consumable_um)
+    return np.where(course.known, predicted, np.where(usable, first_order, 0.0))
+
+
+def _read_variance(line: WindowFits, readable: Flags) -> Floats:
+    steadied = moderate_variances(
+        np.where(readable, line.parabola_variance, np.nan), np.maximum(line.count - 3.0, 0.0)
+    )
+    return steadied.variance
+
+
+def _bend(line: WindowFits, excess: WindowFits, noise: Floats, known: Flags) -> _Bend:
+    """Curvature beyond depletion. Without a prediction, nothing within the band to first-order decay
+    counts."""
+    with np.errstate(all="ignore"):
+        beyond = np.where(
+            known,
+            excess.curvature,
+            np.where(line.curvature > 0, line.curvature, np.minimum(excess.curvature, 0.0)),
+        )
+        # Relative to the slope's size, so that a falling signal's sign does not turn the meaning round.
+        over_slope = 2.0 * (line.end_s - line.start_s) / line.slope
+        sign = np.sign(line.slope)
+        error = np.sqrt(noise * line.curvature_factor)
+        return _Bend(
+            beyond * over_slope,
+            sign * beyond / error,
+            line.curvature * over_slope,
+            sign * line.curvature / error,
+        )
+
+
+def _curved_early(
+    curves: Curves,
+    fits: WindowFits,
+    excess: WindowFits,
+    noise: Floats,
+    known: Flags,
+    running: Integers,
+    end: Integers,
+) -> tuple[Flags, Flags]:
+    """Wells that speed up, and wells that slow down more than depletion explains, before the conversion
+    limit."""
+    wells = np.arange(end.size)
+    lagging, falls = np.zeros(end.size, dtype=bool), np.zeros(end.size, dtype=bool)
+    total = running[end, wells]
+    for share in _STRETCHES:
+        count = np.ceil(share * total).astype(np.intp)
+        enough = count >= np.maximum(curves.shortest_points, _FEWEST_FOR_CURVATURE)
+        stop = np.minimum(_read_with_count(running, count), end)
+        bend = _bend(fits.pick(stop), excess.pick(stop), noise, known)
+        with np.errstate(invalid="ignore"):
+            limit, t_limit = curves.slope_change_limit, curves.slope_change_t_limit
+            rises = (np.minimum(bend.change, bend.raw_change) > limit) & (
+                np.minimum(bend.t, bend.raw_t) > t_limit
+            )
+            slows = (bend.change < -limit) & (bend.t < -t_limit)
+        lagging |= enough & rises & (fits.pick(stop).slope > 0)
+        falls |= enough & slows & (fits.pick(stop).slope > 0)
+    return lagging, falls
+
+
+def _after_lag(
+    curves: Curves, lagging: Flags, first: Integers, shortest_end: Integers, early_um: Floats
+) -> tuple[Integers, Integers]:
+    """First read after the lag, and the end of the shortest window from there."""
+    start, stop = first.copy(), shortest_end.copy()
+    for well in np.flatnonzero(lagging):
+        net, time_s = curves.net_um[:, well], curves.time_s[:, well]
+        fewest = int(curves.shortest_points[well])
+        ceiling = curves.depletion_limit[well] * curves.consumable_um[well]
+        base = 0.0 if curves.zero_is_blank[well] else early_um[well]
+        below = np.isfinite(net) & ~(net - base > ceiling)
+        reads = np.flatnonzero(
+            np.isfinite(net) & (np.arange(net.size) <= np.max(np.flatnonzero(below), initial=0))
+        )
+        if reads.size < fewest + 1:
+            continue
+        transient = fit_transient(time_s[reads], net[reads])
+        if transient is not None and transient.settles:
+            settled = int(
+                np.searchsorted(time_s[reads], time_s[first[well]] + _LAG_TIME_CONSTANTS * transient.tau_s)
+            )
+            place = min(settled, reads.size - fewest)
+        else:
+            place = _steepest(time_s[reads], net[reads], fewest)
+        start[well], stop[well] = reads[place], reads[place + fewest - 1]
+    return start, stop
+
+
+def _steepest(time_s: Floats, net_um: Floats, fewest: int) -> int:
+    """First read of the steepest window, where a lag does not end within the reads."""
+    windows = all_windows(time_s[:, None], net_um[:, None], fewest)
+    return int(windows.first[int(np.argmax(windows.slope[:, 0]))])
+
+
+def _straight_end(
+    curves: Curves,
+    fits: WindowFits,
+    excess: WindowFits,
+    noise: Floats,
+    known: Flags,
+    shortest_end: Integers,
+    end: Integers,
+) -> Integers:
+    """The last read up to which a straight line holds, not before the shortest window's end."""
+    bend = _bend(fits, excess, noise, known)
+    with np.errstate(invalid="ignore"):
+        curved = (np.abs(bend.change) > curves.slope_change_limit) & (
+            np.abs(bend.t) > curves.slope_change_t_limit
+        )
+    reads = np.arange(curved.shape[0])[:, None]
+    straight = ~curved & (reads >= shortest_end) & (reads <= end) & np.isfinite(curves.net_um)
+    longest = straight.shape[0] - 1 - np.argmax(straight[::-1], axis=0)
+    longest = np.where(straight.any(axis=0), longest, shortest_end)
+    return np.where(curves.plain | (end < shortest_end), end, longest)
+
+
+def _is_burst(time_s: Floats, net_um: Floats, usable: Flags, last: int) -> bool:
+    """Whether a slowing curve settles to a steady rate instead of falling on."""
+    reads = np.flatnonzero(usable[: last + 1])
+    transient = fit_transient(time_s[reads], net_um[reads])
+    return (
+        transient is not None
+        and transient.settles
+        and transient.steady_rate > _STEADY_SHARE * transient.initial_rate > 0
+    )

@@ -1,0 +1,1 @@
+"""Statistics of plates and lots: moderated variances, combination of plate reads."""
