@@ -25,7 +25,6 @@ from great_expectations.expectations.metrics.map_metric_provider import (
 )
 
 from checks.gates.blank_drift import blank_share
-from checks.gates.initial_slope_nonlinear import unexplained_change
 
 Severity = Literal["hold", "void", "none"]
 NOT_ASSESSED = "not assessed"
@@ -64,40 +63,6 @@ class ExpectNotBothBeyond(MulticolumnMapExpectation):
     other_limit: float
     map_metric: ClassVar[str] = NotBothBeyond.condition_metric_name
     success_keys: ClassVar[tuple[str, ...]] = ("limit", "other_limit", "mostly")
-
-
-class ChangeExplained(MulticolumnMapMetricProvider):
-    """Rows whose early change of slope is small, not significant, or what loss of substrate explains."""
-
-    condition_metric_name = "multicolumn_values.change_explained"
-    condition_domain_keys = DOMAIN_KEYS
-    condition_value_keys = ("limit", "t_limit", "depletion_limit")
-
-    @multicolumn_condition_partial(engine=PandasExecutionEngine)
-    def _pandas(
-        cls,  # noqa: N805 (the decorator hands over the class)
-        column_list: pd.DataFrame,
-        limit: float,
-        t_limit: float,
-        depletion_limit: float,
-        **_: Any,
-    ) -> pd.Series:
-        change, t_value, order, conversion = (column_list.iloc[:, k] for k in range(4))
-        left = unexplained_change(change, order, conversion, depletion_limit)
-        return ~((pd.Series(left, index=change.index) > limit) & (t_value.abs() >= t_limit))
-
-
-class ExpectChangeExplained(MulticolumnMapExpectation):
-    """Expect that loss of substrate explains a significant early change of slope to within `limit`.
-
-    Columns: change of slope, its t value, order in substrate, conversion at the end of the read.
-    """
-
-    limit: float
-    t_limit: float
-    depletion_limit: float
-    map_metric: ClassVar[str] = ChangeExplained.condition_metric_name
-    success_keys: ClassVar[tuple[str, ...]] = ("limit", "t_limit", "depletion_limit", "mostly")
 
 
 class BlankShareWithin(MulticolumnMapMetricProvider):
@@ -161,26 +126,6 @@ def not_both(gate: str, metrics: tuple[str, str], limits: tuple[float, float], *
         column_list=[column_name(gate, metric) for metric in metrics],
         limit=limits[0],
         other_limit=limits[1],
-        ignore_row_if="never",
-        meta=_meta(gate, rule, "hold"),
-    )
-
-
-def change_explained(
-    gate: str,
-    metrics: tuple[str, str, str, str],
-    *,
-    limit: float,
-    t_limit: float,
-    depletion_limit: float,
-    rule: str,
-) -> Any:
-    """Expect that loss of substrate explains a significant early change of slope."""
-    return ExpectChangeExplained(
-        column_list=[column_name(gate, metric) for metric in metrics],
-        limit=limit,
-        t_limit=t_limit,
-        depletion_limit=depletion_limit,
         ignore_row_if="never",
         meta=_meta(gate, rule, "hold"),
     )

@@ -4,12 +4,15 @@ Purpose: missing reads, gaps and times out of order change what a window means, 
 or the robot did something else than planned.
 
 Formula, the first rule that is breached is told:
-no_reads: no read at all, or all missing: void. too_few: some missing, and no usable window left: void.
-disorder: reads whose time is not after the read before > disorder_limit.
-missing: missing reads / reads > missing_limit.
-gap: longest time between neighbouring reads / their median > gap_limit.
-count: |reads - read_count of the assay's schedule| > count_tolerance, where the assay states it.
-interval: |median interval / interval_s of the schedule - 1| > interval_tolerance, where stated.
+
+- no_reads: no read at all, or all missing: void.
+- too_few: some missing, and no usable window left: void.
+- disorder: reads whose time is not after the read before > disorder_limit.
+- missing: missing reads / reads > missing_limit.
+- gap: longest time between neighbouring reads / their median > gap_limit.
+- count: |reads - read_count of the assay's schedule| > count_tolerance, where the assay states it.
+- interval: |median interval / interval_s of the schedule - 1| > interval_tolerance, where stated.
+
 Missing reads have no part in intervals; overflowed ones do, they were made in time.
 
 Source: common practice, no source.

@@ -4,9 +4,10 @@ Purpose: Vmax is what the rates tend to. Where the highest substrate is near K t
 bend alone, K with it, and both are badly known together, whatever the fit's own error says.
 
 Formula, the first rule that is breached is told:
-ratio: r = (S_max / K)^n < limit, with S_max the highest clear substrate, K = Km (n = 1) or K0.5 with the Hill
-coefficient n. The rate at S_max is r / (1 + r) of Vmax: 75 % at r = 3, for both laws.
-open: the 95 % interval of Vmax or of K is open above, where hold_open_interval.
+
+- ratio: r = (S_max / K)^n < limit, with S_max the highest clear substrate, K = Km (n = 1) or K0.5 with the
+  Hill coefficient n. The rate at S_max is r / (1 + r) of Vmax: 75 % at r = 3, for both laws.
+- open: the 95 % interval of Vmax or of K is open above, where hold_open_interval.
 
 Source: A. Cornish-Bowden, Fundamentals of Enzyme Kinetics, 4th ed., Wiley-Blackwell 2012, ISBN
 978-3-527-33074-4 (levels should reach well above Km); profile intervals that stay open: D. M. Bates, D. G.

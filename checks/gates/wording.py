@@ -26,11 +26,6 @@ def beside(measured: float, limit: float, scale: float = 1.0) -> tuple[str, str]
     return f"{measured * scale:.6g}", limit_text
 
 
-def percent(share: float) -> str:
-    """A share as per cent with one decimal."""
-    return f"{share * 100:.1f} %"
-
-
 def counted(count: float, noun: str) -> str:
     """A number of things: `1 read`, `3 reads`."""
     return f"{count:.0f} {noun}" if round(count) == 1 else f"{count:.0f} {noun}s"
