@@ -11,10 +11,10 @@ import tomllib
 import typing
 from datetime import datetime
 from pathlib import Path
-from typing import Literal
+from typing import Annotated, Literal
 
 import numpy as np
-from pydantic import Field, TypeAdapter, ValidationError
+from pydantic import Field, StringConstraints, TypeAdapter, ValidationError
 
 from models.errors import ConfigurationError, UnknownName
 from models.records.record import Record
@@ -76,7 +76,8 @@ class Dialect(Record):
     shape: Literal["long", "wide", "wells_by_rows", "grids"]
     container: Literal["text", "xlsx"] = "text"
     encoding: str = "utf-8"
-    delimiter: str = ","
+    # The base record strips blanks from text, and a tab is one.
+    delimiter: Annotated[str, StringConstraints(strip_whitespace=False, min_length=1)] = ","
     decimal: Literal[".", ","] = "."
     decimals: int = Field(ge=0, le=6)
     overflow: str
