@@ -1,0 +1,370 @@
+"""Where a result came from: from any id down to the bytes that the instrument wrote.
+
+Reads the published warehouse, the lake and the raw archive, and checks the hashes of what it passes.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Callable, Mapping
+
+import duckdb
+
+from flows import lake
+from flows.history.drawing import lineage_text, render
+from flows.history.node import Fact, Node, NodeKind
+from flows.history.spans import Span, source_spans
+from flows.site import archive
+from flows.site.layout import Site
+from flows.warehouse.reader import open_published
+from flows.wording import MARKS, constant_symbol, interval, number, unit_symbol
+from models.errors import QueryError
+
+__all__ = ["Node", "lineage", "lineage_text", "render"]
+
+SHORTEST_PREFIX = 4
+
+Row = Mapping[str, object]
+
+_IDS: dict[str, tuple[str, str]] = {
+    "lot value": ("lot_values", "lot_value_id"),
+    "estimate": ("estimates", "estimate_id"),
+    "fit": ("fits", "fit_id"),
+    "series": ("series", "series_id"),
+    "analysis": ("analyses", "analysis_id"),
+    "plate read": ("plate_reads", "plate_read_id"),
+    "file": ("files", "file_id"),
+    "recipe": ("recipes", "recipe_id"),
+}
+_HOW_TO_FIND = (
+    'ids are listed by: halfsat history "SELECT estimate_id, lot, constant, value FROM current_estimates"'
+)
+_CONDITIONS = {
+    "unchanged": "bytes unchanged",
+    "changed": "BYTES CHANGED since they were written",
+    "missing": "MISSING",
+}
+
+
+def lineage(site: Site, id_or_prefix: str) -> Node:
+    """Trace a result back to the export's bytes.
+
+    Parameters
+    ----------
+    id_or_prefix
+        Id of a lot value, estimate, fit, series, analysis, plate read, file or recipe, or its first digits if
+        no other id begins with them.
+
+    Raises
+    ------
+    QueryError
+        If there is no such id, or several begin like this.
+    SiteError
+        If nothing is published yet.
+    """
+    with open_published(site) as connection:
+        kind, full_id = _find(connection, id_or_prefix)
+        return _Tracer(site, connection).node(kind, full_id)
+
+
+def _find(connection: duckdb.DuckDBPyConnection, prefix: str) -> tuple[str, str]:
+    wanted = prefix.strip().lower()
+    if not re.fullmatch(rf"[0-9a-f]{{{SHORTEST_PREFIX},64}}", wanted):
+        raise QueryError(
+            f"'{prefix}' is no id: ids are at least {SHORTEST_PREFIX} digits of 0-9 and a-f",
+            remedy=_HOW_TO_FIND,
+        )
+    search = " UNION ALL ".join(
+        f"SELECT '{kind}' AS kind, {column} AS id FROM {name} WHERE starts_with({column}, $prefix)"
+        for kind, (name, column) in _IDS.items()
+    )
+    found = connection.execute(f"{search} ORDER BY kind, id LIMIT 9", {"prefix": wanted}).fetchall()
+    if not found:
+        raise QueryError(f"nothing here has an id that begins with '{wanted}'", remedy=_HOW_TO_FIND)
+    if len(found) > 1:
+        some = ", ".join(f"{kind} {full_id[: len(wanted) + 8]}" for kind, full_id in found[:4])
+        raise QueryError(f"several ids begin with '{wanted}': {some}", remedy="type more digits")
+    return str(found[0][0]), str(found[0][1])
+
+
+class _Tracer:
+    """Builds the tree; what was shown once is not unfolded a second time."""
+
+    def __init__(self, site: Site, connection: duckdb.DuckDBPyConnection) -> None:
+        self.site, self.connection = site, connection
+        self._shown: set[tuple[str, str]] = set()
+        self._makers: dict[str, Callable[[str], Node]] = {
+            "lot value": self.lot_value,
+            "estimate": self.estimate,
+            "fit": self.fit,
+            "series": self.series,
+            "analysis": self.analysis,
+            "plate read": self.plate_read,
+            "file": lambda file_id: self.file("file", file_id),
+            "recipe": self.recipe,
+        }
+
+    def node(self, kind: str, full_id: str) -> Node:
+        """The tree below one thing."""
+        return self._makers[kind](full_id)
+
+    def lot_value(self, lot_value_id: str) -> Node:
+        row = self._row("SELECT * FROM lot_values WHERE lot_value_id = ?", lot_value_id)
+        sources = self._rows(
+            "SELECT e.estimate_id FROM lot_value_sources s JOIN estimates e USING (estimate_id) "
+            "JOIN analyses a USING (analysis_id) WHERE s.lot_value_id = ? "
+            "ORDER BY a.computed_at, a.plate_read_id, e.series_id, e.estimate_id",
+            lot_value_id,
+        )
+        counts = f"{row['plate_read_count']} plate reads, {row['series_count']} series, {_standing(row)}"
+        return Node(
+            "lot value",
+            lot_value_id,
+            _constant(row),
+            (f"lot {row['lot']} in assay {row['assay']}: {counts}",),
+            _facts(row),
+            (
+                *(self.estimate(str(each["estimate_id"])) for each in sources),
+                *self.pass_(str(row["pass_id"])),
+            ),
+        )
+
+    def estimate(self, estimate_id: str) -> Node:
+        row = self._row("SELECT * FROM estimates WHERE estimate_id = ?", estimate_id)
+        return Node(
+            "estimate",
+            estimate_id,
+            _constant(row),
+            (f"lot {row['lot']} in assay {row['assay']}, {_wells_fitted(row)}",),
+            _facts(row),
+            (self.fit(str(row["fit_id"])),),
+        )
+
+    def fit(self, fit_id: str) -> Node:
+        row = self._row("SELECT * FROM fits WHERE fit_id = ?", fit_id)
+        details = [f"{row['point_count']} rates, {row['degrees_of_freedom']} degrees of freedom"]
+        details += [] if row["converged"] else ["the solver did not reach the optimum"]
+        details += [] if row["trusted"] else [f"uncertainty not to be trusted: {row['distrust']}"]
+        chosen = "chosen" if row["chosen"] else "not chosen"
+        title = f"{str(row['law']).replace('_', ' ')}, {_wells_fitted(row)}, {chosen}"
+        children = (self.series(str(row["series_id"]), wells=str(row["wells"])),)
+        return Node("fit", fit_id, title, tuple(details), _facts(row), children)
+
+    def series(self, series_id: str, *, wells: str = "") -> Node:
+        row = self._row("SELECT * FROM series WHERE series_id = ?", series_id)
+        analysis_id = str(row["analysis_id"])
+        details = [f"{row['well_count']} wells, {row['clear_well_count']} of them clear, {_standing(row)}"]
+        if row["refusal"] is not None:
+            details.append(f"not fitted: {row['refusal']}")
+        if self._again("series", series_id):
+            return Node("series", series_id, f"{_level(row)} (as above)", (), _facts(row))
+        children = (
+            *self._rates(series_id, analysis_id, wells),
+            *self._findings(
+                "f.analysis_id = ? AND (f.series_id = ? OR f.well IN "
+                "(SELECT well FROM wells w WHERE w.analysis_id = f.analysis_id AND w.series_id = ?))",
+                analysis_id,
+                series_id,
+                series_id,
+            ),
+            self.analysis(analysis_id),
+        )
+        return Node("series", series_id, _level(row), tuple(details), _facts(row), children)
+
+    def analysis(self, analysis_id: str) -> Node:
+        row = self._row("SELECT * FROM analyses WHERE analysis_id = ?", analysis_id)
+        title = f"revision {row['revision']}, {_standing(row)}"
+        if self._again("analysis", analysis_id):
+            return Node("analysis", analysis_id, f"{title} (as above)", (), _facts(row))
+        after = row["superseded_by"]
+        details = (f"superseded by {str(after)[:12]}",) if after is not None else ()
+        children = (
+            *self._findings("f.analysis_id = ? AND f.subject = 'plate_read'", analysis_id),
+            self.recipe(str(row["recipe_id"])),
+            self.file("plate map", str(row["map_id"])),
+            self.plate_read(str(row["plate_read_id"]), analysis_id),
+            *self.pass_(str(row["pass_id"])),
+        )
+        return Node("analysis", analysis_id, title, details, _facts(row), children)
+
+    def plate_read(self, plate_read_id: str, analysis_id: str | None = None) -> Node:
+        row = self._row("SELECT * FROM plate_reads WHERE plate_read_id = ?", plate_read_id)
+        title = f"plate {row['plate_id']}, number {row['place_in_export']} in its export"
+        started = row["started_at"]
+        details = (
+            f"{row['well_count']} wells, {row['read_count']} reads each"
+            + ("" if started is None else f", begun {_time(started)}"),
+        )
+        children = (
+            *self._readings(plate_read_id, analysis_id),
+            self.file("export", str(row["export_id"])),
+        )
+        return Node("plate read", plate_read_id, title, details, _facts(row), children)
+
+    def recipe(self, recipe_id: str) -> Node:
+        row = self._row(
+            "SELECT recipe_id, assay, profile, code_version FROM recipes WHERE recipe_id = ?", recipe_id
+        )
+        title = f"assay {row['assay']}, profile {row['profile']}"
+        return Node("recipe", recipe_id, title, (f"halfsat {row['code_version']}",), _facts(row))
+
+    def file(self, kind: NodeKind, file_id: str) -> Node:
+        row = self._row("SELECT * FROM files WHERE file_id = ?", file_id)
+        if kind == "file" and row["kind"] in ("export", "plate_map"):
+            kind = "export" if row["kind"] == "export" else "plate map"
+        found = archive.condition(self.site, file_id)
+        details = [
+            f"{number(_real(row['byte_count']), digits=15)} byte, received {_time(row['received_at'])}",
+            f"SHA-256 {file_id}",
+            _CONDITIONS[found],
+        ]
+        if row["reason"] is not None:
+            details.append(f"in quarantine: {row['reason']}")
+        facts = (*_facts(row), ("condition", found))
+        return Node(kind, file_id, str(row["file_name"]), tuple(details), facts)
+
+    def pass_(self, pass_id: str) -> tuple[Node, ...]:
+        rows = self._rows("SELECT * FROM passes WHERE pass_id = ?", pass_id)
+        return tuple(
+            Node("pass", pass_id, f"begun {_time(row['started_at'])}", (), _facts(row)) for row in rows
+        )
+
+    def _rates(self, series_id: str, analysis_id: str, wells: str) -> list[Node]:
+        rows = self._rows(
+            "SELECT r.*, w.substrate_um, w.standing FROM wells w JOIN rates r USING (analysis_id, well) "
+            "WHERE w.analysis_id = ? AND w.series_id = ? "
+            "ORDER BY w.substrate_um, w.row_number, w.column_number",
+            analysis_id,
+            series_id,
+        )
+        source = self._row(
+            "SELECT a.plate_read_id, r.recipe FROM analyses a JOIN recipes r USING (recipe_id) "
+            "WHERE a.analysis_id = ?",
+            analysis_id,
+        )
+        file = self._lake_file(str(source["plate_read_id"]), analysis_id)
+        spans = source_spans(self.site, file, str(source["recipe"]), rows) if file else {}
+        return [_rate(row, spans.get(str(row["well"])), wells) for row in rows]
+
+    def _findings(self, condition: str, *given: str) -> list[Node]:
+        rows = self._rows(
+            f"SELECT f.* FROM findings f WHERE {condition} ORDER BY f.subject, f.gate, f.well", *given
+        )
+        return [
+            Node(
+                "finding",
+                str(row["finding_id"]),
+                f"{row['gate']} ({row['severity']})"
+                + ("" if row["well"] is None else f", well {row['well']}"),
+                (str(row["sentence"]),),
+                _facts(row),
+            )
+            for row in rows
+        ]
+
+    def _readings(self, plate_read_id: str, analysis_id: str | None) -> list[Node]:
+        file = self._lake_file(plate_read_id, analysis_id)
+        if file is None:
+            return []
+        path, sha256 = file
+        found = lake.condition(self.site, path, sha256)
+        details = (f"SHA-256 {sha256}", _CONDITIONS[found])
+        facts: tuple[tuple[str, Fact], ...] = (("path", path), ("sha256", sha256), ("condition", found))
+        return [Node("readings", sha256, _short_path(path), details, facts)]
+
+    def _lake_file(self, plate_read_id: str, analysis_id: str | None) -> tuple[str, str] | None:
+        """Path and digest of the readings that an analysis used: the last written before it."""
+        rows = self._rows(
+            "SELECT f.path, f.sha256 FROM lake_files f JOIN loads l USING (batch_id) "
+            "LEFT JOIN analyses a ON a.analysis_id = $2 "
+            "WHERE f.path = 'lake/readings/' || $1 || '.parquet' "
+            "ORDER BY coalesce(l.loaded_at <= a.computed_at, true) DESC, l.ledger_seq DESC LIMIT 1",
+            plate_read_id,
+            analysis_id,
+        )
+        return (str(rows[0]["path"]), str(rows[0]["sha256"])) if rows else None
+
+    def _again(self, kind: str, full_id: str) -> bool:
+        seen = (kind, full_id) in self._shown
+        self._shown.add((kind, full_id))
+        return seen
+
+    def _rows(self, sql: str, *given: str | None) -> list[Row]:
+        table = self.connection.execute(sql, list(given)).to_arrow_table()
+        return [] if table is None else list(table.to_pylist())
+
+    def _row(self, sql: str, wanted: str) -> Row:
+        rows = self._rows(sql, wanted)
+        if not rows:
+            raise QueryError(
+                f"the warehouse has no row for {wanted[:12]}, though a result rests on it",
+                remedy="check the site: halfsat verify",
+            )
+        return rows[0]
+
+
+def _rate(row: Row, span: Span | None, wells: str) -> Node:
+    title = f"{MARKS[str(row['standing'])]} {row['well']}  {number(_real(row['substrate_um']))} µM"
+    value, error = _real(row["v0_um_per_s"]), _real(row["v0_se_um_per_s"])
+    title += "  no rate" if value is None else f"  v {number(value, error)} ± {number(error, digits=2)} µM/s"
+    if wells == "clear" and row["standing"] != "clear":
+        title += "  (left out)"
+    details = []
+    if row["window_first_read"] is not None:
+        details.append(
+            f"reads {row['window_first_read']} to {row['window_last_read']}, "
+            f"{number(_real(row['window_start_s']))} to {number(_real(row['window_end_s']))} s"
+            f", mean substrate {number(_real(row['mean_substrate_um']))} µM"
+        )
+    facts = _facts(row)
+    if span is not None:
+        details.append(span.text)
+        facts = (*facts, *span.facts)
+    return Node("rate", f"{row['analysis_id']}:{row['well']}", title, tuple(details), facts)
+
+
+def _constant(row: Row) -> str:
+    value, error = _real(row["value"]), _real(row["standard_error"])
+    unit = unit_symbol(str(row["unit"]))
+    low_high = interval(_real(row["low"]), _real(row["high"]), error)
+    return (
+        f"{constant_symbol(str(row['constant']))} {number(value, error)} {unit}".rstrip() + f" ({low_high})"
+    )
+
+
+def _level(row: Row) -> str:
+    parts = [f"lot {row['lot']} ({row['role']})"]
+    if row["enzyme_nm"] is not None:
+        parts.append(f"enzyme {number(_real(row['enzyme_nm']))} nM")
+    if row["enzyme_ng_per_ml"] is not None:
+        parts.append(f"enzyme {number(_real(row['enzyme_ng_per_ml']))} ng/mL")
+    if row["modulator"] is not None:
+        parts.append(f"{row['modulator']} {number(_real(row['modulator_um']))} µM")
+    return ", ".join(parts)
+
+
+def _wells_fitted(row: Row) -> str:
+    return "clear wells" if row["wells"] == "clear" else "all wells that are not void"
+
+
+def _standing(row: Row) -> str:
+    return f"{MARKS[str(row['standing'])]} {row['standing']}"
+
+
+def _short_path(path: str) -> str:
+    return re.sub(r"([0-9a-f]{12})[0-9a-f]{20,}", r"\1...", path)
+
+
+def _time(value: object) -> str:
+    return f"{value:%Y-%m-%d %H:%M:%S} UTC" if value is not None else "at an unknown time"
+
+
+def _real(value: object) -> float | None:
+    return float(value) if isinstance(value, (int, float)) else None
+
+
+def _facts(row: Row) -> tuple[tuple[str, Fact], ...]:
+    return tuple(
+        (name, value if value is None or isinstance(value, (str, int, float)) else str(value))
+        for name, value in row.items()
+    )
