@@ -10,7 +10,7 @@ from collections.abc import Mapping
 from fnmatch import fnmatchcase
 
 from flows.stages.read.exports import open_sheets
-from flows.stages.read.sheets import decode, plain_lines
+from flows.stages.read.sheets import decode
 from flows.stages.read.workbook import is_workbook
 from models.errors import ExportError
 from models.records.export_profile import ExportProfile
@@ -77,5 +77,5 @@ def _head(content: bytes, file_name: str, profile: ExportProfile) -> list[str]:
         end = head.rfind(b"\n")
         double = head[:2] in (b"\xff\xfe", b"\xfe\xff") or profile.text.encoding.startswith("utf-16")
         head = head[: end // 2 * 2 + 2] if double else head[: end + 1]
-    text, _ = decode(head or content, profile.text.encoding, file_name)
-    return [line.rstrip("\r") for line in plain_lines(text).split("\n")[:count]]
+    data, _ = decode(head or content, profile.text.encoding, file_name)
+    return [line.rstrip("\r") for line in data.decode().split("\n")[:count]]

@@ -18,7 +18,7 @@ from flows.stages.read.long import read_long
 from flows.stages.read.numbers import number_rule
 from flows.stages.read.raw import RawReadings, StagedRead, join, stage
 from flows.stages.read.reading import Reading
-from flows.stages.read.sheets import Sheet, TextSheet, decode, guess_separator, plain_lines
+from flows.stages.read.sheets import Sheet, TextSheet, decode, guess_separator
 from flows.stages.read.times import parse_start, time_rule
 from flows.stages.read.wells_by_rows import read_wells_by_rows
 from flows.stages.read.wide import read_wide
@@ -91,13 +91,12 @@ def open_sheets(content: bytes, file_name: str, profile: ExportProfile) -> list[
             where=file_name,
             remedy='set container = "xlsx" in the profile, or export as text',
         )
-    decoded, encoding = decode(content, profile.text.encoding, file_name)
-    text = plain_lines(decoded)
+    data, encoding = decode(content, profile.text.encoding, file_name)
     separator = profile.text.separator
     if separator is None:
         signs = [profile.values.thousands] + ([","] if profile.values.decimal == "," else [])
-        separator = guess_separator(text, profile.text.quote, signs)
-    return [TextSheet(file_name, text.encode("utf-8"), separator, profile.text.quote, encoding)]
+        separator = guess_separator(data, profile.text.quote, signs)
+    return [TextSheet(file_name, data, separator, profile.text.quote, encoding)]
 
 
 def _add(plates: list[_Plate], plate: _Plate) -> None:

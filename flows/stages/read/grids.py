@@ -10,7 +10,7 @@ import numpy as np
 
 from flows.stages.read.blocks import PlateBlock, matching_lines
 from flows.stages.read.numbers import OK, UNREADABLE, parse_numbers
-from flows.stages.read.raw import RawReadings, join, well_positions
+from flows.stages.read.raw import RawReadings, join, one_channel, well_positions
 from flows.stages.read.reading import Reading
 from flows.stages.read.sheets import Sheet, is_blank
 from flows.stages.read.tables import unreadable_number
@@ -262,7 +262,7 @@ def _readings(reading: Reading, channel: str, frames: Sequence[_Frame]) -> RawRe
     count = len(places)
     return RawReadings(
         (channel,),
-        np.zeros(len(cells), dtype=np.int64),
+        one_channel(len(cells)),
         np.tile(well_positions(places), len(frames)),
         np.repeat([frame.time_s for frame in frames], count),
         np.where(states == OK, values, np.nan),

@@ -6,7 +6,7 @@ import numpy as np
 
 from flows.stages.read.blocks import ChannelBlock, column_index, end_of_rows, find_table
 from flows.stages.read.numbers import Reals
-from flows.stages.read.raw import Integers, RawReadings
+from flows.stages.read.raw import Narrow, RawReadings, constant_integer, constant_real, one_channel
 from flows.stages.read.reading import (
     Reading,
     name_columns,
@@ -41,11 +41,11 @@ def read_long(reading: Reading, block: ChannelBlock) -> tuple[RawReadings, int, 
     need_rows(reading, span, len(table.lines))
     positions = table_positions(reading, table, named)
     channels: tuple[str, ...] = (block.channel,)
-    channel = np.zeros(len(table.lines), dtype=np.int64)
+    channel = one_channel(len(table.lines))
     if "channel" in at:
         column = table.texts[at["channel"]]
         _refuse_blank(reading, table, at["channel"], "channel")
-        channels, channel = tuple(column.texts), column.codes.astype(np.int64)
+        channels, channel = tuple(column.texts), column.codes.astype(np.int16)
     plate = None
     if "plate" in at:
         _refuse_blank(reading, table, at["plate"], "plate")
@@ -56,7 +56,9 @@ def read_long(reading: Reading, block: ChannelBlock) -> tuple[RawReadings, int, 
     else:
         times = row_times(reading, table, at["time"], numbers.index(at["time"]) if timed_by_number else None)
     temperature = (
-        plain(table, numbers.index(at["temperature"])) if "temperature" in at else np.full(len(times), np.nan)
+        plain(table, numbers.index(at["temperature"]))
+        if "temperature" in at
+        else constant_real(np.nan, len(times))
     )
     raw = RawReadings(
         channels,
@@ -67,7 +69,7 @@ def read_long(reading: Reading, block: ChannelBlock) -> tuple[RawReadings, int, 
         table.states[:, 0],
         temperature,
         table.lines,
-        np.full(len(times), at["signal"], dtype=np.int64),
+        constant_integer(at["signal"], len(times)),
     )
     return raw, span.first if span.header_line < 0 else span.header_line, plate
 
@@ -75,8 +77,8 @@ def read_long(reading: Reading, block: ChannelBlock) -> tuple[RawReadings, int, 
 def _counted_times(
     reading: Reading,
     table: LoadedTable,
-    positions: Integers,
-    channel: Integers,
+    positions: Narrow,
+    channel: Narrow,
     plate: TextColumn | None,
     read_place: int | None,
 ) -> Reals:

@@ -16,7 +16,7 @@ import pandas as pd
 
 from flows.stages.read.map_rules import ROLES, Row, check_row
 from flows.stages.read.numbers import OK, NumberRule, parse_numbers
-from flows.stages.read.sheets import Sheet, TextSheet, decode, guess_separator, is_blank, plain_lines
+from flows.stages.read.sheets import Sheet, TextSheet, decode, guess_separator, is_blank
 from flows.stages.read.workbook import is_workbook, read_sheets
 from models.errors import HalfsatError, PlateMapError, UnknownName
 from models.plates import well_name, well_position
@@ -98,9 +98,8 @@ def read_plate_map(content: bytes, file_name: str) -> list[PlateMap]:
 def _sheets(content: bytes, file_name: str) -> list[Sheet]:
     if is_workbook(content):
         return list(read_sheets(content, file_name, "*", kind=PlateMapError))
-    decoded, encoding = decode(content, "auto", file_name, kind=PlateMapError)
-    text = plain_lines(decoded)
-    return [TextSheet(file_name, text.encode("utf-8"), guess_separator(text), encoding=encoding)]
+    data, encoding = decode(content, "auto", file_name, kind=PlateMapError)
+    return [TextSheet(file_name, data, guess_separator(data), encoding=encoding)]
 
 
 def _header_line(sheet: Sheet) -> int | None:

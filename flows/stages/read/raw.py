@@ -8,7 +8,8 @@ from __future__ import annotations
 
 import datetime as dt
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
+from typing import Any, TypeVar
 
 import numpy as np
 import numpy.typing as npt
@@ -22,6 +23,8 @@ from models.errors import ExportError
 from models.plates import PLATE_FORMATS, smallest_format, well_name
 
 Integers = npt.NDArray[np.int64]
+Narrow = npt.NDArray[np.int16]
+Scalar = TypeVar("Scalar", bound=np.generic)
 
 _LARGEST = PLATE_FORMATS[-1]
 _TEXT_DTYPE = pd.StringDtype("pyarrow", na_value=np.nan)
@@ -67,8 +70,8 @@ class RawReadings:
     """
 
     channels: tuple[str, ...]
-    channel: Integers
-    position: Integers
+    channel: Narrow
+    position: Narrow
     time_s: Reals
     signal: Reals
     state: States
@@ -76,24 +79,47 @@ class RawReadings:
     line: Integers
     field: Integers
 
-    def take(self, rows: npt.NDArray[np.bool_] | Integers) -> RawReadings:
+    def take(self, rows: Integers) -> RawReadings:
         """The same with some of the rows, or with rows in another order."""
-        return replace(
-            self,
-            channel=self.channel[rows],
-            position=self.position[rows],
-            time_s=self.time_s[rows],
-            signal=self.signal[rows],
-            state=self.state[rows],
-            temperature_c=self.temperature_c[rows],
-            line=self.line[rows],
-            field=self.field[rows],
+        return RawReadings(
+            self.channels,
+            _picked(self.channel, rows),
+            _picked(self.position, rows),
+            _picked(self.time_s, rows),
+            _picked(self.signal, rows),
+            _picked(self.state, rows),
+            _picked(self.temperature_c, rows),
+            _picked(self.line, rows),
+            _picked(self.field, rows),
         )
 
 
-def well_positions(places: Sequence[tuple[int, int]]) -> Integers:
+def _picked(column: npt.NDArray[Scalar], rows: Integers) -> npt.NDArray[Scalar]:
+    return np.broadcast_to(column[:1], rows.shape) if _is_constant(column) else column[rows]
+
+
+def _is_constant(column: npt.NDArray[Scalar]) -> bool:
+    return column.strides == (0,) and len(column) > 0
+
+
+def constant_real(value: float, length: int) -> Reals:
+    """One number as an array of that length, stored once."""
+    return np.broadcast_to(np.array([value], dtype=np.float64), (length,))
+
+
+def constant_integer(value: int, length: int) -> Integers:
+    """One whole number as an array of that length, stored once."""
+    return np.broadcast_to(np.array([value], dtype=np.int64), (length,))
+
+
+def one_channel(length: int) -> Narrow:
+    """The channel index 0 for every reading, stored once."""
+    return np.broadcast_to(np.zeros(1, dtype=np.int16), (length,))
+
+
+def well_positions(places: Sequence[tuple[int, int]]) -> Narrow:
     """Positions of wells given as (row, column), both counted from 1."""
-    grid = np.array(places, dtype=np.int64).reshape(-1, 2)
+    grid = np.array(places, dtype=np.int16).reshape(-1, 2)
     return (grid[:, 0] - 1) * _LARGEST.column_count + grid[:, 1] - 1
 
 
@@ -103,7 +129,7 @@ def join(parts: Sequence[RawReadings]) -> RawReadings:
         return parts[0]
     channels = tuple(dict.fromkeys(channel for part in parts for channel in part.channels))
     renumbered = [
-        np.array([channels.index(name) for name in part.channels], dtype=np.int64)[part.channel]
+        np.array([channels.index(name) for name in part.channels], dtype=np.int16)[part.channel]
         for part in parts
     ]
     return RawReadings(
@@ -145,20 +171,19 @@ def stage(
         started_at = dt.datetime.fromtimestamp(float(times.min()), dt.UTC)
     times = times - times.min()
     group_lengths = np.diff(np.append(starts, len(times)))
-    group = np.repeat(np.arange(len(starts)), group_lengths)
+    group = np.repeat(np.arange(len(starts), dtype=np.int32), group_lengths)
     _refuse_doubled(raw, times, group, starts, file_name, sheet)
-    read_number = np.arange(len(times)) - np.repeat(starts, group_lengths) + 1
-    distinct, codes = np.unique(raw.position[starts], return_inverse=True)
-    names = [well_name(*(int(part) + 1 for part in divmod(each, _LARGEST.column_count))) for each in distinct]
+    read_number = _counted(starts, group_lengths, len(times))
+    names = [_name_at(int(position)) for position in raw.position[starts]]
     columns = {
         "channel": _text(raw.channels, raw.channel),
-        "well": _text(names, np.repeat(codes, group_lengths)),
+        "well": _text(names, group),
         "read_number": read_number,
         "time_s": times,
         "signal": raw.signal,
         "state": _text(STATE_NAMES, raw.state),
-        "temperature_c": raw.temperature_c,
-        "source_sheet": _text([sheet], np.zeros(len(times), dtype=np.int8)),
+        "temperature_c": np.ascontiguousarray(raw.temperature_c),
+        "source_sheet": _text([sheet], constant_integer(0, len(times))),
         "source_row": raw.line + 1,
         "source_column": raw.field + 1,
     }
@@ -169,7 +194,8 @@ def stage(
 def _plate_format(
     raw: RawReadings, stated: int | None, plate_id: str, file_name: str, sheet: str | None
 ) -> int:
-    rows, columns = np.divmod(np.unique(raw.position), _LARGEST.column_count)
+    used = np.flatnonzero(np.bincount(raw.position, minlength=_LARGEST.well_count))
+    rows, columns = np.divmod(used, _LARGEST.column_count)
     smallest = smallest_format([(int(rows.max()) + 1, int(columns.max()) + 1)]).well_count
     if stated is None or smallest <= stated:
         return stated or smallest
@@ -183,15 +209,26 @@ def _plate_format(
 
 def _by_well(raw: RawReadings) -> tuple[RawReadings, Integers]:
     """Readings ordered by channel and well, file order kept within, and where each well begins."""
-    key = raw.channel * _LARGEST.well_count + raw.position
+    key = raw.channel.astype(np.int32) * np.int32(_LARGEST.well_count) + raw.position
     steps = np.diff(key)
     if (steps < 0).any():
-        # The narrow type lets numpy sort by radix; a stable sort keeps the order of the file.
-        narrow = key.astype(np.int16) if key.max() < 2**15 else key
-        order = np.argsort(narrow, kind="stable")
+        order = _well_order(key)
         raw, key = raw.take(order), key[order]
         steps = np.diff(key)
     return raw, np.concatenate([[0], np.flatnonzero(steps) + 1])
+
+
+def _well_order(key: npt.NDArray[np.int32]) -> Integers:
+    """The order by channel and well that keeps the order of the file within each well."""
+    again = np.flatnonzero(key == key[0])
+    cycle = int(again[1]) if len(again) > 1 else len(key)
+    if len(key) % cycle == 0 and len(set(key[:cycle].tolist())) == cycle:
+        cycles = key.reshape(-1, cycle)
+        if (cycles == cycles[0]).all():
+            # Every read lists the wells in one order, as most instruments do: no need to sort all readings.
+            offsets = np.arange(0, len(key), cycle)
+            return (np.argsort(cycles[0])[:, None] + offsets[None, :]).ravel()
+    return np.argsort(key, kind="stable")
 
 
 def _without_midnight(times: Reals, starts: Integers, rule: TimeRule | None, first_in_file: float) -> Reals:
@@ -206,7 +243,12 @@ def _without_midnight(times: Reals, starts: Integers, rule: TimeRule | None, fir
 
 
 def _refuse_doubled(
-    raw: RawReadings, times: Reals, group: Integers, starts: Integers, file_name: str, sheet: str | None
+    raw: RawReadings,
+    times: Reals,
+    group: npt.NDArray[np.int32],
+    starts: Integers,
+    file_name: str,
+    sheet: str | None,
 ) -> None:
     steps = np.diff(times)
     # The step from one well to the next is no step in time.
@@ -218,9 +260,8 @@ def _refuse_doubled(
     if not same.any():
         return
     first, second = (int(order[np.flatnonzero(same)[0] + step]) for step in (0, 1))
-    row, column = divmod(int(raw.position[first]), _LARGEST.column_count)
     raise ExportError(
-        f"well {well_name(row + 1, column + 1)} is read twice at {times[first]:g} s in channel "
+        f"well {_name_at(int(raw.position[first]))} is read twice at {times[first]:g} s in channel "
         f"{raw.channels[int(raw.channel[first])]}, first in {_spot(raw, first, sheet)}",
         where=place(file_name, sheet, int(raw.line[second]), int(raw.field[second])),
         remedy="if these are two plates or two channels, state [blocks], columns.plate or columns.channel in the "
@@ -233,7 +274,22 @@ def _spot(raw: RawReadings, index: int, sheet: str | None) -> str:
     return f"{words[0]} {int(raw.line[index]) + 1}, {words[1]} {int(raw.field[index]) + 1}"
 
 
-def _text(words: Sequence[str | None], codes: npt.NDArray[np.integer]) -> pd.api.extensions.ExtensionArray:
+def _counted(starts: Integers, lengths: Integers, total: int) -> Integers:
+    """Number of each reading within its well, from 1."""
+    if (lengths == lengths[0]).all():
+        return np.tile(np.arange(1, int(lengths[0]) + 1, dtype=np.int64), len(lengths))
+    return np.arange(1, total + 1, dtype=np.int64) - np.repeat(starts, lengths)
+
+
+def _name_at(position: int) -> str:
+    row, column = divmod(position, _LARGEST.column_count)
+    return well_name(row + 1, column + 1)
+
+
+def _text(words: Sequence[str | None], codes: npt.NDArray[np.integer[Any]]) -> pd.Series[str]:
     """A text column from its distinct words and an index for each row."""
-    array = pa.array(words, pa.large_string()).take(pa.array(codes))
-    return pd.array(array, dtype=_TEXT_DTYPE)
+    if len(codes) and (_is_constant(codes) or codes.min() == codes.max()):
+        array = pa.repeat(pa.scalar(words[int(codes[0])], pa.large_string()), len(codes))
+    else:
+        array = pa.array(words, pa.large_string()).take(pa.array(codes))
+    return pd.Series(array, dtype=_TEXT_DTYPE, copy=False)

@@ -12,7 +12,7 @@ import numpy as np
 
 from flows.stages.read.blocks import TableSpan, column_index
 from flows.stages.read.numbers import OK, NumberRule, Reals
-from flows.stages.read.raw import Integers, well_positions
+from flows.stages.read.raw import Narrow, well_positions
 from flows.stages.read.sheets import Sheet
 from flows.stages.read.tables import LoadedTable, load_table
 from flows.stages.read.times import TimeRule, parse_times, to_seconds
@@ -63,8 +63,8 @@ def row_times(reading: Reading, table: LoadedTable, time_at: int | None, place: 
     else:
         column = table.texts[time_at]
         times = parse_times(column.texts, reading.times)[column.codes]
-    bad = np.flatnonzero(~np.isfinite(times))
-    if len(bad):
+    if not np.isfinite(times).all():
+        bad = np.flatnonzero(~np.isfinite(times))
         raise _no_time(reading, int(table.lines[bad[0]]), time_at)
     return times
 
@@ -82,6 +82,8 @@ def _no_time(reading: Reading, line: int, field: int) -> ExportError:
 
 def plain(table: LoadedTable, place: int) -> Reals:
     """Values of a number column, NaN where the cell gave none."""
+    if not table.states[:, place].any():
+        return table.values[:, place]
     return np.where(table.states[:, place] == OK, table.values[:, place], np.nan)
 
 
@@ -124,17 +126,16 @@ def _joined_position(reading: Reading, parts: Sequence[str]) -> tuple[int, int] 
         return None
 
 
-def table_positions(reading: Reading, table: LoadedTable, named: Sequence[int]) -> Integers:
+def table_positions(reading: Reading, table: LoadedTable, named: Sequence[int]) -> Narrow:
     """Well of each row as a position; a row that names none is an error."""
     columns = [table.texts[field] for field in named]
-    codes = columns[0].codes.astype(np.int64)
+    codes = columns[0].codes
     names = [[text] for text in columns[0].texts]
     if len(columns) == 2:
         count = len(columns[1].texts)
-        codes = codes * count + columns[1].codes
+        codes = codes * np.int32(count) + columns[1].codes
         names = [[row, column] for row in columns[0].texts for column in columns[1].texts]
-    used = np.zeros(len(names), dtype=bool)
-    used[codes] = True
+    used = np.bincount(codes, minlength=len(names)) > 0
     places = [_joined_position(reading, name) if used[code] else (1, 1) for code, name in enumerate(names)]
     for code, place in enumerate(places):
         if place is None:

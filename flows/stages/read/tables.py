@@ -16,6 +16,7 @@ import pyarrow.csv
 
 from flows.stages.read.numbers import (
     MISSING,
+    OK,
     UNREADABLE,
     NumberRule,
     Reals,
@@ -27,6 +28,8 @@ from flows.stages.read.sheets import Sheet, TextSheet, is_blank
 from models.errors import ExportError
 
 Integers = npt.NDArray[np.int64]
+
+_BLOCK_BYTES = 1 << 20
 
 
 @dataclass(frozen=True)
@@ -101,7 +104,9 @@ def load_table(
         loaded = _load_regular(sheet, first, last, width, numbers, texts, rule)
     if loaded is None:
         loaded = _load_cells(sheet, first, last, width, numbers, texts, rule, short_rows)
-    filled = (loaded.states != MISSING).any(axis=1)
+    filled = np.zeros(len(loaded.lines), dtype=bool)
+    for place in range(len(numbers)):
+        filled |= loaded.states[:, place] != MISSING
     for column in loaded.texts.values():
         filled |= column.rows_with(np.array([bool(text) for text in column.texts], dtype=bool))
     return loaded.keep(filled)
@@ -120,14 +125,12 @@ def _load_regular(
     names = [str(field) for field in range(width)]
     wanted = [names[field] for field in (*texts, *numbers)]
     column_types: dict[str, pa.DataType] = {names[field]: pa.float64() for field in numbers}
-    column_types |= {names[field]: pa.dictionary(pa.int32(), pa.string()) for field in texts}
+    column_types |= {names[field]: pa.string() for field in texts}
     span = sheet.span(first, last)
     try:
         table = pyarrow.csv.read_csv(
             pa.BufferReader(span),
-            read_options=pyarrow.csv.ReadOptions(
-                column_names=names, use_threads=False, block_size=max(len(span) + 1, 1024)
-            ),
+            read_options=pyarrow.csv.ReadOptions(column_names=names, block_size=_BLOCK_BYTES),
             parse_options=pyarrow.csv.ParseOptions(delimiter=sheet.separator, quote_char=sheet.quote),
             convert_options=pyarrow.csv.ConvertOptions(
                 column_types=column_types,
@@ -142,15 +145,17 @@ def _load_regular(
     lines = _lines_of_rows(sheet, first, last, table.num_rows)
     if lines is None:
         return None
-    columns = [table.column(names[field]).combine_chunks() for field in numbers]
-    values = np.empty((table.num_rows, len(numbers)))
-    states = np.zeros(values.shape, dtype=np.uint8)
-    for place, column in enumerate(columns):
-        values[:, place] = column.to_numpy(zero_copy_only=False)
-        if column.null_count:
-            nulls = np.asarray(column.is_null())
-            states[nulls, place] = MISSING
-    if not np.isfinite(values[states != MISSING]).all():
+    values = np.empty((table.num_rows, len(numbers)), order="F")
+    states = np.zeros(values.shape, dtype=np.uint8, order="F")
+    for place, field in enumerate(numbers):
+        begin = 0
+        for chunk in table.column(names[field]).chunks:
+            rows = slice(begin, begin := begin + len(chunk))
+            values[rows, place] = chunk.to_numpy(zero_copy_only=False)
+            if chunk.null_count:
+                states[rows, place] = np.where(chunk.is_null(), MISSING, OK)
+    finite = np.isfinite(values)
+    if not finite.all() and not (finite | (states == MISSING)).all():
         return None
     if rule.overflow and (states == MISSING).any() and not _tell_tokens(sheet, lines, numbers, states, rule):
         return None
@@ -182,10 +187,8 @@ def _tell_tokens(
 
 
 def _text_column(table: pa.Table, name: str) -> TextColumn:
-    column = table.column(name).combine_chunks()
-    if isinstance(column, pa.ChunkedArray):
-        column = column.chunk(0)
-    codes = column.indices.to_numpy(zero_copy_only=False).astype(np.int32)
+    column = table.column(name).combine_chunks().dictionary_encode()
+    codes = column.indices.to_numpy(zero_copy_only=False)
     return _merged([text.strip() for text in column.dictionary.to_pylist()], codes)
 
 

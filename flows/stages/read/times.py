@@ -58,6 +58,8 @@ def time_rule(profile: ExportProfile, numbers: NumberRule) -> TimeRule | None:
 def to_seconds(values: Reals, rule: TimeRule) -> Reals:
     """Seconds of times given as numbers."""
     factor, divisor = NUMERIC_DIVISORS[rule.notation]
+    if factor == divisor:
+        return values
     return values * factor / divisor
 
 

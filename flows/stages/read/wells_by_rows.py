@@ -8,7 +8,7 @@ import numpy as np
 
 from flows.stages.read.blocks import ChannelBlock, TableSpan, column_index, end_of_rows, find_table
 from flows.stages.read.numbers import MISSING, OK, Reals
-from flows.stages.read.raw import RawReadings
+from flows.stages.read.raw import RawReadings, one_channel
 from flows.stages.read.reading import Reading, name_columns, need_rows, row_well, table_positions
 from flows.stages.read.tables import LoadedTable
 from flows.stages.read.times import parse_times
@@ -52,7 +52,7 @@ def read_wells_by_rows(reading: Reading, block: ChannelBlock) -> tuple[RawReadin
     wells, reads = len(table.lines), len(fields)
     raw = RawReadings(
         (block.channel,),
-        np.zeros(wells * reads, dtype=np.int64),
+        one_channel(wells * reads),
         np.repeat(positions, reads),
         np.tile(times, wells),
         table.values.ravel(),

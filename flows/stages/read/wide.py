@@ -8,7 +8,7 @@ import numpy as np
 
 from flows.stages.read.blocks import ChannelBlock, TableSpan, column_index, end_of_rows, find_table
 from flows.stages.read.numbers import OK, parse_numbers
-from flows.stages.read.raw import RawReadings, well_positions
+from flows.stages.read.raw import RawReadings, one_channel, well_positions
 from flows.stages.read.reading import Reading, need_rows, plain, row_times
 from flows.stages.read.times import parse_times
 from models.errors import ExportError
@@ -40,7 +40,7 @@ def read_wide(reading: Reading, block: ChannelBlock) -> tuple[RawReadings, int]:
     wells = len(fields)
     raw = RawReadings(
         (block.channel,),
-        np.zeros(wells * reads, dtype=np.int64),
+        one_channel(wells * reads),
         np.repeat(well_positions(places), reads),
         np.tile(times, wells),
         table.values[:, :wells].ravel(order="F"),
