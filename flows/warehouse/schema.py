@@ -56,12 +56,13 @@ def prepare(connection: duckdb.DuckDBPyConnection, site: Site) -> None:
 
 
 def _version(connection: duckdb.DuckDBPyConnection) -> tuple[int, str, str] | None:
+    # Fetched whole: an unfinished result would keep the connection from any other work.
     found = connection.execute(
-        "SELECT count(*) FROM duckdb_tables() WHERE table_name = ? AND NOT internal", [SCHEMA.name]
-    ).fetchone()
-    if found is None or found[0] == 0:
+        "SELECT table_name FROM duckdb_tables() WHERE table_name = ? AND NOT internal", [SCHEMA.name]
+    ).fetchall()
+    if not found:
         return None
-    row = connection.execute(
+    versions = connection.execute(
         f"SELECT schema_version, tables_digest, views_digest FROM {SCHEMA.name}"
-    ).fetchone()
-    return None if row is None else (int(row[0]), str(row[1]), str(row[2]))
+    ).fetchall()
+    return (int(versions[0][0]), str(versions[0][1]), str(versions[0][2])) if versions else None
