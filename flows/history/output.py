@@ -29,9 +29,11 @@ from flows.wording import number
 from models.errors import QueryError
 
 WIDTH = 80
+FILE_FORMATS = ("csv", "json", "parquet", "xlsx")
 ROWS_SHOWN = 200
 _ID_LENGTH = 12
 _NARROWEST_TEXT = 10
+_LONGEST_WORD = 28
 _XLSX_ROWS, _XLSX_COLUMNS, _XLSX_CHARACTERS = 1_048_575, 16_384, 32_767
 _LONG_ID = re.compile(r"[0-9a-f]{32}|[0-9a-f]{64}")
 _CONTROLS = re.compile(r"[\x00-\x08\x0b\x0c\x0e-\x1f\x7f-\x9f\u202a-\u202e\u2066-\u2069]")
@@ -54,12 +56,9 @@ def encode(table: pa.Table, output_format: str) -> bytes:
     QueryError
         If the format is unknown, or cannot hold the answer.
     """
-    writers: dict[str, Callable[[pa.Table], bytes]] = {
-        "csv": to_csv,
-        "json": to_json,
-        "parquet": to_parquet,
-        "xlsx": to_xlsx,
-    }
+    writers: dict[str, Callable[[pa.Table], bytes]] = dict(
+        zip(FILE_FORMATS, (to_csv, to_json, to_parquet, to_xlsx), strict=True)
+    )
     if output_format not in writers:
         raise QueryError(f"there is no format '{output_format}'", remedy=f"formats are {', '.join(writers)}")
     return writers[output_format](table.rename_columns(_distinct(table.column_names)))
@@ -173,7 +172,7 @@ def _side_by_side(names: Sequence[str], cells: Sequence[Sequence[str]], right: S
             justify="right" if is_number else "left",
             no_wrap=whole,
             overflow="fold",
-            min_width=max((len(text) for text in column), default=1) if whole else None,
+            min_width=max((len(text) for text in column), default=1) if whole else _folded(column),
         )
     for row in zip(*cells, strict=True):
         made.add_row(*(Text(text) for text in row))
@@ -197,9 +196,15 @@ def _narrowest(names: Sequence[str], cells: Sequence[Sequence[str]], right: Sequ
     total = 0
     for name, column, is_number in zip(names, cells, right, strict=True):
         widest = max((len(text) for text in column), default=0)
-        body = widest if is_number else min(widest, max(_NARROWEST_TEXT, _ID_LENGTH))
+        body = widest if is_number or widest <= _ID_LENGTH else _folded(column)
         total += max(body, min(len(name), _NARROWEST_TEXT)) + 2
     return total
+
+
+def _folded(column: Sequence[str]) -> int:
+    """Width at which a column of long texts is folded: between words where these are not too long."""
+    longest_word = max((len(word) for text in column for word in text.split()), default=1)
+    return max(_ID_LENGTH, min(longest_word, _LONGEST_WORD))
 
 
 def _cell(value: Value, kind: pa.DataType) -> str:

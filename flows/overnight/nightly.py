@@ -22,10 +22,10 @@ from flows.site.lock import pass_lock
 from flows.site.recipes import code_version, keep_recipe
 from flows.stages.fit import fit_batch
 from flows.stages.gate import gate_batch
-from flows.stages.gate_runs import keep_runs, structure_runs
-from flows.stages.load import catch_up, load_results
+from flows.stages.gate_runs import keep_runs
+from flows.stages.load import load_results, repair
 from flows.stages.lots import current_estimates, lot_values
-from flows.stages.publish import publish
+from flows.stages.publish import publish_results
 from flows.stages.pull import known_files, pull
 from flows.stages.rate import rate_batch
 from flows.stages.stage_files import StagedFiles, stage_files
@@ -96,7 +96,7 @@ def run_pass(site: Site, clock: Clock, run: Run = run_plainly) -> PassReport:
             started_at,
             clock,
         )
-        catch_up(site)
+        repair(site)
         append(site, "pass_started", {"pass_id": night.pass_id}, at=started_at)
         staged = _take_in(night, run)
         ready, waiting = find_pending(site, night.configuration)
@@ -119,7 +119,7 @@ def run_pass(site: Site, clock: Clock, run: Run = run_plainly) -> PassReport:
             {"pass_id": night.pass_id, "analysis_count": len(analysis_ids), "file_count": len(staged.files)},
             at=finished_at,
         )
-        run("publish", publish, site, finished_at)
+        run("publish", publish_results, site, finished_at)
     return PassReport(
         pass_id=night.pass_id,
         started_at=started_at,
@@ -149,7 +149,7 @@ def _take_in(night: _Pass, run: Run) -> StagedFiles:
         FILES.name: pd.DataFrame(staged.files).assign(pass_id=night.pass_id),
         PLATE_MAPS.name: pd.DataFrame(staged.plate_maps, columns=PLATE_MAPS.column_names),
         PLATE_READS.name: pd.DataFrame(staged.plate_reads, columns=PLATE_READS.column_names),
-        GATE_RUNS.name: keep_runs(night.site, night.pass_id, structure_runs(staged.structure), ()),
+        GATE_RUNS.name: keep_runs(night.site, night.pass_id, staged.runs, ()),
     }
     load_results(night.site, night.pass_id, tables, now)
     return staged

@@ -146,7 +146,7 @@ def _assay_of(plate_id: str, named: str | None, configuration: Configuration) ->
                 f"its plate map names the assay '{named}', which is not configured",
                 remedy=f"assays here are {known}",
             )
-        return named
+        return str(named)
     fitting = [
         name
         for name, assay in configuration.assays.items()

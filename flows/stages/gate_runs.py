@@ -10,17 +10,20 @@ from collections.abc import Sequence
 import pandas as pd
 
 from checks.assess import GateRun
+from checks.structure import StructureReport
 from flows.site.durable import write_durably
 from flows.site.layout import Site
 from models.identity import canonical_json, content_id, result_id
 from models.tables import GATE_RUNS
 
-STRUCTURE_RECIPE = "structure"
+NO_RECIPE = "none"
 
 
-def structure_runs(documents: Sequence[GateRun]) -> list[GateRun]:
-    """Runs of the structure suite, which no recipe changes."""
-    return list(documents)
+def structure_run(report: StructureReport) -> GateRun:
+    """A run of the structure suite, which no recipe changes."""
+    return GateRun(
+        "structure", NO_RECIPE, report.expectation_count, report.row_count, report.success, report.document
+    )
 
 
 def keep_runs(site: Site, pass_id: str, runs: Sequence[GateRun], analysis_ids: Sequence[str]) -> pd.DataFrame:
@@ -41,7 +44,7 @@ def keep_runs(site: Site, pass_id: str, runs: Sequence[GateRun], analysis_ids: S
     for run in runs:
         content = canonical_json(run.document).encode()
         gate_run_id = result_id("gate_run", run.suite, run.recipe_id, list(analysis_ids), content_id(content))
-        path = site.gate_runs / f"{gate_run_id}.json"
+        path = site.gate_documents / f"{gate_run_id}.json"
         write_durably(path, content, mode=0o444)
         rows.append(
             {

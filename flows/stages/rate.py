@@ -157,7 +157,7 @@ def _rate_settings(rated: pd.DataFrame, plates: Sequence[PlateWork]) -> RateSett
 
     def limit(gate: str, setting: str) -> np.ndarray:
         of_plates = np.array([float(work.recipe.limits[gate][setting]) for work in plates])
-        return of_plates[plate]
+        return np.asarray(of_plates[plate])
 
     return RateSettings(
         depletion_limit=limit("substrate_depletion", "limit"),

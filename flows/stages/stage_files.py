@@ -12,11 +12,13 @@ from itertools import islice
 
 import pandas as pd
 
+from checks.assess import GateRun
 from checks.structure import check_structure
 from flows.lake import write_rows
 from flows.site.archive import quarantine
 from flows.site.configuration import Configuration
 from flows.site.layout import Site
+from flows.stages.gate_runs import structure_run
 from flows.stages.pull import PulledFile
 from flows.stages.read import (
     StagedRead,
@@ -34,20 +36,20 @@ EXPORTS_A_CHUNK = 40
 
 @dataclass
 class StagedFiles:
-    """Rows that staging adds to the warehouse, and the structure suite's documents.
+    """Rows that staging adds to the warehouse, and the structure suite's runs.
 
     Attributes
     ----------
     files, plate_maps, plate_reads
         Rows of the tables of the same names; `files` without its pass.
-    structure
-        One document a chunk: suite and result of the structure checks.
+    runs
+        The structure suite's runs, one a chunk of exports.
     """
 
     files: list[dict[str, object]] = field(default_factory=list)
     plate_maps: list[dict[str, object]] = field(default_factory=list)
     plate_reads: list[dict[str, object]] = field(default_factory=list)
-    structure: list[dict[str, object]] = field(default_factory=list)
+    runs: list[GateRun] = field(default_factory=list)
 
     def count(self, kind: str) -> int:
         """Files of this kind: export, plate_map or quarantined."""
@@ -85,11 +87,12 @@ def _read_chunk(
 ) -> Iterator[_ReadExport]:
     for file in chunk:
         try:
-            if is_plate_map(file.content, file.file_name):
-                _accept_map(staged, file)
+            content = file.content
+            if is_plate_map(content, file.file_name):
+                _accept_map(staged, file, content)
                 continue
-            profile = choose_profile(file.content, file.file_name, configuration.profiles)
-            reads = read_export(file.content, file.file_name, configuration.profiles[profile])
+            profile = choose_profile(content, file.file_name, configuration.profiles)
+            reads = read_export(content, file.file_name, configuration.profiles[profile])
         except HalfsatError as error:
             _refuse(site, staged, file, str(error))
             continue
@@ -97,8 +100,8 @@ def _read_chunk(
         yield _ReadExport(file, profile, plates)
 
 
-def _accept_map(staged: StagedFiles, file: PulledFile) -> None:
-    plate_maps = read_plate_map(file.content, file.file_name)
+def _accept_map(staged: StagedFiles, file: PulledFile, content: bytes) -> None:
+    plate_maps = read_plate_map(content, file.file_name)
     staged.files.append(_file_row(file, "plate_map"))
     staged.plate_maps.extend(
         {
@@ -121,8 +124,9 @@ def _stage_exports(site: Site, staged: StagedFiles, exports: Sequence[_ReadExpor
     }
     if not frames:
         return
-    report = check_structure(pd.concat(frames.values(), ignore_index=True))
-    staged.structure.append(report.document)
+    formats = {name: read.plate_format for export in exports for name, read in export.plates.items()}
+    report = check_structure(pd.concat(frames.values(), ignore_index=True), formats)
+    staged.runs.append(structure_run(report))
     for export in exports:
         reasons = [
             reason for plate_read_id in export.plates for reason in report.reasons.get(plate_read_id, ())
@@ -148,7 +152,7 @@ def _file_row(
         "file_id": file.file_id,
         "kind": kind,
         "file_name": file.file_name,
-        "byte_count": len(file.content),
+        "byte_count": file.path.stat().st_size,
         "received_at": file.received_at,
         "profile": profile,
         "reason": reason,
