@@ -2,8 +2,8 @@
 
 The rules run row by row in numpy, and Great Expectations holds their counts: one row for each well and
 channel of a plate read. It takes 4.9 s for 400,000 rows with ids of flagged ones, and a batch of 40
-plates has 920,000; over the 15,000 wells of the batch it takes a fraction of a second and says as much. What breaks a
-rule here cannot be staged: lateness, gaps and lost reads are for the gates.
+plates has 920,000; over the 15,000 wells of the batch it takes a fraction of a second and says as much.
+What breaks a rule here cannot be staged: lateness, gaps and lost reads are for the gates.
 """
 
 from __future__ import annotations

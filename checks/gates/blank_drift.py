@@ -74,7 +74,8 @@ def metrics(data: GateInput) -> pd.DataFrame:
         wells,
         reason,
         raw_rate_um_per_s=raw,
-        blank_rate_um_per_s=blank,
+        # A share of a rate that is noise must not be flagged beside being not assessed.
+        blank_rate_um_per_s=np.where(reason == "", blank, np.nan),
         blank_t=_over(blank, blank_se),
         highest_rate_um_per_s=highest,
     )
