@@ -1,7 +1,7 @@
 """A site's configuration as records: settings, export profiles, assays, gate limits, from TOML files.
 
-Says what is wrong with a file in words that name file, key and what is allowed. What the records mean is their
-own business.
+Says what is wrong with a file in words that name file, key and what is allowed. What the records mean is
+their own business.
 """
 
 from __future__ import annotations
@@ -57,8 +57,8 @@ def load_configuration(config_dir: Path) -> Configuration:
     Raises
     ------
     ConfigurationError
-        If a file is missing, is no TOML, or a key is unknown, missing or wrong; one line for all that is wrong
-        with a file.
+        If a file is missing, is no TOML, or a key is unknown, missing or wrong; one line for all that is
+        wrong with a file.
     """
     if not config_dir.is_dir():
         raise ConfigurationError(

@@ -1,1 +1,1 @@
-"""Pydantic records of everything a person writes down: assays, export profiles, site settings, plate-map units."""
+"""Pydantic records of what a person writes down: assays, export profiles, site settings; and its units."""

@@ -64,8 +64,8 @@ class TextFile(Record):
     encoding: Literal["auto", "utf-8", "utf-16", "utf-16-le", "utf-16-be", "latin-1"] = "auto"
     """Encoding; auto goes by the byte order mark, then tries utf-8, then latin-1."""
     delimiter: RawText = "auto"
-    """What stands between fields: any text, or tab, space, whitespace (runs of blanks), or auto, which chooses
-    among comma, semicolon, tab and bar."""
+    """What stands between fields: any text, or tab, space, whitespace (runs of blanks), or auto, which
+    chooses among comma, semicolon, tab and bar."""
     quote: RawText = Field(default='"', max_length=1)
     """What may stand round a field."""
 
@@ -154,11 +154,11 @@ class TimeSource(Record):
     notation: Notation | None = None
     """s, min, h or ms; mm:ss; hh:mm:ss (past 24 h too, and d.hh:mm:ss); or timestamp."""
     format: str | None = Field(default=None, min_length=2)
-    """How a timestamp is written, such as %Y-%m-%d %H:%M:%S. A clock time without a date may pass midnight."""
+    """How a timestamp is written, such as %Y-%m-%d %H:%M:%S; a clock time without date may pass midnight."""
     interval_s: float | None = Field(default=None, gt=0)
     """Time between reads, s, where the file has no times: reads then count from 0 in file order."""
     pattern: Regex | None = None
-    """Finds the time, group `time`, within a header cell (wells_by_rows) or in a line above a grid (grids)."""
+    """Finds the time, group `time`, in a header cell (wells_by_rows) or in a line above a grid (grids)."""
 
     @model_validator(mode="after")
     def _one_source(self) -> TimeSource:
@@ -210,7 +210,8 @@ class Wells(Record):
     """How wells are named."""
 
     pattern: Regex | None = None
-    """Takes a well's name apart into the groups `row` and `column`, letters or numbers each; left out, A1 or A01."""
+    """Takes a well's name apart into the groups `row` and `column`, letters or numbers each; left out, the
+    names are A1 or A01."""
 
     @model_validator(mode="after")
     def _groups(self) -> Wells:

@@ -233,8 +233,8 @@ def _refuse_torn(reading: Reading, frames: Sequence[_Frame]) -> None:
     for frame in frames:
         if frame.grid.wells != usual:
             raise ExportError(
-                f"this grid has {len(frame.grid.rows)} rows and {len(frame.grid.columns)} columns where the first "
-                f"has {len(usual[0])} and {len(usual[1])}, or other wells",
+                f"this grid has {len(frame.grid.rows)} rows and {len(frame.grid.columns)} columns "
+                f"where the first has {len(usual[0])} and {len(usual[1])}, or other wells",
                 where=reading.sheet.where(frame.grid.first),
                 remedy="the file may be cut off: export it again; if this is no grid of reads, state "
                 "table.end_pattern",

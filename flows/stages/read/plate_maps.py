@@ -1,7 +1,7 @@
 """Plate maps: what each well of a plate holds, from CSV or xlsx with units in the header.
 
-Every value is checked before it is believed; concentrations come out in the units of the tables. Knows nothing
-of exports.
+Every value is checked before it is believed; concentrations come out in the units of the tables. Knows
+nothing of exports.
 """
 
 from __future__ import annotations
@@ -49,9 +49,8 @@ class PlateMap:
     assay
         Name of the assay, where the map states it.
     wells
-        Columns well, role, lot, substrate_um, enzyme_nm, enzyme_ng_per_ml, modulator, modulator_um, product_um,
-        row by row over the plate; texts None and numbers NaN where the map leaves them empty. The substrate of
-        an enzyme_blank is 0: it holds everything but substrate.
+        The columns of WELL_COLUMNS, row by row over the plate; texts None and numbers NaN where the map
+        leaves them empty. The substrate of an enzyme_blank is 0: it holds everything but substrate.
     """
 
     plate_id: str
@@ -81,8 +80,8 @@ def read_plate_map(content: bytes, file_name: str) -> list[PlateMap]:
     Raises
     ------
     PlateMapError
-        If a column, role, unit, well or number is unknown, a well stands twice, or a row contradicts its role.
-        The message names file and line, and the nearest name.
+        If a column, role, unit, well or number is unknown, a well stands twice, or a row contradicts its
+        role. The message names file and line, and the nearest name.
     """
     for sheet in _sheets(content, file_name):
         header_line = _header_line(sheet)

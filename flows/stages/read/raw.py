@@ -264,8 +264,8 @@ def _refuse_doubled(
         f"well {_name_at(int(raw.position[first]))} is read twice at {times[first]:g} s in channel "
         f"{raw.channels[int(raw.channel[first])]}, first in {_spot(raw, first, sheet)}",
         where=place(file_name, sheet, int(raw.line[second]), int(raw.field[second])),
-        remedy="if these are two plates or two channels, state [blocks], columns.plate or columns.channel in the "
-        "profile",
+        remedy="if these are two plates or two channels, state [blocks], columns.plate or columns.channel "
+        "in the profile",
     )
 
 

@@ -1,11 +1,12 @@
 """One table of a sheet as arrays: fast where it is regular, cell by cell where it is not.
 
 A regular text table goes through Arrow's CSV reader. Whatever that refuses (blanks round tokens, thousands,
-ragged rows) is read field by field, which also finds the place to name in the message. Knows nothing of plates.
+ragged rows) is read field by field, which also finds the place to name. Knows nothing of plates.
 """
 
 from __future__ import annotations
 
+import io
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -129,7 +130,7 @@ def _load_regular(
     span = sheet.span(first, last)
     try:
         table = pyarrow.csv.read_csv(
-            pa.BufferReader(span),
+            io.BytesIO(span),
             read_options=pyarrow.csv.ReadOptions(column_names=names, block_size=_BLOCK_BYTES),
             parse_options=pyarrow.csv.ParseOptions(delimiter=sheet.separator, quote_char=sheet.quote),
             convert_options=pyarrow.csv.ConvertOptions(
@@ -179,7 +180,7 @@ def _tell_tokens(
     """Look up what stands in the cells that gave no number; False where one cannot be looked up."""
     for row in np.flatnonzero((states == MISSING).any(axis=1)):
         fields = sheet.fields(int(lines[row]))
-        for place in np.flatnonzero(states[row] == MISSING):
+        for place in np.flatnonzero(states[row] == MISSING).tolist():
             if numbers[place] >= len(fields):
                 return False
             states[row, place] = token_state(fields[numbers[place]].strip(), rule)
@@ -189,7 +190,7 @@ def _tell_tokens(
 def _text_column(table: pa.Table, name: str) -> TextColumn:
     column = table.column(name).combine_chunks().dictionary_encode()
     codes = column.indices.to_numpy(zero_copy_only=False)
-    return _merged([text.strip() for text in column.dictionary.to_pylist()], codes)
+    return _merged([str(text).strip() for text in column.dictionary.to_pylist()], codes)
 
 
 def _merged(texts: Sequence[str], codes: npt.NDArray[np.int32]) -> TextColumn:

@@ -101,7 +101,7 @@ def _timestamps(texts: Sequence[str], rule: TimeRule) -> Reals:
         # A date cell of a workbook is no text: it arrives in ISO 8601, whatever the profile's format.
         stamps = stamps.fillna(_as_utc(stripped, "ISO8601", rule))
     seconds = (stamps - pd.Timestamp(0, tz="UTC")) / pd.Timedelta(seconds=1)
-    return seconds.to_numpy(dtype=np.float64)
+    return np.asarray(seconds, dtype=np.float64)
 
 
 def _as_utc(texts: pd.Series[str], form: str, rule: TimeRule) -> pd.Series[pd.Timestamp]:

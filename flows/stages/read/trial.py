@@ -135,16 +135,16 @@ def _plate(read: StagedRead) -> TrialPlate:
 
 
 def _first_values(readings: pd.DataFrame) -> Iterator[FirstValue]:
-    for row in readings.head(FIRST_VALUES).itertuples(index=False):
-        signal = float(row.signal)
+    for row in readings.head(FIRST_VALUES).to_dict("records"):
+        signal = float(row["signal"])
         yield FirstValue(
-            channel=str(row.channel),
-            well=str(row.well),
-            time_s=float(row.time_s),
+            channel=str(row["channel"]),
+            well=str(row["well"]),
+            time_s=float(row["time_s"]),
             signal=None if np.isnan(signal) else signal,
-            state=str(row.state),
-            source_row=int(row.source_row),
-            source_column=int(row.source_column),
+            state=str(row["state"]),
+            source_row=int(row["source_row"]),
+            source_column=int(row["source_column"]),
         )
 
 
@@ -154,17 +154,17 @@ def _problems(read: StagedRead, profile: ExportProfile) -> Iterator[str]:
     backwards = readings.loc[groups["time_s"].diff() < 0, "well"]
     if len(backwards):
         yield f"{name}: time runs backwards in {backwards.nunique()} wells, such as {backwards.iloc[0]}"
-    counts = groups.size()
-    if counts.nunique() > 1:
-        few = counts.idxmin()
-        yield f"{name}: wells have {counts.min()} to {counts.max()} reads; {few[1]} has the fewest"
-    empty = groups["signal"].count()
-    unread = [well for (_, well), count in empty.items() if count == 0]
-    if unread:
-        yield f"{name}: {len(unread)} wells have no signal at all, such as {unread[0]}"
-    stated = profile.plate.started_in_preamble or profile.plate.started_in_file_name
-    if stated and read.started_at is None:
+    counts = groups.agg(reads=("read_number", "size"), signals=("signal", "count")).reset_index()
+    most, fewest = counts["reads"].max(), counts["reads"].min()
+    if most != fewest:
+        well = counts.loc[counts["reads"] == fewest, "well"].iloc[0]
+        yield f"{name}: wells have {fewest} to {most} reads; {well} has the fewest"
+    unread = counts.loc[counts["signals"] == 0, "well"]
+    if len(unread):
+        yield f"{name}: {len(unread)} wells have no signal at all, such as {unread.iloc[0]}"
+    if (profile.plate.started_in_preamble or profile.plate.started_in_file_name) and read.started_at is None:
         yield f"{name}: the start of the read is not where the profile looks for it"
-    if profile.columns.temperature is not None or profile.temperature != type(profile.temperature)():
-        if readings["temperature_c"].isna().all():
-            yield f"{name}: the profile names a temperature, and none was found"
+    warmth = profile.temperature
+    stated = profile.columns.temperature or warmth.row or warmth.pattern
+    if stated is not None and readings["temperature_c"].isna().all():
+        yield f"{name}: the profile names a temperature, and none was found"

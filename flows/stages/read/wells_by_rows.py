@@ -96,6 +96,7 @@ def _header_times(reading: Reading, span: TableSpan, fields: list[int]) -> Reals
         raise ExportError(
             f"'{span.header[field][:40]}' heads a column but is no time",
             where=reading.sheet.where(span.header_line, field),
-            remedy="check time.notation and time.pattern in the profile, or list the column under columns.ignore",
+            remedy="check time.notation and time.pattern in the profile, or list the column under "
+            "columns.ignore",
         )
     return times

@@ -24,7 +24,7 @@ _MOST_CELLS = 5_000_000
 _MOST_PARTS = 2_000
 _CELL_PLACE = re.compile(rb"""<(?:\w+:)?(?:c|row)\s[^>]*?\br=["']([A-Z]{0,3})(\d+)["']""")
 # Serial day 0 of a workbook's calendar; a duration of a day or more shown as a clock time counts from here.
-_CALENDAR_START = dt.datetime(1899, 12, 31)
+_CALENDAR_START = dt.datetime.fromisoformat("1899-12-31")
 _FIRST_REAL_YEAR = 1905
 
 
@@ -123,15 +123,16 @@ def _refuse_outsized(content: bytes, file_name: str, kind: type[HalfsatError]) -
 
 def _claimed_cells(part: bytes) -> int:
     """Cells of the rectangle that a sheet's farthest row and column span."""
-    places = _CELL_PLACE.findall(part)
+    places: list[tuple[bytes, bytes]] = _CELL_PLACE.findall(part)
     if not places:
         return 0
-    columns = [
-        sum((letter - 64) * 26**power for power, letter in enumerate(reversed(name)))
-        for name in {c for c, _ in places}
-    ]
-    rows = {row for _, row in places}
-    return max(columns) * max(int(row) for row in rows if len(row) < 12)
+    names = {name for name, _ in places}
+    columns = max(
+        sum((letter - 64) * 26**power for power, letter in enumerate(reversed(name))) for name in names
+    )
+    # A row number of a dozen digits is no row, and int() would take its time over a longer one.
+    rows = max(int(row) if len(row) < 12 else _MOST_CELLS + 1 for _, row in places)
+    return int(max(columns, 1) * rows)
 
 
 def _as_text(cell: object, decimal: str) -> str:
