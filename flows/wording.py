@@ -57,7 +57,7 @@ def number(value: float | None, uncertainty: float | None = None, *, digits: int
     Examples
     --------
     >>> number(82.4317, 3.4), number(82.4317), number(0.00123456, 0.00004), number(147213.0, 6100.0)
-    ('82.4', '82.4', '0.001235', '147 200')
+    ('82.4', '82.4', '0.001235', '1.472e5')
     """
     if value is None or not math.isfinite(value):
         return "–"
@@ -69,10 +69,9 @@ def number(value: float | None, uncertainty: float | None = None, *, digits: int
     else:
         last = exact.adjusted() - digits + 1
     rounded = exact.quantize(Decimal(1).scaleb(last), rounding=ROUND_HALF_EVEN)
-    if last >= 0 and abs(value) >= 1e7:
-        return f"{rounded:.{max(rounded.adjusted() - last, 0)}e}".replace("e+", "e")
-    if abs(value) < 1e-4:
-        return f"{rounded:.{max(rounded.adjusted() - last, 0)}e}"
+    if abs(value) < 1e-4 or (last >= 0 and abs(value) >= 1e5):
+        mantissa, _, exponent = f"{rounded:.{max(rounded.adjusted() - last, 0)}e}".partition("e")
+        return f"{mantissa}e{int(exponent)}"
     whole, _, fraction = f"{rounded:f}".partition(".")
     grouped = f"{int(whole):,}".replace(",", " ") if len(whole.lstrip("-")) > 4 else whole
     return f"{grouped}.{fraction}" if fraction else grouped

@@ -5,7 +5,7 @@ Reads the published warehouse; computes nothing.
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Sequence
 
 import duckdb
 import pandas as pd
@@ -52,10 +52,13 @@ _LOTS = """
     ORDER BY assay, role, lot, constant
 """
 
-_AFFINITY = ("km", "k_half")
-_TURNOVER = ("kcat", "specific_activity", "vmax")
-_EFFICIENCY = ("kcat_per_km", "kcat_per_k_half")
-_SHAPE = ("hill_n",)
+# A column of the lots' table holds the first of these constants that a lot has.
+_COLUMNS = (
+    ("km", "k_half"),
+    ("kcat", "specific_activity", "vmax"),
+    ("kcat_per_km", "kcat_per_k_half"),
+    ("hill_n",),
+)
 
 
 def show_pass(screen: Console, site: Site, report: PassReport) -> None:
@@ -91,18 +94,12 @@ def show_lots(screen: Console, site: Site) -> None:
     if lots.empty:
         screen.print("No lot has a constant yet.")
         return
-    headings = [
-        ("", "left"),
-        ("lot", "left"),
-        ("plates", "right"),
-        ("Km or K0.5", "left"),
-        ("turnover", "left"),
-        ("kcat / K", "left"),
-        ("n", "left"),
-    ]
     for assay, of_assay in lots.groupby("assay", sort=True):
         screen.print(Text(str(assay), style="bold"))
-        lines = [_lot_row(of_lot) for _, of_lot in of_assay.groupby(["role", "lot"], sort=True)]
+        columns = [choice for choice in _COLUMNS if set(choice) & set(of_assay["constant"])]
+        headings = [("", "left"), ("lot", "left"), ("plates", "right")]
+        headings += [(_column_head(of_assay, choice), "left") for choice in columns]
+        lines = [_lot_row(of_lot, columns) for _, of_lot in of_assay.groupby(["role", "lot"], sort=True)]
         screen.print(plain_table(headings, lines))
         screen.print()
     screen.print(
@@ -182,27 +179,31 @@ def _place(plate_id: str, well: object, lot: object) -> str:
     return f"{plate_id}\n{detail}" if isinstance(detail, str) else plate_id
 
 
-def _lot_row(of_lot: pd.DataFrame) -> tuple[str, ...]:
+def _column_head(of_assay: pd.DataFrame, choice: Sequence[str]) -> str:
+    """Signs of the constants that a column holds, and below them their unit."""
+    present = of_assay[of_assay["constant"].isin(choice)]
+    signs = [constant_symbol(name) for name in choice if name in set(present["constant"])]
+    units = [unit_symbol(unit) or "1" for unit in present["unit"].unique()]
+    return f"{', '.join(signs)}\n{', '.join(units)}"
+
+
+def _lot_row(of_lot: pd.DataFrame, columns: Sequence[Sequence[str]]) -> tuple[str, ...]:
     first = of_lot.iloc[0]
     name = f"{first['lot']}\nreference" if first["role"] == "reference" else str(first["lot"])
     return (
         MARKS[str(first["standing"])],
         name,
         str(int(of_lot["plate_read_count"].max())),
-        *(_constant(of_lot, choice) for choice in (_AFFINITY, _TURNOVER, _EFFICIENCY, _SHAPE)),
+        *(_constant(of_lot, choice) for choice in columns),
     )
 
 
-def _constant(of_lot: pd.DataFrame, choice: Iterable[str]) -> str:
+def _constant(of_lot: pd.DataFrame, choice: Sequence[str]) -> str:
     """The first of these constants that the lot has, its interval on a second line."""
     for constant in choice:
         found = of_lot[of_lot["constant"] == constant]
         if not found.empty:
             row = found.iloc[0]
-            value = number(row["value"], row["standard_error"])
-            unit = unit_symbol(row["unit"])
-            sign = "" if constant in (*_EFFICIENCY, *_SHAPE) else f"{constant_symbol(constant)} "
-            space = "" if unit.startswith("/") else " "
-            limits = interval(row["low"], row["high"], row["standard_error"])
-            return f"{sign}{value}{space}{unit}".strip() + f"\n{limits}"
+            error = row["standard_error"]
+            return f"{number(row['value'], error)}\n{interval(row['low'], row['high'], error)}"
     return "–"

@@ -39,6 +39,7 @@ _IDS: dict[str, tuple[str, str]] = {
 _HOW_TO_FIND = (
     'ids are listed by: halfsat history "SELECT estimate_id, lot, constant, value FROM current_estimates"'
 )
+_FINDING_MARKS = {"hold": MARKS["held"], "void": MARKS["void"], "none": "·"}
 _CONDITIONS = {
     "unchanged": "bytes unchanged",
     "changed": "BYTES CHANGED since they were written",
@@ -142,7 +143,7 @@ class _Tracer:
 
     def fit(self, fit_id: str) -> Node:
         row = self._row("SELECT * FROM fits WHERE fit_id = ?", fit_id)
-        details = [f"{row['point_count']} rates, {row['degrees_of_freedom']} degrees of freedom"]
+        details = [f"{row['point_count']} rates, degrees of freedom: {row['degrees_of_freedom']}"]
         details += [] if row["converged"] else ["the solver did not reach the optimum"]
         details += [] if row["trusted"] else [f"uncertainty not to be trusted: {row['distrust']}"]
         chosen = "chosen" if row["chosen"] else "not chosen"
@@ -214,8 +215,8 @@ class _Tracer:
             kind = "export" if row["kind"] == "export" else "plate map"
         found = archive.condition(self.site, file_id)
         details = [
-            f"{number(_real(row['byte_count']), digits=15)} byte, received {_time(row['received_at'])}",
-            f"SHA-256 {file_id}",
+            f"{row['byte_count']} byte, received {_time(row['received_at'])}",
+            *_digest_lines(file_id),
             _CONDITIONS[found],
         ]
         if row["reason"] is not None:
@@ -268,7 +269,7 @@ class _Tracer:
             return []
         path, sha256 = file
         found = lake.condition(self.site, path, sha256)
-        details = (f"SHA-256 {sha256}", _CONDITIONS[found])
+        details = (*_digest_lines(sha256), _CONDITIONS[found])
         facts: tuple[tuple[str, Fact], ...] = (("path", path), ("sha256", sha256), ("condition", found))
         return [Node("readings", sha256, _short_path(path), details, facts)]
 
@@ -290,7 +291,7 @@ class _Tracer:
         return seen
 
     def _rows(self, sql: str, *given: str | None) -> list[Row]:
-        table = self.connection.execute(sql, list(given)).to_arrow_table()
+        table = self.connection.sql(sql, params=list(given)).to_arrow_table()
         return [] if table is None else list(table.to_pylist())
 
     def _row(self, sql: str, wanted: str) -> Row:
@@ -304,7 +305,8 @@ class _Tracer:
 
 
 def _rate(row: Row, span: Span | None, wells: str) -> Node:
-    title = f"{MARKS[str(row['standing'])]} {row['well']}  {number(_real(row['substrate_um']))} µM"
+    substrate = row["substrate_um"] if row["mean_substrate_um"] is None else row["mean_substrate_um"]
+    title = f"{MARKS[str(row['standing'])]} {row['well']}  {number(_real(substrate))} µM"
     value, error = _real(row["v0_um_per_s"]), _real(row["v0_se_um_per_s"])
     title += "  no rate" if value is None else f"  v {number(value, error)} ± {number(error, digits=2)} µM/s"
     if wells == "clear" and row["standing"] != "clear":
@@ -314,13 +316,12 @@ def _rate(row: Row, span: Span | None, wells: str) -> Node:
         details.append(
             f"reads {row['window_first_read']} to {row['window_last_read']}, "
             f"{number(_real(row['window_start_s']))} to {number(_real(row['window_end_s']))} s"
-            f", mean substrate {number(_real(row['mean_substrate_um']))} µM"
         )
     facts = _facts(row)
     if span is not None:
         details.append(span.text)
         facts = (*facts, *span.facts)
-    return Node("rate", f"{row['analysis_id']}:{row['well']}", title, tuple(details), facts)
+    return Node("rate", f"{row['analysis_id']}:{row['well']}", title, ("; ".join(details),), facts)
 
 
 def _constant(row: Row) -> str:
@@ -352,7 +353,12 @@ def _standing(row: Row) -> str:
 
 
 def _short_path(path: str) -> str:
-    return re.sub(r"([0-9a-f]{12})[0-9a-f]{20,}", r"\1...", path)
+    return re.sub(r"([0-9a-f]{12})[0-9a-f]{20,}", r"\1…", path)
+
+
+def _digest_lines(sha256: str) -> tuple[str, str]:
+    """A SHA-256 in two halves, which fit where the tree is deep."""
+    return f"SHA-256 {sha256[:32]}", f"        {sha256[32:]}"
 
 
 def _time(value: object) -> str:

@@ -42,7 +42,7 @@ class Span:
         """The place as a person reads it."""
         row, column = ("line", "field") if self.sheet is None else ("row", "column")
         place = f"{_range(row, self.first_row, self.last_row)}, "
-        place += f"{_range(column, self.first_column, self.last_column)} of the export"
+        place += f"{_range(column, self.first_column, self.last_column)}"
         return place if self.sheet is None else f"{place}, sheet {self.sheet}"
 
     @property

@@ -13,7 +13,6 @@ from flows.site.layout import Site
 from flows.warehouse.writer import loader
 from models.identity import result_id
 from models.kinetics.laws import law
-from models.kinetics.selection import choose_law
 from models.statistics.lots import combine_plate_reads
 from models.tables import LOT_VALUE_SOURCES, LOT_VALUES
 
@@ -29,8 +28,8 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
     ----------
     current
         A row an estimate of the clear wells of an unmodulated series that is not superseded: columns
-        estimate_id, series_id, plate_read_id, assay, lot, role, law, constant, value, standard_error, low,
-        high, unit, aicc, series_standing, measured_at.
+        estimate_id, series_id, plate_read_id, assay, lot, role, law, chosen, constant, value, standard_error,
+        low, high, unit, series_standing, measured_at.
     pass_id
         The pass that these values are written by.
 
@@ -89,18 +88,20 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
 
 
 def _law_of_lot(rows: pd.DataFrame) -> str:
-    """Law with the most evidence over all plate reads of a lot, among those fitted in every series."""
-    per_series = rows.drop_duplicates(["series_id", "law"]).groupby("law")["aicc"]
-    everywhere = per_series.count() == rows["series_id"].nunique()
-    total = per_series.sum()[everywhere]
-    if total.empty:
-        return str(min(rows["law"], key=lambda name: law(name).rank))
-    return choose_law({str(name): float(aicc) for name, aicc in total.items()})
+    """Law that most of a lot's series chose, among those fitted in every one; the simpler where as many did.
+
+    Not the sum of AICc: plate reads that stray to opposite sides of a simpler law would add up against it.
+    """
+    per_series = rows.drop_duplicates(["series_id", "law"]).groupby("law")
+    fitted, chosen = per_series.size(), per_series["chosen"].sum()
+    everywhere = fitted.index[fitted == rows["series_id"].nunique()]
+    candidates = [str(name) for name in (everywhere if len(everywhere) else fitted.index)]
+    return min(candidates, key=lambda name: (-int(chosen[name]), law(name).rank))
 
 
 _ESTIMATES_OF_LOTS = """
     SELECT e.estimate_id, e.series_id, c.plate_read_id, e.assay, e.lot, s.role, e.law, e.constant,
-           e.value, e.standard_error, e.low, e.high, e.unit, t.aicc,
+           e.chosen, e.value, e.standard_error, e.low, e.high, e.unit,
            s.standing AS series_standing, c.measured_at
     FROM estimates e
     JOIN fits t USING (fit_id)

@@ -52,7 +52,7 @@ class Minimum:
 
 @dataclass
 class _Point:
-    """Where the search of each series stands: constants, cost, gradient, curvature."""
+    """Where the search of each series stands: constants, cost, gradient, curvature (lower triangle)."""
 
     log_constants: Floats
     amplitude: Floats
@@ -60,16 +60,18 @@ class _Point:
     gradient: list[Floats]
     hessian: list[list[Floats]]
 
-    def put(self, where: NDArray[np.intp], other: _Point, source: Flags) -> None:
-        self.log_constants[:, where] = other.log_constants[:, source]
-        self.amplitude[where] = other.amplitude[source]
-        self.cost[where] = other.cost[source]
+    def accept(self, other: _Point, where: Flags) -> None:
+        """Move to another point where that is better."""
+        np.copyto(self.log_constants, other.log_constants, where=where)
+        np.copyto(self.amplitude, other.amplitude, where=where)
+        np.copyto(self.cost, other.cost, where=where)
         for k, row in enumerate(self.hessian):
-            self.gradient[k][where] = other.gradient[k][source]
+            np.copyto(self.gradient[k], other.gradient[k], where=where)
             for m in range(k + 1):
-                row[m][where] = other.hessian[k][m][source]
+                np.copyto(row[m], other.hessian[k][m], where=where)
 
-    def take(self, where: NDArray[np.intp]) -> _Point:
+    def select(self, where: Flags) -> _Point:
+        """Some of the series."""
         return _Point(
             self.log_constants[:, where],
             self.amplitude[where],
@@ -180,64 +182,101 @@ def minimise(
         The best point found in each series.
     """
     count, series_count = start.shape
-    square_sum = sum_rows(weights * rates * rates)
-    free_constant = np.ones((count, series_count))
+    free = np.ones((count, series_count))
     if fixed is not None:
-        free_constant[fixed] = 0.0
+        free[fixed] = 0.0
+    work = _Work(
+        np.arange(series_count), conditions, rates, weights, sum_rows(weights * rates * rates), lower, upper,
+        free, amplitude, np.full(series_count, 1e-8), np.zeros(series_count, dtype=bool),
+    )  # fmt: skip
+    best_logs, best_amplitude = start.copy(), np.zeros(series_count)
+    converged = np.zeros(series_count, dtype=bool)
     with np.errstate(all="ignore"):
-        at = _point(law, conditions, rates, weights, square_sum, start.copy(), amplitude)
-        converged = np.full(series_count, fixed is not None and count == 1)
-        damping = np.full(series_count, 1e-8)
-        active = np.flatnonzero(~converged & np.isfinite(at.cost))
+        at = work.point(law, start.copy())
+        nothing_to_move = fixed is not None and count == 1
+        work.done |= ~np.isfinite(at.cost) | nothing_to_move
+        converged |= np.isfinite(at.cost) & nothing_to_move
         for _ in range(_ITERATIONS):
-            if active.size == 0:
-                break
-            here = at.take(active)
-            low, high = lower[:, active], upper[:, active]
-            free = _movable(here, low, high, free_constant[:, active])
-            step = np.array(_solve(here.hessian, here.gradient, damping[active], free))
-            step = np.clip(step, -_LONGEST_STEP, _LONGEST_STEP)
-            trial_log = np.clip(here.log_constants + step, low, high)
-            moved = trial_log - here.log_constants
-            part = conditions.select(active)
-            fixed_amplitude = None if amplitude is None else amplitude[active]
-            trial = _point(
-                law,
-                part,
-                rates[:, active],
-                weights[:, active],
-                square_sum[active],
-                trial_log,
-                fixed_amplitude,
-            )
-            slack = _ROUNDING * square_sum[active]
-            better = trial.cost <= here.cost + slack
-            small = np.max(np.abs(moved), axis=0) < _STEP_TOLERANCE
-            at.put(active[better], trial, better)
-            damping[active] = np.where(
-                better, np.maximum(damping[active] * 0.1, 1e-12), damping[active] * 30.0
-            )
-            # A step that is refused although tiny is refused by rounding: nothing is left to gain.
-            exhausted = ~better & (np.max(np.abs(moved), axis=0) < 1e-7)
-            done = (better & small & (damping[active] < 1e-2)) | exhausted
-            converged[active[done]] = True
-            active = active[~done & (damping[active] < 1e12)]
-        residual_sum = _residual_sum(law, conditions, rates, weights, at)
-    return Minimum(at.amplitude, at.log_constants, residual_sum, converged)
+            if np.count_nonzero(work.done) * 3 >= work.done.size:
+                best_logs[:, work.series], best_amplitude[work.series] = at.log_constants, at.amplitude
+                at, work = at.select(~work.done), work.select(~work.done)
+                if work.series.size == 0:
+                    break
+            came_to_rest = _advance(law, work, at)
+            converged[work.series[came_to_rest]] = True
+        best_logs[:, work.series], best_amplitude[work.series] = at.log_constants, at.amplitude
+        shape, _ = law.evaluate(conditions, tuple(np.exp(row) for row in best_logs))
+        residual = rates - best_amplitude * shape
+        residual_sum = sum_rows(weights * residual * residual)
+    return Minimum(best_amplitude, best_logs, residual_sum, converged)
 
 
-def _movable(here: _Point, low: Floats, high: Floats, free: Floats) -> Floats:
-    """Constants that may move: not at a limit that the gradient presses against."""
-    gradient = np.array(here.gradient)
-    pressed = ((here.log_constants <= low) & (gradient < 0)) | ((here.log_constants >= high) & (gradient > 0))
-    movable: Floats = np.where(pressed, 0.0, free)
+@dataclass
+class _Work:
+    """The series still searched, with their data; `done` marks those that wait to be put aside."""
+
+    series: NDArray[np.intp]
+    conditions: Conditions
+    rates: Floats
+    weights: Floats
+    square_sum: Floats
+    lower: Floats
+    upper: Floats
+    free: Floats
+    amplitude: Floats | None
+    damping: Floats
+    done: Flags
+
+    def point(self, law: RateLaw, log_constants: Floats) -> _Point:
+        return _point(
+            law, self.conditions, self.rates, self.weights, self.square_sum, log_constants, self.amplitude
+        )
+
+    def select(self, where: Flags) -> _Work:
+        return _Work(
+            self.series[where],
+            self.conditions.select(where),
+            self.rates[:, where],
+            self.weights[:, where],
+            self.square_sum[where],
+            self.lower[:, where],
+            self.upper[:, where],
+            self.free[:, where],
+            None if self.amplitude is None else self.amplitude[where],
+            self.damping[where],
+            self.done[where],
+        )
+
+
+def _advance(law: RateLaw, work: _Work, at: _Point) -> Flags:
+    """One damped Gauss-Newton step of every series at work; returns which have now come to rest."""
+    steps = _solve(at.hessian, at.gradient, work.damping, _movable(at, work))
+    trial_log = np.empty_like(at.log_constants)
+    longest = np.zeros(work.series.size)
+    for k, step in enumerate(steps):
+        wanted = at.log_constants[k] + np.minimum(np.maximum(step, -_LONGEST_STEP), _LONGEST_STEP)
+        trial_log[k] = np.minimum(np.maximum(wanted, work.lower[k]), work.upper[k])
+        longest = np.maximum(longest, np.abs(trial_log[k] - at.log_constants[k]))
+    trial = work.point(law, trial_log)
+    open_still = ~work.done
+    better = (trial.cost <= at.cost + _ROUNDING * work.square_sum) & open_still
+    # A step that is refused although tiny is refused by rounding: nothing is left to gain.
+    exhausted = ~better & (longest < 1e-7)
+    rests = open_still & ((better & (longest < _STEP_TOLERANCE) & (work.damping < 1e-2)) | exhausted)
+    at.accept(trial, better)
+    work.damping = np.where(better, np.maximum(work.damping * 0.1, 1e-12), work.damping * 30.0)
+    work.done |= rests | (work.damping > 1e12)
+    return rests
+
+
+def _movable(at: _Point, work: _Work) -> Floats:
+    """1 for constants that may move, 0 at a limit that the gradient presses against (constants, series)."""
+    movable = work.free.copy()
+    for k, gradient in enumerate(at.gradient):
+        pressed = (at.log_constants[k] <= work.lower[k]) & (gradient < 0)
+        pressed |= (at.log_constants[k] >= work.upper[k]) & (gradient > 0)
+        movable[k][pressed] = 0.0
     return movable
-
-
-def _residual_sum(law: RateLaw, conditions: Conditions, rates: Floats, weights: Floats, at: _Point) -> Floats:
-    shape, _ = law.evaluate(conditions, tuple(np.exp(row) for row in at.log_constants))
-    residual = rates - at.amplitude * shape
-    return sum_rows(weights * residual * residual)
 
 
 def best_start(law: RateLaw, conditions: Conditions, rates: Floats, weights: Floats) -> Floats:

@@ -126,7 +126,7 @@ def predict_courses(
             continue
         packed = pack(np.where(mine, series, -1), mean_substrate_um, rate_um_per_s, standard_error_um_per_s)
         cv = np.full(packed.series.size, _ASSUMED_CV)
-        weighted = fit_with_weights(candidate, packed, cv)
+        weighted = fit_with_weights(candidate, packed, cv, rounds=2)
         fit = weighted.fit
         log_variance = np.where(packed.present, -np.log(np.where(packed.present, weighted.weights, 1.0)), 0.0)
         criterion = aicc(fit.residual_sum, sum_rows(log_variance), fit.point_count, candidate.constant_count)

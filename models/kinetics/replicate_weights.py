@@ -51,7 +51,9 @@ def fitted_rates(packed: Packed, fit: LawFit) -> Floats:
     return rates
 
 
-def fit_with_weights(law: RateLaw, packed: Packed, cv: Floats, start: Floats | None = None) -> WeightedFit:
+def fit_with_weights(
+    law: RateLaw, packed: Packed, cv: Floats, start: Floats | None = None, rounds: int = ROUNDS
+) -> WeightedFit:
     """Fit a law with weights from its own fitted rates, for a known CV.
 
     Parameters
@@ -64,6 +66,8 @@ def fit_with_weights(law: RateLaw, packed: Packed, cv: Floats, start: Floats | N
         Coefficient of variation of each series' plate [1], shape (series,).
     start
         Constants to start from, shape (constants, series); None for the law's own starts.
+    rounds
+        Rounds of weights and fit.
 
     Returns
     -------
@@ -73,7 +77,7 @@ def fit_with_weights(law: RateLaw, packed: Packed, cv: Floats, start: Floats | N
         first_guess = variances(packed, np.max(np.abs(packed.rate), axis=0) * np.ones_like(packed.rate), cv)
         start = fit_law(law, packed.conditions, packed.rate, to_weights(packed, first_guess)).constants
     fit, weights = None, np.empty(0)
-    for _ in range(ROUNDS):
+    for _ in range(rounds):
         fitted = law.rate(packed.conditions, tuple(start))
         weights = to_weights(packed, variances(packed, fitted, cv))
         fit = fit_law(law, packed.conditions, packed.rate, weights, start)

@@ -25,7 +25,7 @@ _LAG_TIME_CONSTANTS = 3.0
 _STRETCHES = (1.0, 0.5, 0.25)
 """Shares of the reads before the conversion limit on which curvature is looked for: a short lag is lost in a
 long one."""
-_FEWEST_FOR_CURVATURE = 6
+_FEWEST_FOR_CURVATURE = 5
 _STEADY_SHARE = 0.15
 """A burst goes on at more than this share of its first rate; what falls further is falling."""
 
@@ -123,11 +123,14 @@ def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
 
     fits = windows_from(curves.time_s, curves.net_um, first)
     shortest_end = _read_with_count(running, curves.shortest_points)
-    before = np.where(curves.zero_is_blank, _own_before(fits, shortest_end, first_s), 0.0)
-    end = _conversion_end(curves, course, fits, first_s, before, last)
+    before = np.where(
+        curves.zero_is_blank, _before_first_read(curves, course, fits.pick(shortest_end).at(first_s)), 0.0
+    )
+    consumed = course.consumed(curves.time_s, first_s, curves.substrate_um - before)
+    end = _conversion_end(curves, course, fits, first_s, before, consumed, last)
     end = np.where(curves.plain, last, np.maximum(end, shortest_end))
 
-    predicted = _depletion(curves, course, fits.pick(end), first_s, before)
+    predicted = _depletion(curves, course, fits.pick(end), first_s, before, consumed)
     excess = windows_from(curves.time_s, curves.net_um - predicted, first)
     noise = _read_variance(fits.pick(end), readable)
     early = _bend(fits.pick(end), excess.pick(end), noise, course.known)
@@ -142,11 +145,11 @@ def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
         start_s = curves.time_s[start, wells]
         late_fits = windows_from(curves.time_s, curves.net_um, start)
         done = late_fits.pick(lag_shortest).at(start_s) - np.where(curves.zero_is_blank, 0.0, early_um)
-        late_end = _conversion_end(curves, course, late_fits, start_s, np.where(lagging, done, before), last)
+        before = np.where(lagging, done, before)
+        consumed = course.consumed(curves.time_s, start_s, curves.substrate_um - before)
+        late_end = _conversion_end(curves, course, late_fits, start_s, before, consumed, last)
         end = np.where(lagging, np.maximum(late_end, lag_shortest), end)
-        late_predicted = _depletion(
-            curves, course, late_fits.pick(end), start_s, np.where(lagging, done, before)
-        )
+        late_predicted = _depletion(curves, course, late_fits.pick(end), start_s, before, consumed)
         late_excess = windows_from(curves.time_s, curves.net_um - late_predicted, start)
         shortest_end = np.where(lagging, lag_shortest, shortest_end)
 
@@ -195,22 +198,38 @@ def _early_mean(net_um: Floats, running: Integers, usable: Flags) -> Floats:
     return mean
 
 
-def _own_before(fits: WindowFits, shortest_end: Integers, first_s: Floats) -> Floats:
-    """What was consumed before the first read, counted from the blank [umol/L]."""
-    return fits.pick(shortest_end).at(first_s)
+def _before_first_read(curves: Curves, course: SeriesCourse, own_um: Floats) -> Floats:
+    """What was consumed before the first read, counted from the blank [umol/L], shape (wells,).
+
+    Wells of a series were started alike, so the time that the consumption stands for is pooled over them: a
+    well's own offset is noisy, goes against its own slope, and must not choose its window.
+    """
+    before = np.where(np.isfinite(own_um), own_um, 0.0)
+    rate = course.rate(curves.substrate_um)
+    for _, wells, _ in course.laws:
+        ordered = wells[np.lexsort((before[wells], rate[wells]))]
+        time_s = float(np.sum(before[ordered] * rate[ordered]) / np.sum(rate[ordered] ** 2))
+        before[wells] = np.minimum(max(time_s, 0.0) * rate[wells], curves.substrate_um[wells])
+    return before
 
 
 def _conversion_end(
-    curves: Curves, course: SeriesCourse, fits: WindowFits, start_s: Floats, before: Floats, last: Integers
+    curves: Curves,
+    course: SeriesCourse,
+    fits: WindowFits,
+    start_s: Floats,
+    before: Floats,
+    consumed: Floats,
+    last: Integers,
 ) -> Integers:
     """Last read at which conversion stays within the limit: predicted, or by the line of the well itself."""
-    consumed = before + course.consumed(curves.time_s, start_s, curves.substrate_um - before)
     with np.errstate(invalid="ignore"):
         own = np.where(
             curves.zero_is_blank, fits.at(fits.end_s), before + fits.slope * (fits.end_s - start_s)
         )
-        consumed = np.where(course.known, consumed, own)
-        beyond = consumed > curves.depletion_limit * curves.consumable_um
+        beyond = (
+            np.where(course.known, before + consumed, own) > curves.depletion_limit * curves.consumable_um
+        )
     reads = np.arange(consumed.shape[0])[:, None]
     within = ~beyond & (reads <= last) & np.isfinite(curves.net_um)
     final = within.shape[0] - 1 - np.argmax(within[::-1], axis=0)
@@ -218,18 +237,21 @@ def _conversion_end(
 
 
 def _depletion(
-    curves: Curves, course: SeriesCourse, line: WindowFits, start_s: Floats, before: Floats
+    curves: Curves,
+    course: SeriesCourse,
+    line: WindowFits,
+    start_s: Floats,
+    before: Floats,
+    consumed: Floats,
 ) -> Floats:
-    """Product course [umol/L] that depletion alone gives: predicted, or first-order decay at the well's own
-    rate."""
+    """Product [umol/L] that depletion alone gives: predicted, or first-order at the well's own rate."""
     left = curves.substrate_um - before
-    predicted = course.consumed(curves.time_s, start_s, left)
     with np.errstate(all="ignore"):
         turnover = np.maximum(line.slope, 0.0) / np.maximum(left - (line.mean - line.at(start_s)), 0.1 * left)
         since = np.maximum(curves.time_s - start_s, 0.0)
         first_order = left * -np.expm1(-turnover * since)
     usable = np.isfinite(first_order) & np.isfinite(curves.consumable_um)
-    return np.where(course.known, predicted, np.where(usable, first_order, 0.0))
+    return np.where(course.known, consumed, np.where(usable, first_order, 0.0))
 
 
 def _read_variance(line: WindowFits, readable: Flags) -> Floats:

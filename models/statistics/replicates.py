@@ -1,7 +1,8 @@
 """How much replicate rates scatter beyond their own standard errors: a coefficient of variation a plate.
 
-Solved as a moment equation in the manner of Paule and Mandel 1982 (doi:10.6028/jres.087.022): the excess that
-makes the weighted scatter within the groups equal to its degrees of freedom.
+By restricted maximum likelihood within the groups (Patterson and Thompson 1971,
+doi:10.1093/biomet/58.3.545), which lets each level speak by what it can tell: slow wells, whose own standard
+errors drown the scatter, hardly at all.
 """
 
 from __future__ import annotations
@@ -45,32 +46,34 @@ def pooled_cv(
     members = np.bincount(group, minlength=group_count)
     plate_of_group = np.zeros(group_count, dtype=np.intp)
     plate_of_group[group] = plate
-    degrees = np.bincount(plate_of_group, np.maximum(members - 1.0, 0.0), minlength=plate_count).astype(
-        np.float64
-    )
+    degrees = _sum_by(plate_of_group, np.maximum(members - 1.0, 0.0), plate_count)
     low, high = np.zeros(plate_count), np.full(plate_count, _LARGEST_CV**2)
     variance = standard_error**2
     scale = _group_mean(group, size, np.ones_like(size), group_count)[group] ** 2
 
-    def excess(cv_square: Floats) -> Floats:
-        total = variance + cv_square[plate] * scale
-        weight = 1.0 / np.maximum(total, 1e-300)
+    def score(cv_square: Floats) -> Floats:
+        """Derivative of the restricted log-likelihood by the square of the CV, times two."""
+        weight = 1.0 / np.maximum(variance + cv_square[plate] * scale, 1e-300)
         centred = residual - _group_mean(group, residual, weight, group_count)[group]
-        scatter: Floats = np.bincount(plate, weight * centred**2, minlength=plate_count) - degrees
-        return scatter
+        own_share = weight / _sum_by(group, weight, group_count)[group]
+        terms = scale * weight * (weight * centred**2 - (1.0 - own_share))
+        return _sum_by(plate, terms, plate_count)
 
-    none = excess(low) <= 0
+    none = score(low) <= 0
     for _ in range(_BISECTIONS):
         middle = 0.5 * (low + high)
-        above = excess(middle) > 0
+        above = score(middle) > 0
         low, high = np.where(above, middle, low), np.where(above, high, middle)
     cv = np.where(none | (degrees == 0), 0.0, np.sqrt(0.5 * (low + high)))
     return cv, degrees
 
 
 def _group_mean(group: Integers, values: Floats, weights: Floats, group_count: int) -> Floats:
-    total = np.bincount(group, weights, minlength=group_count)
-    summed = np.bincount(group, weights * values, minlength=group_count)
     with np.errstate(all="ignore"):
-        mean: Floats = summed / total
+        mean: Floats = _sum_by(group, weights * values, group_count) / _sum_by(group, weights, group_count)
     return mean
+
+
+def _sum_by(group: Integers, values: Floats, count: int) -> Floats:
+    """Sum of the values of each group, added one after another in the order of the rows."""
+    return np.bincount(group, values, minlength=count).astype(np.float64)
