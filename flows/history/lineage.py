@@ -255,7 +255,7 @@ class _Tracer:
             Node(
                 "finding",
                 str(row["finding_id"]),
-                f"{row['gate']} ({row['severity']})"
+                f"{_FINDING_MARKS[str(row['severity'])]} {row['gate']}"
                 + ("" if row["well"] is None else f", well {row['well']}"),
                 (str(row["sentence"]),),
                 _facts(row),
