@@ -41,7 +41,8 @@ def plates_and_styles(draw: st.DrawFn, container: str = "text") -> tuple[Plate, 
     steps = draw(st.lists(st.integers(1, 40_000), min_size=1, max_size=5))
     times = [float(sum(steps[: n + 1])) for n in range(len(steps))]
     cells = {
-        well: draw(st.lists(number_texts(decimal), min_size=len(times), max_size=len(times))) for well in wells
+        well: draw(st.lists(number_texts(decimal), min_size=len(times), max_size=len(times)))
+        for well in wells
     }
     warm = draw(st.booleans())
     temperatures = [f"{25 + n / 10:.1f}".replace(".", decimal) for n in range(len(times))] if warm else None
