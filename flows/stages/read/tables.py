@@ -262,5 +262,6 @@ def unreadable_number(sheet: Sheet, index: int, field: int, text: str) -> Export
         f"'{text.strip()[:40]}' is not a number",
         where=sheet.where(index, field),
         remedy="if it stands for an overflow or a missing read, list it under values.overflow or "
-        "values.missing in the profile; otherwise check values.decimal",
+        "values.missing in the profile; if a block after the table begins here, state table.end or "
+        "table.end_pattern; otherwise check values.decimal",
     )
