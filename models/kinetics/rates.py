@@ -63,7 +63,6 @@ class _Measured:
     standard_error: Floats
     blank_rate: Floats
     blank_error: Floats
-    zero_um: Floats
     mean_substrate_um: Floats
     conversion: Floats
     shortest_conversion: Floats
@@ -184,9 +183,6 @@ def _measure(curves: Curves, blanks: MatchedBlanks, choice: Choice) -> _Measured
     with np.errstate(invalid="ignore"):
         own_variance = steadied.variance * line.slope_factor
         standard_error = np.sqrt(own_variance + np.where(np.isfinite(blank_error), blank_error, 0.0) ** 2)
-    zero = np.where(
-        curves.zero_is_blank, 0.0, np.where(choice.lagging, choice.early_um, line.at(choice.first_s))
-    )
     shortest_end = curves.time_s[choice.shortest_end, np.arange(choice.start.size)]
     return _Measured(
         line=line,
@@ -194,10 +190,9 @@ def _measure(curves: Curves, blanks: MatchedBlanks, choice: Choice) -> _Measured
         standard_error=standard_error,
         blank_rate=blank_rate,
         blank_error=blank_error,
-        zero_um=zero,
-        mean_substrate_um=np.where(curves.plain, np.nan, curves.substrate_um - (line.mean - zero)),
-        conversion=(line.at(line.end_s) - zero) / curves.consumable_um,
-        shortest_conversion=(line.at(shortest_end) - zero) / curves.consumable_um,
+        mean_substrate_um=np.where(curves.plain, np.nan, curves.substrate_um - (line.mean - choice.zero_um)),
+        conversion=(line.at(line.end_s) - choice.zero_um) / curves.consumable_um,
+        shortest_conversion=(line.at(shortest_end) - choice.zero_um) / curves.consumable_um,
     )
 
 

@@ -52,7 +52,11 @@ class Curves:
 
 @dataclass(frozen=True)
 class Choice:
-    """The window of each well and what was seen of its curvature, shape (wells,) each."""
+    """The window of each well and what was seen of its curvature, shape (wells,) each.
+
+    `zero_um` is where the curve stands when nothing is consumed yet: 0 where product counts from the blank, else
+    the first read, smoothed.
+    """
 
     start: Integers
     end: Integers
@@ -60,7 +64,7 @@ class Choice:
     readable: Flags
     usable_count: Floats
     first_s: Floats
-    early_um: Floats
+    zero_um: Floats
     lagging: Flags
     lag_s: Floats
     slope_change: Floats
@@ -155,6 +159,8 @@ def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
 
     end = _straight_end(curves, late_fits, late_excess, noise, course.known, shortest_end, end)
     bend = _bend(late_fits.pick(end), late_excess.pick(end), noise, course.known)
+    # The line alone would start too high by what depletion bends the curve within the window.
+    zero = np.where(course.known, late_excess.pick(end).at(first_s), late_fits.pick(end).at(first_s))
     bursts = np.zeros(wells.size, dtype=bool)
     for well in np.flatnonzero(falls):
         bursts[well] = _is_burst(curves.time_s[:, well], curves.net_um[:, well], usable[:, well], last[well])
@@ -167,7 +173,7 @@ def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
         readable=readable,
         usable_count=usable_count.astype(np.float64),
         first_s=first_s,
-        early_um=early_um,
+        zero_um=np.where(curves.zero_is_blank, 0.0, np.where(lagging, early_um, zero)),
         lagging=lagging,
         lag_s=np.where(lagging, curves.time_s[start, wells] - first_s, 0.0),
         slope_change=bend.change,

@@ -51,9 +51,12 @@ def pooled_cv(
     variance = standard_error**2
     scale = _group_mean(group, size, np.ones_like(size), group_count)[group] ** 2
 
+    # Rates without any error of their own would else weigh infinitely much at a CV of 0.
+    floor = np.maximum(1e-24 * scale, 1e-150)
+
     def score(cv_square: Floats) -> Floats:
         """Derivative of the restricted log-likelihood by the square of the CV, times two."""
-        weight = 1.0 / np.maximum(variance + cv_square[plate] * scale, 1e-300)
+        weight = 1.0 / np.maximum(variance + cv_square[plate] * scale, floor)
         centred = residual - _group_mean(group, residual, weight, group_count)[group]
         own_share = weight / _sum_by(group, weight, group_count)[group]
         terms = scale * weight * (weight * centred**2 - (1.0 - own_share))
