@@ -73,6 +73,13 @@ def test_every_plate_has_a_reference_lot_and_blanks_at_each_level(scenario):
         assert all(scenario.lots[lot].assay == plate.assay for lot in plate.lots)
 
 
+def test_every_lot_is_read_on_three_plates(scenario):
+    """With two plates the interval of a lot rests on one degree of freedom."""
+    read = Counter(lot for e in whole_exports(scenario) for p in e.plates for lot in scenario.plate(p).lots)
+    assert set(read) == set(scenario.lots)
+    assert min(read.values()) >= 3
+
+
 def test_one_lot_is_slow_and_one_is_not_saturated(scenario):
     reference = scenario.lots["R-AP-07"]
     assert scenario.lots["AP-2602"].kcat_per_s < 0.8 * reference.kcat_per_s
