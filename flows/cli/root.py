@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import importlib
 import sys
+import traceback
 from dataclasses import dataclass
 
 import click
@@ -85,4 +86,8 @@ def main() -> None:
         sys.exit(EXIT_WRONG_USE)
     except HalfsatError as error:
         click.echo(f"halfsat: {error}", err=True)
+        sys.exit(EXIT_FAILED)
+    except Exception:
+        traceback.print_exc()
+        click.echo("halfsat: this is a fault in halfsat itself; nothing that was stored is lost", err=True)
         sys.exit(EXIT_FAILED)

@@ -27,6 +27,8 @@ _QUIET = {
     "PREFECT_LOGGING_LEVEL": "WARNING",
     "PREFECT_LOGGING_ROOT_LEVEL": "CRITICAL",
     "PREFECT_SERVER_LOGGING_LEVEL": "CRITICAL",
+    # A server of its own takes 12 to 21 s to come up, and several times that on a busy machine.
+    "PREFECT_SERVER_EPHEMERAL_STARTUP_TIMEOUT_SECONDS": "180",
 }
 
 
