@@ -17,7 +17,8 @@ Quantity = Literal["amount", "mass"]
 _PLAUSIBLE = re.compile(r"[A-Za-zµ/*^·⁻¹²³0-9 .\-]{1,40}")
 _GLUED_POWER = re.compile(r"(?<![A-Za-zµ0-9^*])(d|c|m|µ|u)?m3(?![0-9])")
 _SPACED_POWER = re.compile(r"([A-Za-zµ]+)-([1-3])(?![0-9])")
-_LONG_POWER = re.compile(r"(\^|\*\*)\s*-?\s*[0-9]{2,}|[0-9]{3,}")
+# Powers of two digits, and powers of numbers: 9**9**9 would be computed before it is found to be no unit.
+_UNTOWARD_POWER = re.compile(r"(\^|\*\*)\s*-?\s*[0-9]{2,}|[0-9]{3,}|[0-9⁻¹²³.]\s*(\^|\*\*)|[⁻¹²³]{3,}")
 
 
 @cache
@@ -50,7 +51,7 @@ def concentration_factor(unit: str) -> tuple[Quantity, float]:
     """
     remedy = "write a concentration, such as umol/L, mM, nmol/L or ng/mL"
     written = unit.strip().replace("μ", "µ")
-    if not _PLAUSIBLE.fullmatch(written) or _LONG_POWER.search(written):
+    if not _PLAUSIBLE.fullmatch(written) or _UNTOWARD_POWER.search(written):
         raise UnknownName(f"'{unit}' is not a unit", remedy=remedy)
     spelled = _SPACED_POWER.sub(r"\1^-\2", written.replace("·", " * "))
     spelled = _GLUED_POWER.sub(lambda found: found[0][:-1] + "^3", spelled)
