@@ -141,7 +141,9 @@ def summarise(readings: pd.DataFrame, plate_formats: Mapping[str, int]) -> pd.Da
 
 def _wells_of(readings: pd.DataFrame) -> tuple[np.ndarray, pd.DataFrame]:
     """Code of the well each reading belongs to (R,), and the wells in order of code."""
-    parts = [pd.factorize(readings[key].astype("str")) for key in KEYS]
+    # An unknown name must count as a name of its own: factorize would code it -1.
+    named = [readings[key].astype(object).where(readings[key].notna(), "").astype("str") for key in KEYS]
+    parts = [pd.factorize(column) for column in named]
     code = np.zeros(len(readings), dtype=np.int64)
     for part, uniques in parts:
         code = code * max(len(uniques), 1) + part

@@ -28,4 +28,5 @@ def beside(measured: float, limit: float, scale: float = 1.0) -> tuple[str, str]
 
 def counted(count: float, noun: str) -> str:
     """A number of things: `1 read`, `3 reads`."""
-    return f"{count:.0f} {noun}" if round(count) == 1 else f"{count:.0f} {noun}s"
+    text = f"{count:.0f}"
+    return f"{text} {noun}" if text == "1" else f"{text} {noun}s"
