@@ -232,3 +232,13 @@ def test_a_scenario_with_a_mistake_is_refused(scenario, tmp_path):
 def test_a_part_that_does_not_ship_is_an_error():
     with pytest.raises(SiteError, match="fixtures/nothing"):
         shipped("fixtures/nothing")
+
+
+def test_an_installed_package_finds_its_own_parts_and_not_its_neighbours(tmp_path, monkeypatch):
+    installed = tmp_path / "flows"
+    monkeypatch.setattr("flows.site.shipped._FLOWS", installed)
+    (tmp_path / "config").mkdir()
+    with pytest.raises(SiteError, match="'config' does not ship"):
+        shipped("config")
+    (installed / "shipped" / "config").mkdir(parents=True)
+    assert shipped("config") == installed / "shipped" / "config"
