@@ -210,25 +210,25 @@ def _plate_format(
 def _by_well(raw: RawReadings) -> tuple[RawReadings, Integers]:
     """Readings ordered by channel and well, file order kept within, and where each well begins."""
     key = raw.channel.astype(np.int32) * np.int32(_LARGEST.well_count) + raw.position
-    steps = np.diff(key)
-    if (steps < 0).any():
-        order = _well_order(key)
-        raw, key = raw.take(order), key[order]
-        steps = np.diff(key)
-    return raw, np.concatenate([[0], np.flatnonzero(steps) + 1])
+    cycle = _cycle(key)
+    if cycle is not None:
+        # Every read lists the wells in one order, as most instruments do: no need to sort all readings.
+        starts = np.arange(0, len(key), len(key) // cycle)
+        order = np.argsort(key[:cycle])[:, None] + np.arange(0, len(key), cycle)[None, :]
+        return raw.take(order.ravel()), starts
+    if (np.diff(key) < 0).any():
+        in_order = np.argsort(key, kind="stable")
+        raw, key = raw.take(in_order), key[in_order]
+    return raw, np.concatenate([[0], np.flatnonzero(np.diff(key)) + 1])
 
 
-def _well_order(key: npt.NDArray[np.int32]) -> Integers:
-    """The order by channel and well that keeps the order of the file within each well."""
+def _cycle(key: npt.NDArray[np.int32]) -> int | None:
+    """After how many readings the same wells follow in the same order, to the end; None where they do not."""
     again = np.flatnonzero(key == key[0])
     cycle = int(again[1]) if len(again) > 1 else len(key)
-    if len(key) % cycle == 0 and len(set(key[:cycle].tolist())) == cycle:
-        cycles = key.reshape(-1, cycle)
-        if (cycles == cycles[0]).all():
-            # Every read lists the wells in one order, as most instruments do: no need to sort all readings.
-            offsets = np.arange(0, len(key), cycle)
-            return (np.argsort(cycles[0])[:, None] + offsets[None, :]).ravel()
-    return np.argsort(key, kind="stable")
+    if len(key) % cycle or len(set(key[:cycle].tolist())) != cycle:
+        return None
+    return cycle if (key.reshape(-1, cycle) == key[:cycle]).all() else None
 
 
 def _without_midnight(times: Reals, starts: Integers, rule: TimeRule | None, first_in_file: float) -> Reals:

@@ -17,6 +17,7 @@ import numpy.typing as npt
 from models.errors import ExportError, HalfsatError
 
 CANDIDATE_DELIMITERS = (",", ";", "\t", "|")
+_HEAD_LINES = 100
 _SNIFFED_LINES = 100
 _SNIFFED_BYTES = 100_000
 _EMPTY = b"\0 \t\r\n"
@@ -52,15 +53,27 @@ class TextSheet:
             newlines = np.append(newlines, len(self.data))
         return newlines
 
-    @property
+    @cached_property
     def line_count(self) -> int:
         """Number of lines."""
-        return len(self.ends)
+        return self.data.count(b"\n") + bool(self.data and not self.data.endswith(b"\n"))
+
+    @cached_property
+    def _head_ends(self) -> list[int]:
+        """The same for the first lines only: a regular table needs no more, and they are found at once."""
+        found: list[int] = []
+        while len(found) < _HEAD_LINES and (end := self.data.find(b"\n", found[-1] if found else 0)) >= 0:
+            found.append(end + 1)
+        return found
+
+    def _end(self, index: int) -> int:
+        if index == self.line_count - 1:
+            return len(self.data)
+        return self._head_ends[index] if index < len(self._head_ends) else int(self.ends[index])
 
     def span(self, first: int, last: int) -> bytes:
         """Bytes of the lines from `first` up to but not including `last`."""
-        start = int(self.ends[first - 1]) if first else 0
-        return self.data[start : int(self.ends[last - 1])] if last > first else b""
+        return self.data[self._end(first - 1) if first else 0 : self._end(last - 1)] if last > first else b""
 
     def line(self, index: int) -> str:
         """Text of a line without its end."""

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import datetime as dt
 import math
 
 import pytest
@@ -33,8 +34,9 @@ def plates_and_styles(draw: st.DrawFn, container: str = "text") -> tuple[Plate, 
     rows = sorted(draw(st.sets(st.integers(1, 8), min_size=1, max_size=3)))
     columns = sorted(draw(st.sets(st.integers(1, 12), min_size=1, max_size=3)))
     if shape == "grids":
-        rows = list(range(rows[0], rows[0] + len(rows)))
-        columns = list(range(columns[0], columns[0] + max(len(columns), 2)))
+        first_row, first_column = min(rows[0], 6), min(columns[0], 10)
+        rows = list(range(first_row, first_row + len(rows)))
+        columns = list(range(first_column, first_column + max(len(columns), 2)))
     wells = [(row, column) for row in rows for column in columns]
     if shape != "grids":
         wells = draw(st.permutations(wells))
@@ -94,9 +96,7 @@ def held_against(plate: Plate, style: Style) -> None:
 LETTER_ORDER = {letter: place for place, letter in enumerate("ABCDEFGHIJKLMNOP")}
 
 
-def _elapsed(seconds: float) -> object:
-    import datetime as dt
-
+def _elapsed(seconds: float) -> dt.timedelta:
     return dt.timedelta(seconds=seconds)
 
 
