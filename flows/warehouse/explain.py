@@ -7,11 +7,24 @@ import json
 import re
 from collections.abc import Callable, Sequence
 
+from flows.warehouse.bookkeeping import STORED
 from flows.warehouse.sandbox import Failure
+from flows.warehouse.view import View
+from flows.warehouse.views import RESULT_VIEWS
 from models.errors import QueryError
+from models.tables import Table
 
 _ONE_SELECT = "ask with one SELECT; to see what there is to ask, type: SHOW TABLES"
 _WHERE_LISTED = "DESCRIBE and a table's name lists its columns; SHOW TABLES lists the tables"
+_SIGNS_OF_CLOSED = (
+    "disabled by configuration",
+    "configuration has been locked",
+    "read-only mode",
+    "No extension found",
+    " extension.",
+)
+_DECLARED: tuple[Table | View, ...] = (*STORED, *RESULT_VIEWS)
+_COLUMNS = sorted({column.name for each in _DECLARED for column in each.columns})
 _CLOSED = "a query reads the warehouse only: no files, network, settings or extensions"
 
 
@@ -39,7 +52,7 @@ def explain(errors: bytes, time_s: float, memory_mb: int, names: Sequence[str]) 
         return _too_large(memory_mb)
     if kind == "nesting" or "expression depth" in text:
         return QueryError("the query is nested too deeply", remedy="write it in steps, with WITH")
-    if failure["error"] == "InterruptException" or "max_execution_time" in text:
+    if failure["error"] == "InterruptException" or "maximum execution time" in text:
         return too_slow(time_s)
     return _explain_database(failure["error"], text, names)
 
@@ -55,7 +68,7 @@ def _too_large(memory_mb: int) -> QueryError:
 
 
 def _explain_database(error: str, text: str, names: Sequence[str]) -> QueryError:
-    if error == "PermissionException" or "disabled by configuration" in text:
+    if error == "PermissionException" or any(sign in text for sign in _SIGNS_OF_CLOSED):
         return QueryError(_CLOSED, remedy=_ONE_SELECT)
     for pattern, say in _MISSING:
         found = re.search(pattern, text)
@@ -68,9 +81,10 @@ def _explain_database(error: str, text: str, names: Sequence[str]) -> QueryError
     return QueryError(plain, where=f"line {place[1]} of the query" if place else "")
 
 
-def _no_column(wanted: str, text: str, names: Sequence[str]) -> QueryError:
-    known = _candidates(text) or names
-    return QueryError(f"there is no column '{wanted}' here", remedy=_nearest(wanted, known))
+def _no_column(wanted: str, text: str, _: Sequence[str]) -> QueryError:
+    return QueryError(
+        f"there is no column '{wanted}' here", remedy=_nearest(wanted, _candidates(text) or _COLUMNS)
+    )
 
 
 def _no_table(wanted: str, text: str, names: Sequence[str]) -> QueryError:

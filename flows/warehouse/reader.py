@@ -97,8 +97,19 @@ def run_query(site: Site, sql: str, limits: QueryLimits | None = None) -> pa.Tab
         If there is nothing published.
     """
     limits = limits or QueryLimits()
+    return _ask_sandbox(request_for(site, sql, limits), limits, names_to_ask(site))
+
+
+def request_for(site: Site, sql: str, limits: QueryLimits) -> Request:
+    """What the sandbox is asked for a query on a site.
+
+    Raises
+    ------
+    SiteError
+        If there is nothing published.
+    """
     readings = site.lake / "readings"
-    request: Request = {
+    return {
         "database": _published_path(site),
         "readings": str(readings),
         "reading_sql": reading_view(readings).sql,
@@ -107,8 +118,11 @@ def run_query(site: Site, sql: str, limits: QueryLimits | None = None) -> pa.Tab
         "memory_mb": limits.memory_mb,
         "threads": limits.threads,
     }
-    names = [*(each.name for each in STORED), *(each.name for each in all_views(site))]
-    return _ask_sandbox(request, limits, names)
+
+
+def names_to_ask(site: Site) -> list[str]:
+    """Every table and view that a query can name."""
+    return [*(each.name for each in STORED), *(each.name for each in all_views(site))]
 
 
 def _ask_sandbox(request: Request, limits: QueryLimits, names: Sequence[str]) -> pa.Table:

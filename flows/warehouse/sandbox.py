@@ -11,6 +11,7 @@ import json
 import os
 import resource
 import sys
+from io import IOBase
 from typing import Literal, TypedDict
 
 import duckdb
@@ -92,6 +93,25 @@ def answer(connection: duckdb.DuckDBPyConnection, sql: str) -> pa.RecordBatchRea
     return reader
 
 
+def respond(connection: duckdb.DuckDBPyConnection, sql: str, output: IOBase) -> Failure | None:
+    """Write the answer to one SELECT as an Arrow stream; return why there is none, or None."""
+    try:
+        reader = answer(connection, sql)
+        with pa.ipc.new_stream(pa.PythonFile(output, "w"), reader.schema) as stream:
+            for batch in reader:
+                stream.write_batch(batch)
+        output.flush()
+    except Refused as refused:
+        return {"kind": refused.kind, "error": "", "text": str(refused)}
+    except (duckdb.OutOfMemoryException, MemoryError, pa.ArrowMemoryError) as error:
+        return {"kind": "memory", "error": type(error).__name__, "text": str(error)}
+    except RecursionError as error:
+        return {"kind": "nesting", "error": "RecursionError", "text": str(error)}
+    except (duckdb.Error, pa.ArrowException, OSError, RuntimeError) as error:
+        return {"kind": "database", "error": type(error).__name__, "text": str(error)}
+    return None
+
+
 def main() -> int:
     """Answer the request on standard input; exit code 0, or 3 with a failure on standard error."""
     request: Request = json.load(sys.stdin)
@@ -100,25 +120,9 @@ def main() -> int:
     limit = (request["memory_mb"] * 2 + _BASE_MB) << 20
     resource.setrlimit(resource.RLIMIT_DATA, (limit, limit))
     resource.setrlimit(resource.RLIMIT_CORE, (0, 0))
-    try:
-        reader = answer(connection, request["sql"])
-        output = os.fdopen(sys.stdout.fileno(), "wb", closefd=False)
-        with pa.ipc.new_stream(pa.PythonFile(output, "w"), reader.schema) as stream:
-            for batch in reader:
-                stream.write_batch(batch)
-        output.flush()
-    except Refused as refused:
-        return _fail({"kind": refused.kind, "error": "", "text": str(refused)})
-    except (duckdb.OutOfMemoryException, MemoryError, pa.ArrowMemoryError) as error:
-        return _fail({"kind": "memory", "error": type(error).__name__, "text": str(error)})
-    except RecursionError as error:
-        return _fail({"kind": "nesting", "error": "RecursionError", "text": str(error)})
-    except (duckdb.Error, pa.ArrowException, OSError, RuntimeError) as error:
-        return _fail({"kind": "database", "error": type(error).__name__, "text": str(error)})
-    return 0
-
-
-def _fail(failure: Failure) -> int:
+    failure = respond(connection, request["sql"], os.fdopen(sys.stdout.fileno(), "wb", closefd=False))
+    if failure is None:
+        return 0
     sys.stderr.write("\n" + json.dumps(failure) + "\n")
     sys.stderr.flush()
     return FAILED
