@@ -54,8 +54,8 @@ class Curves:
 class Choice:
     """The window of each well and what was seen of its curvature, shape (wells,) each.
 
-    `zero_um` is where the curve stands when nothing is consumed yet: 0 where product counts from the blank, else
-    the first read, smoothed.
+    `zero_um` is where the curve stands when nothing is consumed yet: 0 where product counts from the blank,
+    else the first read, smoothed.
     """
 
     start: Integers

@@ -38,8 +38,8 @@ def test_evidence_weights_follow_the_criterion() -> None:
 
 
 def test_aicc_is_the_likelihoods_own() -> None:
-    # Puromycin, treated: AIC 95.2709686499701 with k = 3, n = 12 (Bates and Watts 1988, fitted with R 4.2 nls);
-    # AICc adds 2 k (k + 1) / (n - k - 1).
+    # Puromycin, treated: AIC 95.2709686499701 with k = 3, n = 12 (data of Bates and Watts 1988,
+    # doi:10.1002/9780470316757, fitted with R 4.2 nls); AICc adds 2 k (k + 1) / (n - k - 1).
     value = aicc(np.array([1195.44881454122]), np.array([0.0]), np.array([12.0]), 2)[0]
     assert value == pytest.approx(95.2709686499701 + 24.0 / 8.0, rel=1e-10)
     assert np.isnan(aicc(np.array([1.0]), np.array([0.0]), np.array([4.0]), 2)[0])
