@@ -18,6 +18,7 @@ from checks.gates import GATES
 Standing = Literal["clear", "held", "void"]
 STANDINGS: tuple[Standing, ...] = ("clear", "held", "void")
 ANY = "any"
+SEVERITIES = ("none", "hold", "void")
 
 
 @dataclass(frozen=True)
@@ -99,6 +100,8 @@ def without_consequences(findings: pd.DataFrame) -> pd.DataFrame:
     for rule in CONSEQUENCES:
         cause = kept & (findings["gate"] == rule.cause) & (findings["severity"] == rule.cause_severity)
         struck = subject.isin(subject[cause]) & ~cause & (findings["gate"] != rule.cause)
+        # What is worse than the cause cannot follow from it.
+        struck &= findings["severity"].isin(SEVERITIES[: SEVERITIES.index(rule.cause_severity) + 1])
         if rule.gate != ANY:
             struck &= findings["gate"] == rule.gate
         if rule.outcome != ANY:

@@ -113,7 +113,7 @@ ROW = st.tuples(
 ).map(lambda row: (row[0], row[1], row[2], *row[3]))
 
 
-@settings(max_examples=40, deadline=None)
+@settings(max_examples=25, deadline=None)
 @given(st.lists(ROW, max_size=8, unique_by=lambda row: row[:3]))
 def test_leaving_out_consequences_changes_no_standing_and_keeps_a_cause(rows: list[tuple[str, ...]]) -> None:
     before = findings(*rows)
