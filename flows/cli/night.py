@@ -181,9 +181,10 @@ def _place(plate_id: str, well: object, lot: object) -> str:
 
 def _column_head(of_assay: pd.DataFrame, choice: Sequence[str]) -> str:
     """Signs of the constants that a column holds, and below them their unit."""
-    present = of_assay[of_assay["constant"].isin(choice)]
-    signs = [constant_symbol(name) for name in choice if name in set(present["constant"])]
-    units = [unit_symbol(unit) or "1" for unit in present["unit"].unique()]
+    of_lots = of_assay[of_assay["constant"].isin(choice)].groupby(["role", "lot"])["constant"]
+    used = {min(constants, key=choice.index) for _, constants in of_lots}
+    signs = [constant_symbol(name) for name in choice if name in used]
+    units = [unit_symbol(u) or "1" for u in of_assay.loc[of_assay["constant"].isin(used), "unit"].unique()]
     return f"{', '.join(signs)}\n{', '.join(units)}"
 
 
