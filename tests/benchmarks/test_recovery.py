@@ -1,4 +1,4 @@
-"""Recovery on a fixed seed; the full 300 plates with their limits are `python -m tests.benchmarks.recovery`."""
+"""Recovery on a fixed seed; all 300 plates with their limits: `python -m tests.benchmarks.recovery`."""
 
 from __future__ import annotations
 

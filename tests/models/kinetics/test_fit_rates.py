@@ -86,7 +86,7 @@ def test_hill_finds_cooperativity_and_is_chosen_for_it() -> None:
 
 
 @given(concentration=st.floats(1e-6, 1e6), rate=st.floats(1e-6, 1e6))
-@settings(max_examples=20, deadline=None)
+@settings(max_examples=6, deadline=None)
 def test_units_scale_through(concentration: float, rate: float) -> None:
     rows = series_rows(0)
     scaled = rows.assign(
