@@ -94,7 +94,7 @@ def to_parquet(table: pa.Table) -> bytes:
 
 
 def to_xlsx(table: pa.Table) -> bytes:
-    """A workbook with one sheet. Text stays text, whatever it begins with; times are UTC.
+    """A workbook with one sheet. Text stays text, whatever it begins with; times are UTC, numbers 16 digits.
 
     Raises
     ------
