@@ -119,7 +119,7 @@ def match_blanks(
     takes_blank
         Wells from which a blank is subtracted, shape (wells,).
     substrate_um
-        Nominal substrate [umol/L], shape (wells,).
+        Nominal substrate [umol/L], shape (wells,); NaN where a blank's is not known.
 
     Returns
     -------
@@ -135,8 +135,10 @@ def match_blanks(
     curves: list[BlankCurve] = []
     if blanks.size == 0:
         return MatchedBlanks(source, value, which, ())
-    level_blanks = {float(s): blanks[substrate_um[blanks] == s] for s in np.unique(substrate_um[blanks])}
-    excess = _slope_excess(time_s, product_um, list(level_blanks.values()))
+    level_um = substrate_um[blanks]
+    level_blanks = {float(s): blanks[level_um == s] for s in np.unique(level_um[np.isfinite(level_um)])}
+    alike = [*level_blanks.values(), blanks[~np.isfinite(level_um)]]
+    excess = _slope_excess(time_s, product_um, [group for group in alike if group.size])
 
     def assign(members: Integers, receivers: Integers, name: str) -> None:
         if receivers.size:

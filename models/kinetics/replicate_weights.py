@@ -135,8 +135,8 @@ def plate_cv(
         residual = (packed.rate - fitted)[place, column]
         size, error = np.abs(fitted)[place, column], packed.standard_error[place, column]
         cv, degrees = pooled_cv(plate[column], replicate, residual, size, error, plate_count)
-        # A whole series as one group: its fit has used one degree of freedom more than a mean would, so this CV
-        # is a little low; intervals do not follow, since they are scaled by the residuals.
+        # A whole series as one group: its fit has used one degree of freedom more than a mean would, so this
+        # CV is a little low; intervals do not follow, since they are scaled by the residuals.
         about_fit, _ = pooled_cv(plate[column], column, residual, size, error, plate_count)
         cv = np.where(degrees > 0, cv, about_fit)
     return cv
