@@ -52,7 +52,7 @@ def fit_batch(gated: GatedBatch) -> FittedBatch:
     assessment = _assess_series(rated, series, all_estimates)
     series_findings = without_consequences(assessment.findings)
     findings = pd.concat([gated.findings, series_findings], ignore_index=True)
-    series["standing"] = series_standings(series, findings).to_numpy()
+    series["standing"] = series_standings(series, findings, gated.wells).to_numpy()
     standing = plate_read_standing(gated.wells, series, findings)
     analyses = pd.DataFrame(
         {

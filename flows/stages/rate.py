@@ -52,14 +52,13 @@ def _wells_of(plate_number: int, work: PlateWork) -> pd.DataFrame:
     mapped = work.wells.copy()
     unmapped = sorted(set(work.readings["well"]) - set(mapped["well"]), key=well_position)
     if unmapped:
-        extra = pd.DataFrame({"well": unmapped, "role": "empty", "substrate_um": 0.0})
+        extra = pd.DataFrame({"well": unmapped, "role": "empty"})
         mapped = pd.concat([mapped, extra.reindex(columns=mapped.columns)], ignore_index=True)
     positions = [well_position(well) for well in mapped["well"]]
     mapped["row_number"] = [row for row, _ in positions]
     mapped["column_number"] = [column for _, column in positions]
     mapped["analysis_id"] = work.analysis_id
     mapped["plate"] = plate_number
-    mapped["substrate_um"] = mapped["substrate_um"].fillna(0.0)
     return mapped.sort_values(["row_number", "column_number"], ignore_index=True)
 
 
