@@ -15,6 +15,7 @@ from pydantic import ValidationError
 
 import checks
 import models
+from flows import stages
 from flows.site.durable import write_durably
 from flows.site.layout import Site
 from models.errors import SiteError
@@ -141,12 +142,12 @@ def read_recipe(site: Site, recipe_id: str) -> Recipe:
 
 @cache
 def code_version() -> str:
-    """Package version, and a digest of the source of models/ and checks/: the code that makes numbers."""
+    """Package version, and a digest of the source that makes numbers: models/, checks/ and flows/stages/."""
     try:
         version = importlib.metadata.version("halfsat")
     except importlib.metadata.PackageNotFoundError:
         version = "unreleased"
-    return f"{version}+{source_digest([Path(models.__path__[0]), Path(checks.__path__[0])])}"
+    return f"{version}+{source_digest([Path(package.__path__[0]) for package in (models, checks, stages)])}"
 
 
 def source_digest(packages: list[Path]) -> str:
