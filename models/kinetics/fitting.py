@@ -171,7 +171,7 @@ def _fit_candidates(
     low, high = profile_intervals(fit, packed.conditions, packed.rate, weighted.weights)
     criterion = _aicc(packed, weighted)
     half = np.log(fit.constants[1])
-    limits = each.log_limits(packed.conditions, weighted.weights)
+    limits = each.limits(packed.conditions, weighted.weights)
     fitted, failed = {}, {}
     for column, number in enumerate(packed.series):
         refusal = refuse_fit(

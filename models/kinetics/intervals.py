@@ -27,6 +27,8 @@ _ROUNDS = 60
 _TOLERANCE = 1e-8
 _WIDEST = np.log(1e9)
 """A constant that may grow or shrink a thousand million times is not held at all."""
+_FARTHEST_STEPS = 1e4
+"""Standard errors after which the search for an end of an unlimited constant's interval is given up."""
 
 
 @dataclass(frozen=True)
@@ -37,7 +39,7 @@ class _Series:
     conditions: Conditions
     rates: Floats
     weights: Floats
-    log_constants: Floats
+    coordinates: Floats
     best_sum: Floats
     degrees: Floats
     target: Floats
@@ -50,7 +52,7 @@ class _Series:
             self.conditions.select(series),
             self.rates[:, series],
             self.weights[:, series],
-            self.log_constants[:, series],
+            self.coordinates[:, series],
             self.best_sum[series],
             self.degrees[series],
             self.target[series],
@@ -89,16 +91,18 @@ def profile_intervals(
         & ~fit.at_limit
         & (fit.degrees_of_freedom > 0)
         & (fit.residual_sum > 0)
-        & (fit.constants[0] > 0)
+        & np.isfinite(fit.constants).all(axis=0)
     )
+    if fit.law.amplitude is not None:
+        usable = usable[fit.constants[0, usable] > 0]
     for first in range(0, usable.size, CHUNK):
         part = usable[first : first + CHUNK]
         series = _series_of(fit, conditions, rates, weights, part)
         for index in range(fit.law.constant_count):
             step = _first_step(fit, part, index)
             for side, ends in ((-1.0, low), (1.0, high)):
-                logs = _search(series, index, side, step, _open_ends(series, side))
-                ends[index, part] = np.exp(logs)
+                found = _search(series, index, side, step, _open_ends(series, side))
+                ends[index, part] = np.exp(found) if fit.law.constants[index].positive else found
     exact = np.flatnonzero(fit.converged & (fit.degrees_of_freedom > 0) & (fit.residual_sum == 0))
     low[:, exact] = high[:, exact] = fit.constants[:, exact]
     return low, high
@@ -108,7 +112,7 @@ def _series_of(
     fit: LawFit, conditions: Conditions, rates: Floats, weights: Floats, part: NDArray[np.intp]
 ) -> _Series:
     part_conditions, part_weights = conditions.select(part), weights[:, part]
-    lower, upper = fit.law.log_limits(part_conditions, part_weights)
+    lower, upper = fit.law.limits(part_conditions, part_weights)
     # The other constants may go further while one is held than they may in a fit.
     wide = np.array([[_WIDEST if c.is_concentration else 0.0] for c in fit.law.shape_constants])
     degrees = fit.degrees_of_freedom[part]
@@ -117,7 +121,7 @@ def _series_of(
         part_conditions,
         rates[:, part],
         part_weights,
-        np.log(fit.constants[:, part]),
+        _coordinates(fit.law, fit.constants[:, part]),
         fit.residual_sum[part],
         degrees,
         np.asarray(t_distribution.ppf(0.5 + LEVEL / 2.0, degrees), dtype=np.float64),
@@ -126,10 +130,24 @@ def _series_of(
     )
 
 
+def _coordinates(law: RateLaw, constants: Floats) -> Floats:
+    """Coordinates of all constants, the amplitude's (its logarithm) first if there is one."""
+    shape = law.coordinates(constants[law.first_shape :])
+    if law.amplitude is None:
+        return shape
+    both: Floats = np.vstack([np.log(constants[0]), shape])
+    return both
+
+
 def _first_step(fit: LawFit, part: NDArray[np.intp], index: int) -> Floats:
-    """One standard error on the logarithmic scale, kept within reason."""
+    """One standard error in the constant's coordinate, kept within reason."""
+    error, value = fit.standard_error[index, part], fit.constants[index, part]
+    if not fit.law.constants[index].positive:
+        guess = np.maximum(0.1 * np.abs(value), 1e-6)
+        known: Floats = np.where(np.isfinite(error) & (error > 0), error, guess)
+        return known
     with np.errstate(all="ignore"):
-        step = fit.standard_error[index, part] / fit.constants[index, part]
+        step = error / value
     return np.clip(np.where(np.isfinite(step), step, 0.5), 1e-6, 1.0)
 
 
@@ -140,7 +158,7 @@ def _open_ends(series: _Series, side: float) -> Flags:
     the line stays below the threshold, Km and Vmax are both open above; where the constant does, Km is open
     below.
     """
-    count = series.log_constants.shape[0]
+    count = series.coordinates.shape[0]
     ends = np.zeros((count, series.best_sum.size), dtype=bool)
     if series.law is not MICHAELIS_MENTEN:
         return ends
@@ -163,7 +181,8 @@ def _profile(
     def height(which: NDArray[np.intp], value: Floats, start: Floats) -> tuple[Floats, Floats]:
         here = series.select(which)
         shape_start = np.clip(start, here.lower, here.upper)
-        amplitude, fixed = (np.exp(value), None) if index == 0 else (None, index - 1)
+        place = index - series.law.first_shape
+        amplitude, fixed = (np.exp(value), None) if place < 0 else (None, place)
         lower, upper = here.lower, here.upper
         if fixed is not None:
             shape_start[fixed] = value
@@ -179,28 +198,27 @@ def _profile(
             amplitude=amplitude,
             fixed=fixed,
         )
-        return here.height(found.residual_sum), found.log_constants
+        return here.height(found.residual_sum), found.coordinates
 
     return height
 
 
 def _search(series: _Series, index: int, side: float, step: Floats, open_ends: Flags) -> Floats:
-    """Logarithm at which the profile crosses the threshold on one side, NaN where it never does.
+    """Coordinate at which the profile crosses the threshold on one side, NaN where it never does.
 
     Steps outwards until the threshold is passed, then closes in by the Illinois rule (Dowell and Jarratt
     1971, doi:10.1007/BF01934364).
     """
     profile = _profile(series, index)
-    best = series.log_constants[index]
-    limit = (
-        best + side * _WIDEST
-        if index == 0
-        else np.where(side > 0, series.upper[index - 1], series.lower[index - 1])
-    )
+    best, place = series.coordinates[index], index - series.law.first_shape
+    limit = best + side * _WIDEST
+    if place >= 0:
+        limit = np.where(side > 0, series.upper[place], series.lower[place])
+        limit = np.where(np.isfinite(limit), limit, best + side * step * _FARTHEST_STEPS)
     result = np.full(best.shape, np.nan)
     near, near_gap = best.copy(), -series.target
     far, far_gap = best + side * step * series.target, np.full(best.shape, np.nan)
-    others = series.log_constants[1:].copy()
+    others = series.coordinates[series.law.first_shape :].copy()
     weight = np.ones(best.shape)
     active = np.flatnonzero(~open_ends[index])
     far = np.where(side > 0, np.minimum(far, limit), np.maximum(far, limit))

@@ -61,6 +61,14 @@ class LawFit:
         return self.point_count - self.law.constant_count
 
     @property
+    def correlation(self) -> Floats:
+        """Correlation of the constants, shape (series, constants, constants); NaN where it is not known."""
+        with np.errstate(all="ignore"):
+            errors = np.sqrt(np.diagonal(self.covariance, axis1=1, axis2=2))
+            matrix: Floats = self.covariance / (errors[:, :, None] * errors[:, None, :])
+        return matrix
+
+    @property
     def standard_error(self) -> Floats:
         """Standard errors, shape (constants, series)."""
         with np.errstate(invalid="ignore"):
@@ -88,8 +96,8 @@ def fit_law(
     weights
         One over the variance up to a factor, shape (levels, series); None for equal weights.
     start
-        Start values of the constants, shape (constants, series), the amplitude first (it is eliminated and
-        its start not used). None takes the law's own.
+        Start values of the constants, shape (constants, series), the amplitude first if there is one (it is
+        eliminated and its start not used). None takes the law's own.
 
     Returns
     -------
@@ -107,20 +115,20 @@ def fit_law(
                 conditions.select(columns),
                 rates[:, columns],
                 weights[:, columns],
-                None if start is None else np.log(start[1:, columns]),
+                None if start is None else law.coordinates(start[law.first_shape :, columns]),
             )
         )
     return _joined(law, parts, series_count)
 
 
 def _fit_chunk(
-    law: RateLaw, conditions: Conditions, rates: Floats, weights: Floats, log_start: Floats | None
+    law: RateLaw, conditions: Conditions, rates: Floats, weights: Floats, start: Floats | None
 ) -> LawFit:
-    lower, upper = law.log_limits(conditions, weights)
-    if log_start is None:
-        log_start = best_start(law, conditions, rates, weights)
-    log_start = np.clip(log_start, lower, upper)
-    minimum = minimise(law, conditions, rates, weights, log_start, lower, upper)
+    lower, upper = law.limits(conditions, weights)
+    if start is None:
+        start = best_start(law, conditions, rates, weights)
+    start = np.clip(start, lower, upper)
+    minimum = minimise(law, conditions, rates, weights, start, lower, upper)
     minimum = settle(law, conditions, rates, weights, minimum, lower, upper)
     return _described(law, conditions, weights, minimum, lower, upper)
 
@@ -129,20 +137,29 @@ def _described(
     law: RateLaw, conditions: Conditions, weights: Floats, minimum: Minimum, lower: Floats, upper: Floats
 ) -> LawFit:
     point_count = np.count_nonzero(weights > 0, axis=0).astype(np.float64)
-    shape_constants = np.exp(minimum.log_constants)
-    shape, slopes = law.evaluate(conditions, tuple(shape_constants))
-    # Derivatives by the logarithm of every constant: the information is then free of units.
-    columns = [minimum.amplitude * shape, *(minimum.amplitude * slope for slope in slopes)]
-    information = [[sum_rows(weights * a * b) for b in columns] for a in columns]
-    inverse, full_rank = _inverted(information)
-    constants = np.vstack([minimum.amplitude, shape_constants])
+    values = law.values(minimum.coordinates)
+    shape, slopes = law.evaluate(conditions, values)
+    columns = [minimum.amplitude * slope for slope in slopes]
+    # Derivatives by the logarithm where a constant has one: the information is then free of units.
+    per_coordinate = [
+        value if constant.positive else np.ones_like(value)
+        for constant, value in zip(law.shape_constants, values, strict=True)
+    ]
+    constants = np.array(values)
+    if law.amplitude is not None:
+        columns = [minimum.amplitude * shape, *columns]
+        per_coordinate = [minimum.amplitude, *per_coordinate]
+        constants = np.vstack([minimum.amplitude, constants])
+    root = np.sqrt(weights)
+    inverse, full_rank = _inverse_information([root * column for column in columns])
     with np.errstate(all="ignore"):
         scale = minimum.residual_sum / (point_count - law.constant_count)
     scale = np.where(point_count > law.constant_count, scale, np.nan)
-    covariance = inverse * (constants.T[:, :, None] * constants.T[:, None, :]) * scale[:, None, None]
+    factor = np.array(per_coordinate).T
+    covariance = inverse * (factor[:, :, None] * factor[:, None, :]) * scale[:, None, None]
     margin = 1e-9
     at_limit = np.any(
-        (minimum.log_constants <= lower + margin) | (minimum.log_constants >= upper - margin), axis=0
+        (minimum.coordinates <= lower + margin) | (minimum.coordinates >= upper - margin), axis=0
     )
     return LawFit(
         law=law,
@@ -156,32 +173,43 @@ def _described(
     )
 
 
-def _inverted(matrix: list[list[Floats]]) -> tuple[Floats, Flags]:
-    """Inverse of a symmetric matrix a series, shape (series, n, n), by Gauss-Jordan on the correlation form.
+def _inverse_information(columns: list[Floats]) -> tuple[Floats, Flags]:
+    """Inverse of J'J of each series, shape (series, n, n), for the columns of J, each (levels, series).
 
-    Written out elementwise so that a series gives the same bits in every batch; the smallest pivot tells the
-    rank.
+    By modified Gram-Schmidt on columns of length one, which keeps twice the digits that J'J would (Bjorck
+    1967, doi:10.1007/BF01934122); elementwise, so that a series gives the same bits in every batch. What is
+    left of a column beside those before it tells the rank.
     """
-    count = len(matrix)
+    count = len(columns)
+    factor: dict[tuple[int, int], Floats] = {}
+    inverse: dict[tuple[int, int], Floats] = {}
     with np.errstate(all="ignore"):
-        scale = [np.sqrt(matrix[k][k]) for k in range(count)]
-        work = [[matrix[k][m] / (scale[k] * scale[m]) for m in range(count)] for k in range(count)]
-        identity = [[np.full_like(scale[0], float(k == m)) for m in range(count)] for k in range(count)]
-        smallest = np.full_like(scale[0], np.inf)
+        length = [np.sqrt(sum_rows(column * column)) for column in columns]
+        rest = [column / size for column, size in zip(columns, length, strict=True)]
+        smallest = np.full_like(length[0], np.inf)
         for k in range(count):
-            pivot = work[k][k]
-            smallest = np.minimum(smallest, np.where(np.isfinite(pivot), pivot, 0.0))
-            work[k] = [entry / pivot for entry in work[k]]
-            identity[k] = [entry / pivot for entry in identity[k]]
-            for m in range(count):
-                if m != k:
-                    factor = work[m][k]
-                    work[m] = [a - factor * b for a, b in zip(work[m], work[k], strict=True)]
-                    identity[m] = [a - factor * b for a, b in zip(identity[m], identity[k], strict=True)]
-        inverse = np.array(
-            [[identity[k][m] / (scale[k] * scale[m]) for m in range(count)] for k in range(count)]
-        )
-    return np.moveaxis(inverse, 2, 0), smallest > _SMALLEST_PIVOT
+            size = np.sqrt(sum_rows(rest[k] * rest[k]))
+            smallest = np.minimum(smallest, np.where(np.isfinite(size), size * size, 0.0))
+            factor[k, k] = size
+            rest[k] = rest[k] / size
+            for m in range(k + 1, count):
+                factor[k, m] = sum_rows(rest[k] * rest[m])
+                rest[m] = rest[m] - factor[k, m] * rest[k]
+        for m in range(count):
+            inverse[m, m] = 1.0 / factor[m, m]
+            for k in reversed(range(m)):
+                total = factor[k, m] * inverse[m, m]
+                for j in range(k + 1, m):
+                    total = total + factor[k, j] * inverse[j, m]
+                inverse[k, m] = -total / factor[k, k]
+        product = np.empty((length[0].size, count, count))
+        for k in range(count):
+            for m in range(k, count):
+                entry = inverse[k, m] * inverse[m, m]
+                for j in range(m + 1, count):
+                    entry = entry + inverse[k, j] * inverse[m, j]
+                product[:, k, m] = product[:, m, k] = entry / (length[k] * length[m])
+    return product, smallest > _SMALLEST_PIVOT
 
 
 def _joined(law: RateLaw, parts: list[LawFit], series_count: int) -> LawFit:

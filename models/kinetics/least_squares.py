@@ -2,9 +2,9 @@
 
 For given shape constants the best amplitude is linear and eliminated (Golub and Pereyra 1973,
 doi:10.1137/0710036; Kaufman 1975, doi:10.1007/BF01932995); what remains is a damped Gauss-Newton search on
-the logarithms of the shape constants. All arithmetic is elementwise over series and sums levels one after
-another, so that a series gives the same bits in every batch. This module knows neither plates nor weights'
-origin.
+the coordinates of the shape constants, any number of them. All arithmetic is elementwise over series and sums
+levels one after another, so that a series gives the same bits in every batch. This module knows neither
+plates nor weights' origin.
 """
 
 from __future__ import annotations
@@ -35,9 +35,9 @@ class Minimum:
     Attributes
     ----------
     amplitude
-        Best amplitude, shape (series,).
-    log_constants
-        Natural logarithms of the shape constants, shape (constants, series).
+        Best amplitude, shape (series,); 1 for a law without one.
+    coordinates
+        Coordinates of the shape constants, shape (constants, series).
     residual_sum
         Weighted sum of squared residuals, shape (series,).
     converged
@@ -45,7 +45,7 @@ class Minimum:
     """
 
     amplitude: Floats
-    log_constants: Floats
+    coordinates: Floats
     residual_sum: Floats
     converged: Flags
 
@@ -54,7 +54,7 @@ class Minimum:
 class _Point:
     """Where the search of each series stands: constants, cost, gradient, curvature (lower triangle)."""
 
-    log_constants: Floats
+    coordinates: Floats
     amplitude: Floats
     cost: Floats
     gradient: list[Floats]
@@ -62,7 +62,7 @@ class _Point:
 
     def accept(self, other: _Point, where: Flags) -> None:
         """Move to another point where that is better."""
-        np.copyto(self.log_constants, other.log_constants, where=where)
+        np.copyto(self.coordinates, other.coordinates, where=where)
         np.copyto(self.amplitude, other.amplitude, where=where)
         np.copyto(self.cost, other.cost, where=where)
         for k, row in enumerate(self.hessian):
@@ -73,7 +73,7 @@ class _Point:
     def select(self, where: Flags) -> _Point:
         """Some of the series."""
         return _Point(
-            self.log_constants[:, where],
+            self.coordinates[:, where],
             self.amplitude[where],
             self.cost[where],
             [g[where] for g in self.gradient],
@@ -87,10 +87,10 @@ def _point(
     rates: Floats,
     weights: Floats,
     square_sum: Floats,
-    log_constants: Floats,
+    coordinates: Floats,
     amplitude: Floats | None,
 ) -> _Point:
-    shape, slopes = law.evaluate(conditions, tuple(np.exp(row) for row in log_constants))
+    shape, slopes = law.evaluate(conditions, law.values(coordinates))
     weighted = weights * shape
     shape_square = sum_rows(weighted * shape)
     shape_rate = sum_rows(weighted * rates)
@@ -114,7 +114,7 @@ def _point(
                 product = product - projection * projections[m] / shape_square
             row.append(best * best * product)
         hessian.append(row)
-    return _Point(log_constants, best, cost, gradient, hessian)
+    return _Point(coordinates, best, cost, gradient, hessian)
 
 
 def _solve(
@@ -170,7 +170,7 @@ def minimise(
     conditions, rates, weights
         Shape (levels, series); a point that is not there has weight 0 and any finite values.
     start, lower, upper
-        Logarithms of the shape constants, shape (constants, series).
+        Coordinates of the shape constants, shape (constants, series).
     amplitude
         Keeps the amplitude at these values instead of eliminating it, shape (series,).
     fixed
@@ -182,6 +182,8 @@ def minimise(
         The best point found in each series.
     """
     count, series_count = start.shape
+    if law.amplitude is None:
+        amplitude = np.ones(series_count)
     free = np.ones((count, series_count))
     if fixed is not None:
         free[fixed] = 0.0
@@ -189,7 +191,7 @@ def minimise(
         np.arange(series_count), conditions, rates, weights, sum_rows(weights * rates * rates), lower, upper,
         free, amplitude, np.full(series_count, 1e-8), np.zeros(series_count, dtype=bool),
     )  # fmt: skip
-    best_logs, best_amplitude = start.copy(), np.zeros(series_count)
+    best_coordinates, best_amplitude = start.copy(), np.zeros(series_count)
     converged = np.zeros(series_count, dtype=bool)
     with np.errstate(all="ignore"):
         at = work.point(law, start.copy())
@@ -198,17 +200,17 @@ def minimise(
         converged |= np.isfinite(at.cost) & nothing_to_move
         for _ in range(_ITERATIONS):
             if np.count_nonzero(work.done) * 3 >= work.done.size:
-                best_logs[:, work.series], best_amplitude[work.series] = at.log_constants, at.amplitude
+                best_coordinates[:, work.series], best_amplitude[work.series] = at.coordinates, at.amplitude
                 at, work = at.select(~work.done), work.select(~work.done)
                 if work.series.size == 0:
                     break
             came_to_rest = _advance(law, work, at)
             converged[work.series[came_to_rest]] = True
-        best_logs[:, work.series], best_amplitude[work.series] = at.log_constants, at.amplitude
-        shape, _ = law.evaluate(conditions, tuple(np.exp(row) for row in best_logs))
+        best_coordinates[:, work.series], best_amplitude[work.series] = at.coordinates, at.amplitude
+        shape, _ = law.evaluate(conditions, law.values(best_coordinates))
         residual = rates - best_amplitude * shape
         residual_sum = sum_rows(weights * residual * residual)
-    return Minimum(best_amplitude, best_logs, residual_sum, converged)
+    return Minimum(best_amplitude, best_coordinates, residual_sum, converged)
 
 
 @dataclass
@@ -227,9 +229,9 @@ class _Work:
     damping: Floats
     done: Flags
 
-    def point(self, law: RateLaw, log_constants: Floats) -> _Point:
+    def point(self, law: RateLaw, coordinates: Floats) -> _Point:
         return _point(
-            law, self.conditions, self.rates, self.weights, self.square_sum, log_constants, self.amplitude
+            law, self.conditions, self.rates, self.weights, self.square_sum, coordinates, self.amplitude
         )
 
     def select(self, where: Flags) -> _Work:
@@ -251,13 +253,21 @@ class _Work:
 def _advance(law: RateLaw, work: _Work, at: _Point) -> Flags:
     """One damped Gauss-Newton step of every series at work; returns which have now come to rest."""
     steps = _solve(at.hessian, at.gradient, work.damping, _movable(at, work))
-    trial_log = np.empty_like(at.log_constants)
+    trial_at = np.empty_like(at.coordinates)
     longest = np.zeros(work.series.size)
     for k, step in enumerate(steps):
-        wanted = at.log_constants[k] + np.minimum(np.maximum(step, -_LONGEST_STEP), _LONGEST_STEP)
-        trial_log[k] = np.minimum(np.maximum(wanted, work.lower[k]), work.upper[k])
-        longest = np.maximum(longest, np.abs(trial_log[k] - at.log_constants[k]))
-    trial = work.point(law, trial_log)
+        positive = law.shape_constants[k].positive
+        if positive:
+            step = np.minimum(np.maximum(step, -_LONGEST_STEP), _LONGEST_STEP)
+        wanted = at.coordinates[k] + step
+        trial_at[k] = np.minimum(np.maximum(wanted, work.lower[k]), work.upper[k])
+        moved = np.abs(trial_at[k] - at.coordinates[k])
+        if not positive:
+            # A constant without limits has no scale but its own size.
+            limited = np.isfinite(work.lower[k]) & np.isfinite(work.upper[k])
+            moved = moved / np.where(limited, 1.0, np.maximum(np.abs(at.coordinates[k]), 1e-300))
+        longest = np.maximum(longest, moved)
+    trial = work.point(law, trial_at)
     open_still = ~work.done
     better = (trial.cost <= at.cost + _ROUNDING * work.square_sum) & open_still
     # A step that is refused although tiny is refused by rounding: nothing is left to gain.
@@ -273,14 +283,14 @@ def _movable(at: _Point, work: _Work) -> Floats:
     """1 for constants that may move, 0 at a limit that the gradient presses against (constants, series)."""
     movable = work.free.copy()
     for k, gradient in enumerate(at.gradient):
-        pressed = (at.log_constants[k] <= work.lower[k]) & (gradient < 0)
-        pressed |= (at.log_constants[k] >= work.upper[k]) & (gradient > 0)
+        pressed = (at.coordinates[k] <= work.lower[k]) & (gradient < 0)
+        pressed |= (at.coordinates[k] >= work.upper[k]) & (gradient > 0)
         movable[k][pressed] = 0.0
     return movable
 
 
 def best_start(law: RateLaw, conditions: Conditions, rates: Floats, weights: Floats) -> Floats:
-    """Logarithms of the best of the law's own start values, shape (constants, series)."""
+    """Coordinates of the best of the law's own start values, shape (constants, series)."""
     candidates = law.starts(conditions, weights)
     best_gain = np.full(rates.shape[1], -np.inf)
     best = candidates[0].copy()
@@ -288,10 +298,10 @@ def best_start(law: RateLaw, conditions: Conditions, rates: Floats, weights: Flo
         for candidate in candidates:
             shape, _ = law.evaluate(conditions, tuple(candidate))
             weighted = weights * shape
-            explained = sum_rows(weighted * rates)
-            gain = explained * np.abs(explained) / sum_rows(weighted * shape)
+            explained, size = sum_rows(weighted * rates), sum_rows(weighted * shape)
+            free_gain = explained * np.abs(explained) / size
+            gain = 2.0 * explained - size if law.amplitude is None else free_gain
             better = gain > best_gain
             best_gain = np.where(better, gain, best_gain)
             best = np.where(better, candidate, best)
-    logs: Floats = np.log(best)
-    return logs
+    return law.coordinates(best)

@@ -1,12 +1,13 @@
 """The few series that the batched search does not settle, one by one with SciPy.
 
-Bounded trust-region least squares on the logarithms of the shape constants, the amplitude eliminated as
+Bounded trust-region least squares on the coordinates of the shape constants, the amplitude eliminated as
 before.
 """
 
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy.optimize import least_squares
 
 from models.kinetics.laws.law import Conditions, Floats, RateLaw
@@ -31,7 +32,7 @@ def settle(
     minimum
         What it found.
     lower, upper
-        Limits of the logarithms, shape (constants, series).
+        Limits of the coordinates, shape (constants, series).
 
     Returns
     -------
@@ -39,23 +40,33 @@ def settle(
     """
     if minimum.converged.all():
         return minimum
-    amplitude, log_constants = minimum.amplitude.copy(), minimum.log_constants.copy()
+    amplitude, coordinates = minimum.amplitude.copy(), minimum.coordinates.copy()
     residual_sum, converged = minimum.residual_sum.copy(), minimum.converged.copy()
     for series in np.flatnonzero(~minimum.converged):
         problem = _Projected(law, conditions, rates, weights, int(series))
         low, high = lower[:, series], upper[:, series]
-        start = np.clip(log_constants[:, series], low, high)
+        start = np.clip(coordinates[:, series], low, high)
         if not np.all(np.isfinite(problem.residuals(start))):
             continue
+        # SciPy wants a start strictly between the limits.
+        inside = np.minimum(np.maximum(start, np.nextafter(low, np.inf)), np.nextafter(high, -np.inf))
         found = least_squares(
-            problem.residuals, start, bounds=(low, high), xtol=1e-12, ftol=1e-15, gtol=1e-15
+            problem.residuals,
+            inside,
+            jac=problem.jacobian,
+            bounds=(low, high),
+            x_scale="jac",
+            xtol=1e-14,
+            ftol=1e-15,
+            gtol=1e-15,
+            max_nfev=2000,
         )
         if 2.0 * found.cost <= residual_sum[series] * (1.0 + 1e-12):
             amplitude[series] = problem.amplitude(found.x)
-            log_constants[:, series] = found.x
+            coordinates[:, series] = found.x
             residual_sum[series] = 2.0 * found.cost
         converged[series] = bool(found.success)
-    return Minimum(amplitude, log_constants, residual_sum, converged)
+    return Minimum(amplitude, coordinates, residual_sum, converged)
 
 
 class _Projected:
@@ -69,14 +80,26 @@ class _Projected:
         self._rates = rates[:, series]
         self._root = np.sqrt(weights[:, series])
 
-    def amplitude(self, logs: Floats) -> float:
-        return self._solve(logs)[0]
+    def amplitude(self, coordinates: Floats) -> float:
+        return self._solve(coordinates)[0]
 
-    def residuals(self, logs: Floats) -> Floats:
-        return self._solve(logs)[1]
+    def residuals(self, coordinates: Floats) -> Floats:
+        best, shape, _ = self._solve(coordinates)
+        return self._root * self._rates - best * shape
 
-    def _solve(self, logs: Floats) -> tuple[float, Floats]:
-        shape, _ = self._law.evaluate(self._conditions, tuple(np.array([value]) for value in np.exp(logs)))
+    def jacobian(self, coordinates: Floats) -> NDArray[np.float64]:
+        """Kaufman's form: what is left of the derivatives beside the shape itself."""
+        best, shape, slopes = self._solve(coordinates)
+        if self._law.amplitude is not None:
+            slopes = slopes - np.outer(shape, shape @ slopes) / float(shape @ shape)
+        return -best * slopes
+
+    def _solve(self, coordinates: Floats) -> tuple[float, Floats, Floats]:
+        with np.errstate(all="ignore"):
+            shape, slopes = self._law.evaluate(self._conditions, self._law.values(coordinates[:, None]))
         column = self._root * shape[:, 0]
+        derivatives = np.stack([self._root * slope[:, 0] for slope in slopes], axis=1)
+        if self._law.amplitude is None:
+            return 1.0, column, derivatives
         best = float(np.sum(column * self._root * self._rates) / np.sum(column * column))
-        return best, self._root * self._rates - best * column
+        return best, column, derivatives

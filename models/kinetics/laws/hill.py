@@ -43,7 +43,7 @@ def starts(conditions: Conditions, weights: Floats) -> Floats:
 HILL = RateLaw(
     name="hill",
     title="Hill",
-    equation="v = vmax S^n / (k_half^n + S^n)",
+    equation="v = vmax S^hill_n / (k_half^hill_n + S^hill_n)",
     amplitude=VMAX,
     shape_constants=(K_HALF, HILL_N),
     evaluate=evaluate,
