@@ -8,7 +8,10 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import exprel, wrightomega
+from scipy.special import exprel
+
+from models.kinetics.progress.integrated import effective_time as remaining_time
+from models.kinetics.progress.integrated import product_formed
 
 Array = NDArray[np.float64]
 
@@ -20,8 +23,8 @@ _STEPS_TO_MACHINE_PRECISION = 200
 def michaelis_menten_product(substrate_um: Array, vmax_um_per_s: Array, km_um: Array, time_s: Array) -> Array:
     """Product formed by the integrated Michaelis-Menten law.
 
-    S(t)/Km = W((S0/Km) exp((S0 - Vmax t)/Km)), with W the Lambert function. It is evaluated as the Wright
-    omega function of the logarithm of W's argument, which does not overflow where S0 is far above Km.
+    The law itself is defined in `models.kinetics.progress.integrated`; here it stands without product
+    inhibition, beside the Hill law.
 
     Parameters
     ----------
@@ -40,13 +43,7 @@ def michaelis_menten_product(substrate_um: Array, vmax_um_per_s: Array, km_um: A
     ----------
     Schnell and Mendoza (1997), J. Theor. Biol. 187, 207-212, doi:10.1006/jtbi.1997.0425, eq. 9.
     """
-    start, vmax, km, time = np.broadcast_arrays(substrate_um, vmax_um_per_s, km_um, time_s)
-    product = np.zeros(start.shape)
-    some = start > 0
-    reduced = start[some] / km[some]
-    left = wrightomega(np.log(reduced) + reduced - vmax[some] * time[some] / km[some])
-    product[some] = start[some] - km[some] * left.real
-    return np.clip(product, 0.0, start)
+    return product_formed(substrate_um, vmax_um_per_s, km_um, time_s)
 
 
 def hill_product(
@@ -129,7 +126,6 @@ def effective_time(time_s: Array, transient_ratio: Array, transient_per_s: Array
     Morrison and Walsh (1988), Adv. Enzymol. 61, 201-301, doi:10.1002/9780470123072.ch5.
     """
 
-    def decayed(rate: Array) -> Array:
-        return np.asarray(time_s * exprel(-rate * time_s), dtype=np.float64)
-
-    return decayed(loss_per_s) + (transient_ratio - 1.0) * decayed(loss_per_s + transient_per_s)
+    transient = remaining_time(time_s, loss_per_s + transient_per_s)
+    steady: Array = remaining_time(time_s, loss_per_s) + (transient_ratio - 1.0) * transient
+    return steady
