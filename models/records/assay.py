@@ -7,11 +7,52 @@ from __future__ import annotations
 
 from typing import Literal
 
+import numpy as np
+from numpy.typing import NDArray
 from pydantic import Field, model_validator
 
+from models.calibration.calibration import Calibration, Direction
+from models.calibration.path_length import (
+    WATER_PER_CM,
+    WATER_PER_CM_RELATIVE_ERROR,
+    path_from_volume_cm,
+)
+from models.calibration.shared_error import relative_error_of_factors
+from models.calibration.standard_curve import EXTRAPOLATION, CalibrationRefusal, calibrate
+from models.calibration.variances import Weighting
 from models.records.record import Record
 
 SettingValue = bool | int | float
+
+
+class WaterBand(Record):
+    """Path length of each well from the absorbance of water in the near infrared."""
+
+    channel_977: str = "977"
+    """Channel of the export with the absorbance at 977 nm."""
+    channel_900: str = "900"
+    """Channel of the export with the absorbance at 900 nm."""
+    water_per_cm: float | None = Field(default=None, ge=0.1, le=0.3)
+    """A977 - A900 of 1 cm of water at the assay's temperature, as the site found it; left out, a common value
+    is used with an error for it."""
+    source: str | None = Field(default=None, min_length=3)
+    """Where water_per_cm comes from; needed with it."""
+
+    @model_validator(mode="after")
+    def _value_with_source(self) -> WaterBand:
+        if (self.water_per_cm is None) != (self.source is None):
+            raise ValueError("water_per_cm and its source go together")
+        return self
+
+    @property
+    def per_cm(self) -> float:
+        """A977 - A900 per cm of water in force."""
+        return WATER_PER_CM if self.water_per_cm is None else self.water_per_cm
+
+    @property
+    def relative_error_shared(self) -> float:
+        """Relative standard error of that value, which all wells share: 0 for the site's own."""
+        return WATER_PER_CM_RELATIVE_ERROR if self.water_per_cm is None else 0.0
 
 
 class Absorption(Record):
@@ -21,33 +62,60 @@ class Absorption(Record):
     """Magnitude of the change of molar absorption coefficient, L/mol/cm."""
     source: str = Field(min_length=3)
     """Where the coefficient comes from: publication or the site's own determination."""
+    change_relative_error: float | None = Field(default=None, gt=0, lt=1)
+    """Relative standard error of the coefficient, where it is known; all wells share it."""
     path_length_cm: float | None = Field(default=None, gt=0, le=10)
     """Path length, cm, where it is stated."""
     fill_volume_ul: float | None = Field(default=None, gt=0)
     """Fill volume, uL: with the well's area it gives the path length."""
     well_area_mm2: float | None = Field(default=None, gt=0)
     """Cross-section of the well, mm2."""
+    water_band: WaterBand | None = None
+    """Path length of each well from the water band, in place of the two other ways."""
 
     @model_validator(mode="after")
     def _one_path_length(self) -> Absorption:
-        from_volume = self.fill_volume_ul is not None and self.well_area_mm2 is not None
-        if (self.path_length_cm is not None) == from_volume:
-            raise ValueError("state path_length_cm, or fill_volume_ul together with well_area_mm2")
+        ways = (
+            self.path_length_cm is not None,
+            self.fill_volume_ul is not None and self.well_area_mm2 is not None,
+            self.water_band is not None,
+        )
+        if sum(ways) != 1:
+            raise ValueError(
+                "state path_length_cm, or fill_volume_ul together with well_area_mm2, or a [water_band]"
+            )
         return self
 
     @property
     def path_cm(self) -> float:
-        """Path length, cm: stated, or volume over area (1 uL over 1 mm2 is 1 mm)."""
+        """Path length, cm: stated, or volume over area (1 uL over 1 mm2 is 1 mm).
+
+        Raises
+        ------
+        ValueError
+            If each well has its own, from the water band.
+        """
         if self.path_length_cm is not None:
             return self.path_length_cm
-        assert self.fill_volume_ul is not None
-        assert self.well_area_mm2 is not None
-        return self.fill_volume_ul / self.well_area_mm2 / 10.0
+        if self.fill_volume_ul is None or self.well_area_mm2 is None:
+            raise ValueError("with a water band each well has its own path length: use signal_per_um_per_cm")
+        return path_from_volume_cm(self.fill_volume_ul, self.well_area_mm2)
+
+    @property
+    def signal_per_um_per_cm(self) -> float:
+        """Signal per umol/L of product and cm of path; the classic slip is to forget 1 mol/L = 1e6 umol/L."""
+        return self.change_per_molar_per_cm / 1e6
 
     @property
     def signal_per_um(self) -> float:
-        """Signal per umol/L of product; the classic slip is to forget 1 mol/L = 1e6 umol/L."""
-        return self.change_per_molar_per_cm * self.path_cm / 1e6
+        """Signal per umol/L of product, where all wells have one path length."""
+        return self.signal_per_um_per_cm * self.path_cm
+
+    @property
+    def relative_error_shared(self) -> float:
+        """Relative standard error of the conversion that all wells share; 0 where none is known."""
+        of_band = 0.0 if self.water_band is None else self.water_band.relative_error_shared
+        return relative_error_of_factors(self.change_relative_error or 0.0, of_band)
 
 
 class Response(Record):
@@ -57,6 +125,73 @@ class Response(Record):
     """Signal per umol/L of product."""
     source: str = Field(min_length=3)
     """Where the response comes from."""
+
+
+class StandardPoint(Record):
+    """One standard of a stated curve."""
+
+    product_um: float = Field(ge=0)
+    """Known product, umol/L."""
+    signal: float
+    """Its signal; several readings of one product are several points."""
+
+
+class StandardCurve(Record):
+    """Signal to product through a curve fitted to standards."""
+
+    points_from: Literal["plate", "stated"]
+    """Whether the standards are the plate's own wells of role standard, or the points stated here."""
+    model: Literal["linear", "quadratic", "four_parameter"] = "linear"
+    """Shape of the curve."""
+    weighting: Weighting = "constant"
+    """How the scatter of a signal grows with it: constant, proportional, or as the replicates show."""
+    extrapolation: float = Field(default=EXTRAPOLATION, ge=0, le=0.5)
+    """Share of the range of standards by which a product may lie beyond it."""
+    points: tuple[StandardPoint, ...] = ()
+    """The standards, where they are stated."""
+    source: str | None = Field(default=None, min_length=3)
+    """Where stated points come from."""
+
+    @model_validator(mode="after")
+    def _points_where_stated(self) -> StandardCurve:
+        if self.points_from == "plate" and (self.points or self.source):
+            raise ValueError('points and source belong to points_from = "stated"')
+        if self.points_from == "stated" and not (self.points and self.source):
+            raise ValueError('points_from = "stated" needs points and their source')
+        return self
+
+    def stated(self, direction: Direction) -> Calibration | CalibrationRefusal:
+        """The curve through the points stated here."""
+        return self.fit(
+            np.array([point.product_um for point in self.points], dtype=np.float64),
+            np.array([point.signal for point in self.points], dtype=np.float64),
+            direction,
+        )
+
+    def fit(
+        self, product_um: NDArray[np.float64], signal: NDArray[np.float64], direction: Direction
+    ) -> Calibration | CalibrationRefusal:
+        """The curve through these standards, shape (standards,), as this record says."""
+        return calibrate(product_um, signal, self.model, self.weighting, direction, self.extrapolation)
+
+
+class Sample(Record):
+    """How the enzyme sample comes into the assay: gives activity per mL of the sample itself."""
+
+    assay_volume_ul: float = Field(gt=0)
+    """Volume of the assay mixture in the well, uL."""
+    sample_volume_ul: float = Field(gt=0)
+    """Volume of the (diluted) sample in it, uL."""
+    dilution: float = Field(default=1.0, ge=1)
+    """How many times the sample was diluted before it was pipetted; 1 for not at all."""
+    protein_mg_per_ml: float | None = Field(default=None, gt=0)
+    """Protein of the undiluted sample, mg/mL: gives activity per mg of it."""
+
+    @model_validator(mode="after")
+    def _sample_fits(self) -> Sample:
+        if self.sample_volume_ul > self.assay_volume_ul:
+            raise ValueError("sample_volume_ul is more than assay_volume_ul, which contains it")
+        return self
 
 
 class Signal(Record):
@@ -140,6 +275,12 @@ class Assay(Record):
     """Signal to product by molar absorption."""
     response: Response | None = None
     """Signal to product by a stated response."""
+    standard_curve: StandardCurve | None = None
+    """Signal to product through a standard curve."""
+    product_recovery: float = Field(default=1.0, gt=0, le=2)
+    """Share of the product that the measurement finds, such as after a quench or an extraction."""
+    sample: Sample | None = None
+    """How the enzyme sample comes into the assay."""
     limiting_reagent: LimitingReagent | None = None
     """A reagent used up with the substrate; conversion counts against whichever runs out first."""
     window: Window = Window()
@@ -153,18 +294,32 @@ class Assay(Record):
 
     @model_validator(mode="after")
     def _one_conversion(self) -> Assay:
-        if (self.absorption is None) == (self.response is None):
-            raise ValueError("state either [absorption] or [response]: how the signal becomes product")
+        ways = (self.absorption, self.response, self.standard_curve)
+        if sum(way is not None for way in ways) != 1:
+            raise ValueError(
+                "state either [absorption] or [response] or [standard_curve]: how the signal becomes product"
+            )
+        if self.standard_curve is not None and self.standard_curve.points_from == "stated":
+            curve = self.standard_curve.stated(self.signal.direction)
+            if isinstance(curve, CalibrationRefusal):
+                raise ValueError(f"the stated standard curve cannot be used: {curve.reason}")
         if not self.laws:
             raise ValueError("laws must name at least one rate law")
         return self
 
     @property
     def signal_per_um(self) -> float:
-        """Signal per umol/L of product, positive."""
+        """Signal per umol/L of product, positive, where one number says it for all wells.
+
+        Raises
+        ------
+        ValueError
+            If it is a standard curve's, which may bend, or differs from well to well with the path length.
+        """
         conversion = self.absorption or self.response
-        assert conversion is not None
-        return conversion.signal_per_um
+        if conversion is None:
+            raise ValueError("with a standard curve, product is read through the curve")
+        return conversion.signal_per_um * self.product_recovery
 
     def consumable_um(self, substrate_um: float) -> float:
         """Substrate, umol/L, that can be consumed before substrate or limiting reagent runs out."""
