@@ -7,17 +7,16 @@ nothing and knows neither plates nor files.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
+from models.calibration.choices import Direction, Weighting
 from models.calibration.curves import FOUR_PARAMETER, CurveShape
-from models.calibration.variances import VarianceModel, Weighting
+from models.calibration.variances import VarianceModel
 from models.statistics.lack_of_fit import LackOfFit
 
 Floats = NDArray[np.float64]
-Direction = Literal["rises", "falls"]
 
 
 @dataclass(frozen=True, eq=False)

@@ -12,14 +12,13 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.stats import f as f_distribution
 
-from models.calibration.calibration import Calibration, Direction
+from models.calibration.calibration import Calibration
+from models.calibration.choices import EXTRAPOLATION, WEIGHTINGS, Direction, Weighting
 from models.calibration.curve_fits import CurveFit, fit_curve
 from models.calibration.curves import FOUR_PARAMETER, CurveShape, curve_shape
 from models.calibration.variances import (
     CONSTANT,
-    WEIGHTINGS,
     VarianceModel,
-    Weighting,
     proportional_variance,
     variance_from_replicates,
 )
@@ -29,9 +28,6 @@ from models.statistics.lack_of_fit import lack_of_fit
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int_]
 
-EXTRAPOLATION = 0.05
-"""Share of the range of standards by which a product may lie beyond it: noise about the lowest standard must
-not be cut (common practice, no source)."""
 _FLAT_P = 0.01
 _WEIGHT_ROUNDS = 30
 

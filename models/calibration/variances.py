@@ -6,7 +6,6 @@ Knows signals and groups only: no curve, no concentration.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Literal, get_args
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,9 +14,6 @@ from models.statistics.pipetting import replicate_variance_components
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int_]
-
-Weighting = Literal["constant", "proportional", "replicates"]
-WEIGHTINGS: tuple[str, ...] = get_args(Weighting)
 
 LEAST_PROPORTION = 0.01
 """A scatter in proportion to the signal is not taken to fall below that at this share of the highest signal:

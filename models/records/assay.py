@@ -5,22 +5,24 @@ One TOML file an assay. Keys carry their units; nothing here reads a file.
 
 from __future__ import annotations
 
-from typing import Literal
+import math
+from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 from numpy.typing import NDArray
 from pydantic import Field, model_validator
 
-from models.calibration.calibration import Calibration, Direction
+from models.calibration.choices import EXTRAPOLATION, Direction, Model, Weighting
 from models.calibration.path_length import (
     WATER_PER_CM,
     WATER_PER_CM_RELATIVE_ERROR,
     path_from_volume_cm,
 )
-from models.calibration.shared_error import relative_error_of_factors
-from models.calibration.standard_curve import EXTRAPOLATION, CalibrationRefusal, calibrate
-from models.calibration.variances import Weighting
 from models.records.record import Record
+
+if TYPE_CHECKING:
+    from models.calibration.calibration import Calibration
+    from models.calibration.standard_curve import CalibrationRefusal
 
 SettingValue = bool | int | float
 
@@ -115,7 +117,7 @@ class Absorption(Record):
     def relative_error_shared(self) -> float:
         """Relative standard error of the conversion that all wells share; 0 where none is known."""
         of_band = 0.0 if self.water_band is None else self.water_band.relative_error_shared
-        return relative_error_of_factors(self.change_relative_error or 0.0, of_band)
+        return math.hypot(self.change_relative_error or 0.0, of_band)
 
 
 class Response(Record):
@@ -141,7 +143,7 @@ class StandardCurve(Record):
 
     points_from: Literal["plate", "stated"]
     """Whether the standards are the plate's own wells of role standard, or the points stated here."""
-    model: Literal["linear", "quadratic", "four_parameter"] = "linear"
+    model: Model = "linear"
     """Shape of the curve."""
     weighting: Weighting = "constant"
     """How the scatter of a signal grows with it: constant, proportional, or as the replicates show."""
@@ -172,6 +174,9 @@ class StandardCurve(Record):
         self, product_um: NDArray[np.float64], signal: NDArray[np.float64], direction: Direction
     ) -> Calibration | CalibrationRefusal:
         """The curve through these standards, shape (standards,), as this record says."""
+        # Here, since it takes a second that reading a configuration should not.
+        from models.calibration.standard_curve import calibrate
+
         return calibrate(product_um, signal, self.model, self.weighting, direction, self.extrapolation)
 
 
@@ -300,6 +305,8 @@ class Assay(Record):
                 "state either [absorption] or [response] or [standard_curve]: how the signal becomes product"
             )
         if self.standard_curve is not None and self.standard_curve.points_from == "stated":
+            from models.calibration.standard_curve import CalibrationRefusal
+
             curve = self.standard_curve.stated(self.signal.direction)
             if isinstance(curve, CalibrationRefusal):
                 raise ValueError(f"the stated standard curve cannot be used: {curve.reason}")
