@@ -29,7 +29,7 @@ from flows.stages.publish import publish_results
 from flows.stages.pull import known_files, pull
 from flows.stages.rate import rate_batch
 from flows.stages.stage_files import StagedFiles, stage_files
-from flows.stages.work import FittedBatch, GatedBatch
+from flows.stages.work import FittedBatch, GatedBatch, PlateWork
 from flows.warehouse.writer import loader
 from models.identity import result_id
 from models.tables import ANALYSES, FILES, GATE_RUNS, PASSES, PLATE_MAPS, PLATE_READS, RECIPES, SERIES, WELLS
@@ -103,7 +103,11 @@ def run_pass(site: Site, clock: Clock, run: Run = run_plainly) -> PassReport:
         analysis_ids: list[str] = []
         held_count = 0
         for part in _batches(ready, night.configuration.settings.plates_per_batch):
-            gated = run("gate", _gate, night, part)
+            works, unconverted = load_work(night.site, part)
+            waiting += unconverted
+            if not works:
+                continue
+            gated = run("gate", gate_works, works)
             fitted = run("fit", fit_batch, gated)
             run("load", _load_batch, night, fitted)
             analysis_ids += [work.analysis_id for work in fitted.plates]
@@ -155,8 +159,9 @@ def _take_in(night: _Pass, run: Run) -> StagedFiles:
     return staged
 
 
-def _gate(night: _Pass, ready: Sequence[Ready]) -> GatedBatch:
-    return gate_batch(rate_batch(list(load_work(night.site, ready))))
+def gate_works(works: Sequence[PlateWork]) -> GatedBatch:
+    """Measure the rates of a batch and hold them against the gates."""
+    return gate_batch(rate_batch(works))
 
 
 def _load_batch(night: _Pass, fitted: FittedBatch) -> None:

@@ -5,7 +5,7 @@ A plate read is ready when it has no analysis yet and its plate has a plate map,
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from fnmatch import fnmatchcase
 from functools import lru_cache
@@ -19,6 +19,7 @@ from flows.site.archive import fetch
 from flows.site.configuration import Configuration
 from flows.site.layout import Site
 from flows.site.recipes import Recipe, code_version
+from flows.stages.conversion import plate_conversion
 from flows.stages.read import PlateMap, read_plate_map
 from flows.stages.work import PlateWork
 from flows.warehouse.writer import loader
@@ -76,8 +77,13 @@ def find_pending(site: Site, configuration: Configuration) -> tuple[list[Ready],
     return ready, waiting
 
 
-def load_work(site: Site, ready: Sequence[Ready]) -> Iterator[PlateWork]:
+def load_work(site: Site, ready: Sequence[Ready]) -> tuple[list[PlateWork], list[Waiting]]:
     """Read the readings and the plate map of each plate read that is ready.
+
+    Returns
+    -------
+    tuple
+        Plate reads to analyse, and those whose signal cannot be converted, with the reason.
 
     Raises
     ------
@@ -85,14 +91,23 @@ def load_work(site: Site, ready: Sequence[Ready]) -> Iterator[PlateWork]:
         If raw archive or lake have lost or changed a file.
     """
     plate_maps = _PlateMaps(site)
+    works: list[PlateWork] = []
+    waiting: list[Waiting] = []
     for each in ready:
         readings = read_rows(site, READINGS.name, each.plate_read_id)
-        if each.channel:
-            readings = readings[readings["channel"] == each.channel].reset_index(drop=True)
-        plate_map = plate_maps.of(each.map_id, each.map_name)[each.plate_id]
-        yield PlateWork(
-            each.plate_read_id, each.plate_id, each.map_id, each.recipe, readings, plate_map.wells
+        wells = plate_maps.of(each.map_id, each.map_name)[each.plate_id].wells
+        try:
+            conversion = plate_conversion(each.recipe.assay, readings, wells, each.channel)
+        except HalfsatError as error:
+            waiting.append(Waiting(each.plate_id, str(error)))
+            continue
+        of_channel = readings[readings["channel"] == each.channel].reset_index(drop=True)
+        works.append(
+            PlateWork(
+                each.plate_read_id, each.plate_id, each.map_id, each.recipe, of_channel, wells, conversion
+            )
         )
+    return works, waiting
 
 
 class _RecipeBook:

@@ -94,13 +94,13 @@ def _number_series(wells: pd.DataFrame, plates: Sequence[PlateWork]) -> tuple[pd
 
 
 def _reads_of(work: PlateWork) -> pd.DataFrame:
-    """Reads of one plate with their state, reads beyond the detector's linear limit marked so."""
+    """Reads of one plate with their state: past_limit where the signal no longer says how much product."""
     reads = work.readings[["well", "read_number", "time_s", "signal", "state"]].copy()
     reads.insert(0, "analysis_id", work.analysis_id)
+    signal = reads["signal"].to_numpy(dtype=float)
     limit = work.recipe.assay.signal.linear_limit
-    if limit is not None:
-        beyond = (reads["state"] == "ok") & (reads["signal"] > limit)
-        reads["state"] = reads["state"].astype(object).where(~beyond, "past_limit")
+    beyond = ~work.conversion.readable(signal) | (signal > (np.inf if limit is None else limit))
+    reads["state"] = reads["state"].astype(object).where(~beyond | (reads["state"] != "ok"), "past_limit")
     return reads
 
 
@@ -122,8 +122,10 @@ def _curves(
 
     plate = rated["plate"].to_numpy(dtype=np.intp)
     assays = [work.recipe.assay for work in plates]
-    sign = np.array([1.0 if assay.signal.direction == "rises" else -1.0 for assay in assays])
-    per_substrate_um = np.array([assay.signal_per_um * assay.product_per_substrate for assay in assays])
+    turnover_um = np.full(shape, np.nan)
+    for number, work in enumerate(plates):
+        of_plate = plate == number
+        turnover_um[of_plate] = work.conversion.turnover_um(list(rated["well"][of_plate]), signal[of_plate])
     substrate_um = rated["substrate_um"].to_numpy(dtype=float)
     consumable_um = np.array(
         [assays[p].consumable_um(s) if s > 0 else np.nan for p, s in zip(plate, substrate_um, strict=True)]
@@ -131,7 +133,7 @@ def _curves(
     from_blank = np.array([assay.signal.product_zero == "blank" for assay in assays])
     batch = CurveBatch(
         time_s=time_s,
-        product_um=signal * (sign / per_substrate_um)[plate][:, None],
+        product_um=turnover_um,
         plate=plate,
         series=rated["series"].to_numpy(dtype=np.intp),
         is_blank=(rated["role"] == "blank").to_numpy(),

@@ -12,6 +12,7 @@ import pandas as pd
 
 from checks.assess import GateRun
 from flows.site.recipes import Recipe
+from flows.stages.conversion import Conversion
 from models.identity import result_id
 
 
@@ -23,6 +24,8 @@ class PlateWork:
     ----------
     readings
         Readings of the assay's channel, columns of the `readings` table.
+    conversion
+        How its signal becomes substrate turned over.
     wells
         The plate map's wells, columns of the `wells` table from `well` to `product_um`.
     """
@@ -33,6 +36,7 @@ class PlateWork:
     recipe: Recipe
     readings: pd.DataFrame
     wells: pd.DataFrame
+    conversion: Conversion
 
     @property
     def analysis_id(self) -> str:

@@ -12,6 +12,7 @@ from checks.gates import resolve_limits
 from flows.site.configuration import load_configuration
 from flows.site.recipes import Recipe
 from flows.site.shipped import shipped
+from flows.stages.conversion import plate_conversion
 from flows.stages.fit import fit_batch
 from flows.stages.gate import gate_batch
 from flows.stages.rate import rate_batch
@@ -53,7 +54,8 @@ def plate_work(assay: Assay, *, seed: int = 5, sign: float = 1.0) -> PlateWork:
     readings["signal"] = sign * plate.signal.ravel() + (0.0 if sign > 0 else 3.0)
     readings["state"] = "ok"
     recipe = Recipe("test", assay, "test", PROFILE, resolve_limits({}, assay.gates), "test")
-    return PlateWork("read", "plate", "map", recipe, readings, plate.wells)
+    conversion = plate_conversion(assay, readings.assign(channel="signal"), plate.wells, "signal")
+    return PlateWork("read", "plate", "map", recipe, readings, plate.wells, conversion)
 
 
 def test_falling_signal_and_stoichiometry_give_the_same_turnover() -> None:
