@@ -29,7 +29,10 @@ Floats = NDArray[np.float64]
 Integers = NDArray[np.int_]
 
 _FLAT_P = 0.01
+_FLAT_SHARE = 1e-9
 _WEIGHT_ROUNDS = 30
+_VARIANCE_ROUNDS = 3
+"""What replicates show hardly depends on the curve: it is asked anew in the first rounds only."""
 
 
 class CalibrationRefusalKind(StrEnum):
@@ -133,13 +136,13 @@ def _fit_weighted(
     variances: VarianceModel | None = CONSTANT
     weights = np.ones(signal.size)
     fit = fit_curve(shape, product_um, signal, weights)
-    for _ in range(0 if weighting == "constant" else _WEIGHT_ROUNDS):
+    for number in range(0 if weighting == "constant" else _WEIGHT_ROUNDS):
         if not fit.determined:
             break
         fitted = shape.signal(product_um, fit.parameters)
         if weighting == "proportional":
             variances = proportional_variance(fitted)
-        else:
+        elif number < _VARIANCE_ROUNDS:
             variances = variance_from_replicates(group, signal, fitted)
         if variances is None:
             return CalibrationRefusal(
@@ -185,7 +188,8 @@ def _refuse_flat(
     degrees = signal.size - constants
     explained = (of_mean - residual_sum) / (constants - 1)
     critical = float(f_distribution.isf(_FLAT_P, constants - 1, degrees))
-    if of_mean > 0 and explained > critical * residual_sum / degrees:
+    size = float(np.sum(weights * signal**2))
+    if of_mean > _FLAT_SHARE**2 * size and explained > critical * residual_sum / degrees:
         return None
     return CalibrationRefusal(
         CalibrationRefusalKind.FLAT, "the signal of the standards does not depend on their product"

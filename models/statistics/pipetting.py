@@ -92,9 +92,9 @@ def replicate_variance_components(
 
     Restricted likelihood within the groups (Patterson and Thompson 1971, doi:10.1093/biomet/58.3.545) with a
     ridge that draws both squared coefficients to the value at which, being equal, they explain the plate's
-    scatter: it decides where replicates are few and yields where they are many. Fisher scoring, each step a
-    non-negative least-squares problem in the two squares, halved where it does not climb. An error that all
-    replicates of a level share, such as one of the stock they are drawn from, is not seen here.
+    scatter: it decides where replicates are few and yields where they are many. Newton's method, or Fisher
+    scoring where that would not climb, each step a non-negative least-squares problem in the two squares. An
+    error that all replicates of a level share, as of the stock they are drawn from, is not seen here.
 
     Parameters
     ----------
@@ -208,6 +208,20 @@ class _Problem:
                 information[first, second] = information[second, first] = self._by_plate(terms)
         return information
 
+    def curvature(self, squares: Floats) -> Floats:
+        """Second derivative of the loss as observed, shape (2, 2, plates): its steps settle in few rounds."""
+        weight = self.weights(squares)
+        total = self._by_group(weight)
+        centred = self.residual - (self._by_group(weight * self.residual) / total)[self.group]
+        pulls = [load * weight * centred for load in self.loads]
+        means = [(self._by_group(weight * pull) / total)[self.group] for pull in pulls]
+        curvature = -self.information(squares)
+        for first in range(2):
+            for second in range(2):
+                about_mean = (pulls[first] - means[first]) * (pulls[second] - means[second])
+                curvature[first, second] += 2.0 * self._by_plate(weight * about_mean)
+        return curvature
+
     def equal_parts(self) -> Floats:
         """Square that both coefficients have if they are equal, shape (plates,); 0 where there is no
         scatter."""
@@ -244,8 +258,7 @@ class _Problem:
             if not moving.any():
                 break
             score = self.score(squares) + 2.0 * hold * (centre - squares)
-            (aa, ab), (_, bb) = self.information(squares)
-            aa, bb = aa + 2.0 * hold, bb + 2.0 * hold
+            (aa, ab), (_, bb) = self._bowl(squares, hold)
             wanted_a = aa * squares[0] + ab * squares[1] + score[0]
             wanted_b = ab * squares[0] + bb * squares[1] + score[1]
             step = _non_negative(aa, ab, bb, wanted_a, wanted_b) - squares
@@ -264,6 +277,13 @@ class _Problem:
             moving = moving & better & (np.max(np.abs(fraction * step), axis=0) > _SETTLED * centre)
             squares, best = np.where(better, trial, squares), np.where(better, loss, best)
         return squares
+
+    def _bowl(self, squares: Floats, hold: Floats) -> Floats:
+        """Second derivative of the penalised loss: as observed if that curves upwards, else as expected."""
+        ridge = 2.0 * hold * np.eye(2)[:, :, None]
+        observed, expected = self.curvature(squares) + ridge, self.information(squares) + ridge
+        (aa, ab), (_, bb) = observed
+        return np.where((aa > 0) & (bb > 0) & (aa * bb - ab * ab > 0.01 * aa * bb), observed, expected)
 
     def independence(self, squares: Floats) -> Floats:
         """Share of the information on the substrate part that the constant part does not share, 0 to 1."""
