@@ -92,7 +92,11 @@ def test_the_shipped_assay_shows_keys_that_can_be_used() -> None:
     text = (CONFIG / "lactate_dehydrogenase_340.toml").read_text(encoding="utf-8")
     offered = tomllib.loads(re.sub(r"^# (?=[a-z_0-9]+ = |\[)", "", text, flags=re.MULTILINE))
     curve, absorption = offered.pop("standard_curve"), offered.pop("absorption")
+    band = absorption.pop("water_band")
     assert Assay.model_validate(offered | {"absorption": absorption}).absorption is not None
+    kept = ("change_per_molar_per_cm", "source", "change_relative_error")
+    by_band = {name: absorption[name] for name in kept} | {"water_band": band}
+    assert Assay.model_validate(offered | {"absorption": by_band}).absorption is not None
     rising = offered | {"signal": offered["signal"] | {"direction": "rises"}}
     found = Assay.model_validate(rising | {"standard_curve": curve})
     assert found.sample is not None
