@@ -12,7 +12,7 @@ import math
 import re
 from collections.abc import Callable, Sequence
 from datetime import date, datetime
-from typing import Any
+from typing import Any, Literal
 
 import pyarrow as pa
 import pyarrow.csv
@@ -21,6 +21,7 @@ from openpyxl import Workbook
 from openpyxl.cell.cell import Cell, WriteOnlyCell
 from openpyxl.styles import Font
 from rich import box
+from rich.cells import cell_len
 from rich.console import Console, Group, RenderableType
 from rich.table import Table
 from rich.text import Text
@@ -32,8 +33,8 @@ WIDTH = 80
 FILE_FORMATS = ("csv", "json", "parquet", "xlsx")
 ROWS_SHOWN = 200
 _ID_LENGTH = 12
-_NARROWEST_TEXT = 10
 _LONGEST_WORD = 28
+_GAP = 2
 _XLSX_ROWS, _XLSX_COLUMNS, _XLSX_CHARACTERS = 1_048_575, 16_384, 32_767
 _LONG_ID = re.compile(r"[0-9a-f]{32}|[0-9a-f]{64}")
 _CONTROLS = re.compile(r"[\x00-\x08\x0b\x0c\x0e-\x1f\x7f-\x9f\u202a-\u202e\u2066-\u2069]")
@@ -153,9 +154,15 @@ def terminal_table(table: pa.Table, width: int = WIDTH, rows: int = ROWS_SHOWN) 
     ]
     right = [pa.types.is_integer(kind) or pa.types.is_floating(kind) for kind in kinds]
     note = Text(_count_line(table.num_rows, shown.num_rows), style="dim")
-    if _narrowest(names, cells, right) <= width:
-        return Group(_side_by_side(names, cells, right), note)
-    return Group(*_blocks(names, cells), note)
+    heads = [plain(name) for name in names]
+    bodies = [_body_width(column, is_number) for column, is_number in zip(cells, right, strict=True)]
+    for made in (heads, [_broken(head, body) for head, body in zip(heads, bodies, strict=True)]):
+        widths = [
+            max(body, *map(cell_len, head.split("\n"))) for head, body in zip(made, bodies, strict=True)
+        ]
+        if sum(widths) + _GAP * (len(widths) - 1) <= width:
+            return Group(_side_by_side(made, widths, cells, right), note)
+    return Group(*_blocks(heads, cells), note)
 
 
 def print_answer(table: pa.Table, console: Console, rows: int = ROWS_SHOWN) -> None:
@@ -163,17 +170,13 @@ def print_answer(table: pa.Table, console: Console, rows: int = ROWS_SHOWN) -> N
     console.print(terminal_table(table, console.width, rows))
 
 
-def _side_by_side(names: Sequence[str], cells: Sequence[Sequence[str]], right: Sequence[bool]) -> Table:
-    made = Table(box=box.SIMPLE_HEAD, pad_edge=False, padding=(0, 1), show_edge=False)
-    for name, column, is_number in zip(names, cells, right, strict=True):
-        whole = is_number or all(len(text) <= _ID_LENGTH for text in column)
-        made.add_column(
-            Text(plain(name)),
-            justify="right" if is_number else "left",
-            no_wrap=whole,
-            overflow="fold",
-            min_width=max((len(text) for text in column), default=1) if whole else _folded(column),
-        )
+def _side_by_side(
+    heads: Sequence[str], widths: Sequence[int], cells: Sequence[Sequence[str]], right: Sequence[bool]
+) -> Table:
+    made = Table(box=box.SIMPLE_HEAD, pad_edge=False, padding=(0, 1, 0, 0), show_edge=False)
+    for head, width, is_number in zip(heads, widths, right, strict=True):
+        justify: Literal["left", "right"] = "right" if is_number else "left"
+        made.add_column(Text(head), justify=justify, overflow="fold", min_width=width)
     for row in zip(*cells, strict=True):
         made.add_row(*(Text(text) for text in row))
     return made
@@ -186,25 +189,30 @@ def _blocks(names: Sequence[str], cells: Sequence[Sequence[str]]) -> list[Render
         made.add_column(style="dim", overflow="fold", max_width=32)
         made.add_column(overflow="fold")
         for name, text in zip(names, row, strict=True):
-            made.add_row(Text(plain(name)), Text(text))
+            made.add_row(Text(name), Text(text))
         blocks += [Text(f"row {place}", style="bold"), made, Text("")]
     return blocks
 
 
-def _narrowest(names: Sequence[str], cells: Sequence[Sequence[str]], right: Sequence[bool]) -> int:
-    """Columns that a table needs if only long texts are folded and heads break at their underscores."""
-    total = 0
-    for name, column, is_number in zip(names, cells, right, strict=True):
-        widest = max((len(text) for text in column), default=0)
-        body = widest if is_number or widest <= _ID_LENGTH else _folded(column)
-        total += max(body, min(len(name), _NARROWEST_TEXT)) + 2
-    return total
+def _body_width(column: Sequence[str], is_number: bool) -> int:
+    """Width that a column needs: numbers and short texts whole, long texts folded between words."""
+    widest = max((cell_len(text) for text in column), default=1)
+    if is_number or widest <= _ID_LENGTH:
+        return widest
+    longest_word = max((cell_len(word) for text in column for word in text.split()), default=1)
+    return min(widest, max(_ID_LENGTH, min(longest_word, _LONGEST_WORD)))
 
 
-def _folded(column: Sequence[str]) -> int:
-    """Width at which a column of long texts is folded: between words where these are not too long."""
-    longest_word = max((len(word) for text in column for word in text.split()), default=1)
-    return max(_ID_LENGTH, min(longest_word, _LONGEST_WORD))
+def _broken(head: str, width: int) -> str:
+    """A column's name over several lines, broken after underscores where it is wider than its column."""
+    pieces = re.findall(r"[^_]*_|[^_]+", head)
+    widest = max([width, *map(cell_len, pieces)])
+    lines = [""]
+    for piece in pieces:
+        if lines[-1] and cell_len(lines[-1] + piece) > widest:
+            lines.append("")
+        lines[-1] += piece
+    return "\n".join(lines)
 
 
 def _cell(value: Value, kind: pa.DataType) -> str:

@@ -175,6 +175,26 @@ def test_a_table_is_never_wider_than_the_terminal(width, columns):
     assert all(console.measure(line).maximum <= width for line in printed(table, width).splitlines())
 
 
+def test_heads_are_never_cut_but_broken_at_underscores():
+    table = pa.table(
+        {
+            "lot": ["QX-7"],
+            "constant": ["specific_activity"],
+            "value": [102.0],
+            "between_plate_sd": [1.5],
+            "unit": ["umol/min/mg"],
+            "plate_read_count": [3],
+            "held_series_count": [0],
+            "standing": ["clear"],
+        }
+    )
+    broken = printed(table).split("────")[0]
+    broken_names = {"between_", "plate_sd", "plate_", "read_", "held_", "series_", "count"}
+    assert set(broken.split()) == broken_names | {"lot", "constant", "value", "unit", "standing"}
+    whole = printed(table, width=120).split("────")[0]
+    assert whole.split() == table.column_names
+
+
 def test_a_wide_answer_becomes_a_block_a_row():
     text = printed(pa.table({f"column_{n}": [f"value {n} of the first", "x"] for n in range(12)}))
     assert "row 1" in text
