@@ -47,7 +47,9 @@ class CurveFit:
     determined: bool
 
 
-def fit_curve(shape: CurveShape, product_um: Floats, signal: Floats, weights: Floats) -> CurveFit:
+def fit_curve(
+    shape: CurveShape, product_um: Floats, signal: Floats, weights: Floats, start: Floats | None = None
+) -> CurveFit:
     """Fit a shape by weighted least squares.
 
     Parameters
@@ -56,13 +58,15 @@ def fit_curve(shape: CurveShape, product_um: Floats, signal: Floats, weights: Fl
         The shape.
     product_um, signal, weights
         Of each standard, shape (standards,); weights are one over a variance up to a factor.
+    start
+        Parameters to start from, as of a fit with slightly different weights; None to search.
 
     Returns
     -------
     CurveFit
     """
     if shape is FOUR_PARAMETER:
-        return _fit_logistic(product_um, signal, weights)
+        return _fit_logistic(product_um, signal, weights, start)
     return _fit_polynomial(shape, product_um, signal, weights)
 
 
@@ -89,7 +93,7 @@ def _undetermined(count: int) -> CurveFit:
     return CurveFit(np.full(count, np.nan), np.full((count, count), np.nan), np.nan, False)
 
 
-def _fit_logistic(product_um: Floats, signal: Floats, weights: Floats) -> CurveFit:
+def _fit_logistic(product_um: Floats, signal: Floats, weights: Floats, start: Floats | None) -> CurveFit:
     """Bottom and top follow from half and hill, so starts are compared on a grid of those two alone."""
     positive = product_um[product_um > 0]
     root = np.sqrt(weights / np.max(weights))
@@ -111,18 +115,19 @@ def _fit_logistic(product_um: Floats, signal: Floats, weights: Floats) -> CurveF
         by_standard: Floats = (FOUR_PARAMETER.gradient(product_um, here) * by_log[:, None] * root).T
         return by_standard
 
+    grid = (
+        [(half, hill) for half in np.unique(positive) for hill in _HILL_STARTS]
+        if start is None
+        else [(start[2], start[3])]
+    )
     starts = sorted(
-        (
-            _with_ends(product_um, scaled, root, half, hill)
-            for half in np.unique(positive)
-            for hill in _HILL_STARTS
-        ),
-        key=lambda start: float(np.sum(residual(start) ** 2)),
+        (_with_ends(product_um, scaled, root, half, hill) for half, hill in grid),
+        key=lambda each: float(np.sum(residual(each) ** 2)),
     )
     ends = [
         least_squares(
             residual,
-            np.clip(start, lower, upper),
+            np.clip(each, lower, upper),
             jac=jacobian,
             bounds=(lower, upper),
             x_scale="jac",
@@ -130,7 +135,7 @@ def _fit_logistic(product_um: Floats, signal: Floats, weights: Floats) -> CurveF
             ftol=1e-14,
             gtol=1e-14,
         ).x
-        for start in starts[:_BEST_STARTS]
+        for each in starts[:_BEST_STARTS]
     ]
     best = min(ends, key=lambda end: float(np.sum(residual(end) ** 2)))
     for _ in range(_POLISH_ROUNDS):

@@ -72,6 +72,35 @@ def add_shared_error(
     return WithSharedError(np.asarray(total), ends[0], ends[1])
 
 
+def without_shared_error(
+    value: Floats, standard_error: Floats, low: Floats, high: Floats, relative_error: Floats
+) -> WithSharedError:
+    """Take a relative error out again that `add_shared_error` put in, with endless degrees of freedom.
+
+    What plates share must not be averaged over plates: it comes out before they are combined and goes in
+    after.
+
+    Parameters
+    ----------
+    value, standard_error, low, high
+        Constants above 0 with the shared error in, arrays that broadcast.
+    relative_error
+        Relative standard error that is in them [1].
+
+    Returns
+    -------
+    WithSharedError
+    """
+    with np.errstate(all="ignore"):
+        shared = norm.ppf(0.5 + LEVEL / 2.0) * relative_error
+        own_error = np.sqrt(np.maximum(standard_error**2 - (value * relative_error) ** 2, 0.0))
+        ends = []
+        for end, side in ((low, -1.0), (high, 1.0)):
+            own = np.sqrt(np.maximum(np.log(end / value) ** 2 - shared**2, 0.0))
+            ends.append(np.asarray(value * np.exp(side * own)))
+    return WithSharedError(np.asarray(own_error), ends[0], ends[1])
+
+
 def relative_error_of_factors(*relative_errors: float) -> float:
     """Relative error of a product or quotient of independent factors: the root of the sum of squares [1]."""
     return float(np.sqrt(sum(error * error for error in relative_errors)))

@@ -150,7 +150,8 @@ def _fit_weighted(
                 "no standard has replicates that differ: their scatter gives no weights",
             )
         weights = 1.0 / variances.variance(fitted)
-        fit = fit_curve(shape, product_um, signal, weights)
+        # Weights differ much from none, little from round to round: only the second fit searches afresh.
+        fit = fit_curve(shape, product_um, signal, weights, fit.parameters if number else None)
         moved = shape.signal(product_um, fit.parameters) - fitted
         if fit.determined and np.max(np.abs(moved)) <= 1e-12 * np.max(np.abs(fitted)):
             break
