@@ -412,6 +412,7 @@ def _add_fit(
                 "low": value * 0.9,
                 "high": None if constant == "vmax" else value * 1.1,
                 "unit": unit,
+                "assay_relative_error": 0.0,
             }
         )
 
