@@ -19,6 +19,11 @@ CONSTANT_SYMBOLS = {
     "kcat_per_k_half": "kcat/K0.5",
     "hill_n": "n",
     "specific_activity": "specific activity",
+    "specific_activity_katal": "specific activity",
+    "volume_activity": "activity",
+    "volume_activity_katal": "activity",
+    "sample_activity": "activity per mg of protein",
+    "sample_activity_katal": "activity per mg of protein",
 }
 
 UNIT_SYMBOLS = {
@@ -26,7 +31,10 @@ UNIT_SYMBOLS = {
     "umol/L/s": "µM/s",
     "1/s": "/s",
     "L/mol/s": "/M/s",
-    "umol/min/mg": "µmol/min/mg",
+    "umol/min/mg": "U/mg",
+    "nmol/s/mg": "nkat/mg",
+    "umol/min/mL": "U/mL",
+    "nmol/s/mL": "nkat/mL",
     "1": "",
 }
 

@@ -38,6 +38,8 @@ class Conversion:
         Product that the measurement finds per substrate consumed: stoichiometry times recovery.
     relative_error_shared
         Relative standard error [1] that every well's rate shares.
+    shared_by_assay
+        Whether that error belongs to the assay, and so to all its plates, or to this plate's own standards.
     """
 
     curve: Calibration | None
@@ -45,6 +47,7 @@ class Conversion:
     sign: float
     product_per_substrate: float
     relative_error_shared: float
+    shared_by_assay: bool
 
     def turnover_um(self, wells: Sequence[str], signal: Floats) -> Floats:
         """Substrate turned over [umol/L] up to a constant, of signals with shape (wells, reads)."""
@@ -98,6 +101,7 @@ def plate_conversion(assay: Assay, readings: pd.DataFrame, wells: pd.DataFrame, 
         sign=1.0 if assay.signal.direction == "rises" else -1.0,
         product_per_substrate=assay.product_per_substrate * assay.product_recovery,
         relative_error_shared=shared,
+        shared_by_assay=assay.standard_curve is None or assay.standard_curve.points_from == "stated",
     )
 
 

@@ -6,17 +6,16 @@ are stored in order.
 
 from __future__ import annotations
 
-import numpy as np
 import pandas as pd
 
 from checks.assess import Assessment, assess
 from checks.verdicts import plate_read_standing, series_standings, without_consequences
 from flows.frames import rows
+from flows.stages.constants import stored_constants
 from flows.stages.gate import gate_input, limits_by_recipe
 from flows.stages.work import FittedBatch, GatedBatch, RatedBatch
 from models.identity import result_id
 from models.kinetics.fitting import FitResult, fit_rates
-from models.kinetics.turnover import turnover
 from models.tables import ANALYSES, ESTIMATES, FINDINGS, FITS, RATES, SERIES, WELLS
 
 CLEAR, ALL = "clear", "all"
@@ -105,14 +104,7 @@ def _stored(rated: RatedBatch, result: FitResult, wells_fitted: str) -> tuple[pd
     fits = result.fits.join(of_series[["series_id", "analysis_id"]], on="series")
     fits["wells"] = wells_fitted
     fits["fit_id"] = [result_id("fit", row.series_id, row.law, wells_fitted) for row in rows(fits)]
-    masses = [rated.plates[plate].recipe.assay.molar_mass_g_per_mol for plate in rated.series["plate"]]
-    derived = turnover(
-        result,
-        enzyme_nm=rated.series["enzyme_nm"].to_numpy(dtype=float),
-        enzyme_ng_per_ml=rated.series["enzyme_ng_per_ml"].to_numpy(dtype=float),
-        molar_mass_g_per_mol=np.array([np.nan if mass is None else mass for mass in masses]),
-    )
-    constants = pd.concat([result.constants, derived], ignore_index=True)
+    constants = stored_constants(rated, result)
     constants = constants.join(of_series[["series_id", "analysis_id", "assay", "lot"]], on="series")
     constants = constants.merge(
         fits[["series_id", "law", "fit_id"]], on=["series_id", "law"], how="left", validate="m:1"

@@ -7,13 +7,17 @@ Where no series of a lot is clear, the held ones give a value that is marked hel
 
 from __future__ import annotations
 
+from dataclasses import replace
+
+import numpy as np
 import pandas as pd
 
 from flows.site.layout import Site
 from flows.warehouse.writer import loader
+from models.calibration.shared_error import add_shared_error, without_shared_error
 from models.identity import result_id
 from models.kinetics.laws import law
-from models.statistics.lots import combine_plate_reads
+from models.statistics.lots import LotValue, combine_plate_reads
 from models.tables import LOT_VALUE_SOURCES, LOT_VALUES
 
 # Vmax belongs to an enzyme level, not to a lot; where the enzyme's amount is known, a turnover stands for it.
@@ -29,7 +33,7 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
     current
         A row an estimate of the clear wells of an unmodulated series that is not superseded: columns
         estimate_id, series_id, plate_read_id, assay, lot, role, law, chosen, constant, value, standard_error,
-        low, high, unit, series_standing, measured_at.
+        low, high, unit, assay_relative_error, series_standing, measured_at.
     pass_id
         The pass that these values are written by.
 
@@ -50,13 +54,7 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
             constant = str(name)
             if constant == LEVEL_BOUND and constants & set(PER_ENZYME):
                 continue
-            value = combine_plate_reads(
-                rows["value"].to_numpy(dtype=float),
-                rows["standard_error"].to_numpy(dtype=float),
-                pd.factorize(rows["plate_read_id"])[0],
-                low=rows["low"].to_numpy(dtype=float),
-                high=rows["high"].to_numpy(dtype=float),
-            )
+            value = _combined(rows)
             estimate_ids = sorted(rows["estimate_id"])
             lot_value_id = result_id("lot_value", assay, lot, role, constant, estimate_ids)
             values.append(
@@ -87,6 +85,31 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
     )
 
 
+def _combined(rows: pd.DataFrame) -> LotValue:
+    """A constant over its plate reads; the error of the assay's calibration, in all alike, goes in last."""
+    value, error, low, high = (
+        rows[name].to_numpy(dtype=float) for name in ("value", "standard_error", "low", "high")
+    )
+    of_assay = rows["assay_relative_error"].to_numpy(dtype=float)
+    if of_assay.any():
+        own = without_shared_error(value, error, low, high, of_assay)
+        error, low, high = own.standard_error, own.low, own.high
+    plates = pd.factorize(rows["plate_read_id"])[0]
+    combined = combine_plate_reads(value, error, plates, low=low, high=high)
+    if not of_assay.any():
+        return combined
+    whole = add_shared_error(
+        np.array(combined.value),
+        np.array(combined.standard_error),
+        np.array(combined.low),
+        np.array(combined.high),
+        float(of_assay.max()),
+    )
+    return replace(
+        combined, standard_error=float(whole.standard_error), low=float(whole.low), high=float(whole.high)
+    )
+
+
 def _law_of_lot(rows: pd.DataFrame) -> str:
     """Law that most of a lot's series chose, among those fitted in every one; the simpler where as many did.
 
@@ -101,7 +124,7 @@ def _law_of_lot(rows: pd.DataFrame) -> str:
 
 _ESTIMATES_OF_LOTS = """
     SELECT e.estimate_id, e.series_id, c.plate_read_id, e.assay, e.lot, s.role, e.law, e.constant,
-           e.chosen, e.value, e.standard_error, e.low, e.high, e.unit,
+           e.chosen, e.value, e.standard_error, e.low, e.high, e.unit, e.assay_relative_error,
            s.standing AS series_standing, c.measured_at
     FROM estimates e
     JOIN fits t USING (fit_id)

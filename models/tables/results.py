@@ -234,5 +234,11 @@ ESTIMATES = Table(
         keys.LOW,
         keys.HIGH,
         keys.UNIT,
+        Column(
+            "assay_relative_error",
+            "real",
+            "Relative error of the assay's own calibration, in error and interval; shared by all its plates",
+            "1",
+        ),
     ),
 )

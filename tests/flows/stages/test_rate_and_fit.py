@@ -15,6 +15,7 @@ from flows.site.shipped import shipped
 from flows.stages.conversion import plate_conversion
 from flows.stages.fit import fit_batch
 from flows.stages.gate import gate_batch
+from flows.stages.lots import lot_values
 from flows.stages.rate import rate_batch
 from flows.stages.work import PlateWork
 from models.records.assay import Assay
@@ -162,3 +163,56 @@ def test_constants_come_out_with_their_units() -> None:
         assert row["unit"] == unit
         assert row["value"] == pytest.approx(value, abs=4 * row["standard_error"])
         assert row["low"] < row["value"] < row["high"]
+
+
+def test_the_error_of_the_calibration_widens_what_is_in_proportion_to_product_and_nothing_else() -> None:
+    """A coefficient known to 5 %: kcat cannot be known better, Km can; plates do not average it away."""
+    absorption = {"change_per_molar_per_cm": 6220, "source": "test", "path_length_cm": 1.0}
+    known = plate_work(assay(absorption=absorption))
+    unsure = plate_work(assay(absorption=absorption | {"change_relative_error": 0.05}))
+    found = []
+    for work in (known, unsure):
+        tables = fit_batch(gate_batch(rate_batch([work]))).tables
+        estimates = tables["estimates"].query("wells == 'clear' and law == 'michaelis_menten'")
+        found.append((tables, estimates.set_index("constant")))
+    (_, sharp), (wide_tables, wide) = found
+    assert wide.loc["km", "standard_error"] == sharp.loc["km", "standard_error"]
+    for constant in ("vmax", "kcat", "kcat_per_km"):
+        own = sharp.loc[constant, "standard_error"] / sharp.loc[constant, "value"]
+        assert wide.loc[constant, "standard_error"] / wide.loc[constant, "value"] == pytest.approx(
+            np.hypot(own, 0.05), rel=1e-9
+        )
+        assert wide.loc[constant, "assay_relative_error"] == 0.05
+    assert wide.loc["km", "assay_relative_error"] == 0
+
+    current = (
+        wide_tables["estimates"]
+        .query("wells == 'clear'")
+        .assign(role="sample", series_standing="clear", measured_at=pd.Timestamp("2026-03-02", tz="UTC"))
+    )
+    plates = [
+        current.assign(plate_read_id=f"p{n}", estimate_id=current["estimate_id"] + str(n)) for n in range(30)
+    ]
+    values, sources = lot_values(pd.concat(plates, ignore_index=True).assign(assay="test"), "pass")
+    kcat = values.set_index("constant").loc["kcat"]
+    assert 0.05 <= kcat["standard_error"] / kcat["value"] < 0.055
+    assert values.set_index("constant").loc["km", "standard_error"] < 0.5 * wide.loc["km", "standard_error"]
+    assert len(sources) == 30 * len(values)
+
+
+def test_activity_of_the_sample_in_u_and_in_katal() -> None:
+    """Vmax 0.05 umol/L/s in 200 uL from 10 uL of a sample diluted 100 times: 0.05 * 20 * 100 = 100 nkat/mL,
+    6 U/mL (1 U = 1 umol/min = 16.67 nkat; NC-IUBMB and the 21st CGPM, 1999)."""
+    sample = {"assay_volume_ul": 200, "sample_volume_ul": 10, "dilution": 100, "protein_mg_per_ml": 0.5}
+    tables = fit_batch(gate_batch(rate_batch([plate_work(assay(sample=sample))]))).tables
+    found = tables["estimates"].query("wells == 'clear' and law == 'michaelis_menten'").set_index("constant")
+    for constant, value, unit in (
+        ("volume_activity", 6.0, "umol/min/mL"),
+        ("volume_activity_katal", 100.0, "nmol/s/mL"),
+        ("sample_activity", 12.0, "umol/min/mg"),
+        ("sample_activity_katal", 200.0, "nmol/s/mg"),
+    ):
+        row = found.loc[constant]
+        assert row["unit"] == unit
+        assert row["value"] == pytest.approx(value, abs=4 * row["standard_error"])
+        assert row["value"] / value == pytest.approx(found.loc["vmax", "value"] / 0.05, rel=1e-9)
