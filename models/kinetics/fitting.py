@@ -21,7 +21,14 @@ from models.kinetics.laws.law import Floats
 from models.kinetics.packing import Packed
 from models.kinetics.rate_rows import RateRows
 from models.kinetics.refusals import Refusal, refuse_fit, refuse_law
-from models.kinetics.replicate_weights import WeightedFit, fit_with_weights, plate_cv
+from models.kinetics.replicate_weights import (
+    Scatter,
+    ScatterSource,
+    WeightedFit,
+    fit_with_weights,
+    plate_scatter,
+)
+from models.kinetics.robust import Loss
 from models.kinetics.selection import aicc, choose_law, evidence_weights
 from models.statistics.sums import sum_rows
 
@@ -54,9 +61,18 @@ CONSTANT_COLUMNS = (
 )
 REFUSAL_COLUMNS = ("series", "kind", "reason")
 
-CV_LAW = "michaelis_menten"
-"""Replicates are compared about this law: any smooth law does, since only differences within a level
-count."""
+
+@dataclass(frozen=True)
+class FitSettings:
+    """How series are fitted, beside their candidate laws.
+
+    Attributes
+    ----------
+    loss
+        `none` for weighted least squares, `huber` or `tukey` to give rates far from the fit less weight.
+    """
+
+    loss: Loss = "none"
 
 
 @dataclass(frozen=True)
@@ -76,7 +92,9 @@ class FitResult:
     covariance
         Covariance of the constants, in the law's order, by series and law; NaN where it is not known.
     plate_cv
-        Replicate coefficient of variation that the weights used, by plate.
+        Replicate coefficient of variation that the weights used, by plate: of what acts on every rate alike.
+    substrate_cv
+        The same of the substrate in the wells, by plate.
     """
 
     fits: pd.DataFrame
@@ -84,6 +102,7 @@ class FitResult:
     refusals: pd.DataFrame
     covariance: Mapping[tuple[int, str], Floats] = field(repr=False)
     plate_cv: Mapping[int, float]
+    substrate_cv: Mapping[int, float] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)
@@ -95,7 +114,9 @@ class _Candidate:
     covariance: Floats
 
 
-def fit_rates(rates: pd.DataFrame, series_laws: Sequence[tuple[str, ...]]) -> FitResult:
+def fit_rates(
+    rates: pd.DataFrame, series_laws: Sequence[tuple[str, ...]], settings: FitSettings | None = None
+) -> FitResult:
     """Fit every series with each of its candidate laws.
 
     Parameters
@@ -103,8 +124,11 @@ def fit_rates(rates: pd.DataFrame, series_laws: Sequence[tuple[str, ...]]) -> Fi
     rates
         Columns series, plate (integers), substrate_um (the mean over the window), nominal_substrate_um,
         v_um_per_s, v_se_um_per_s. Rates that are not known (NaN) and wells without substrate are left out.
+        For laws with a modulator also modulator_um (0 where there is none), for tight binding enzyme_um.
     series_laws
         Names of the candidate laws of each series, by series number; a series without a row is refused.
+    settings
+        How to fit.
 
     Returns
     -------
@@ -115,26 +139,29 @@ def fit_rates(rates: pd.DataFrame, series_laws: Sequence[tuple[str, ...]]) -> Fi
     UnknownName
         If a series names a law that is not in the registry.
     """
+    settings = settings or FitSettings()
     names = sorted({name for laws in series_laws for name in laws}, key=lambda name: law(name).rank)
     rows = RateRows.of(rates)
     refused = {
         number: refusal for number in range(len(series_laws)) if (refusal := rows.refusal(number)) is not None
     }
-    cv = _cv_by_plate(rows, refused)
-    candidates: dict[int, dict[str, _Candidate]] = {}
+    eligible: dict[str, list[int]] = {name: [] for name in names}
     reasons: dict[int, dict[str, Refusal]] = {}
-    for name in names:
-        each = law(name)
-        eligible = []
-        for number, laws in enumerate(series_laws):
-            if name not in laws or number in refused:
-                continue
-            refusal = refuse_law(each, *rows.counts(number))
+    for number, laws in enumerate(series_laws):
+        if number in refused:
+            continue
+        counts = rows.counts(number)
+        for name in laws:
+            refusal = refuse_law(law(name), counts)
             if refusal is None:
-                eligible.append(number)
+                eligible[name].append(number)
             else:
                 reasons.setdefault(number, {})[name] = refusal
-        fitted, failed = _fit_candidates(each, rows, np.array(eligible, dtype=np.intp), cv)
+    scatter = _scatter_by_plate(rows, eligible)
+    candidates: dict[int, dict[str, _Candidate]] = {}
+    for name in names:
+        series = np.array(eligible[name], dtype=np.intp)
+        fitted, failed = _fit_candidates(law(name), rows, series, scatter, settings)
         for number, candidate in fitted.items():
             candidates.setdefault(number, {})[name] = candidate
         for number, refusal in failed.items():
@@ -142,36 +169,44 @@ def fit_rates(rates: pd.DataFrame, series_laws: Sequence[tuple[str, ...]]) -> Fi
     for number in range(len(series_laws)):
         if number not in candidates and number not in refused:
             refused[number] = _first_reason(series_laws[number], reasons.get(number, {}))
-    return _result(candidates, refused, {int(p): float(c) for p, c in zip(rows.plates, cv, strict=True)})
+    return _result(candidates, refused, rows, scatter)
 
 
 def _first_reason(laws: tuple[str, ...], reasons: Mapping[str, Refusal]) -> Refusal:
     return next(reasons[name] for name in sorted(laws, key=lambda name: law(name).rank) if name in reasons)
 
 
-def _cv_by_plate(rows: RateRows, refused: Mapping[int, Refusal]) -> Floats:
-    """Replicate CV of each plate, about Michaelis-Menten or, with too few levels for that, about each level's
-    mean."""
-    packed = rows.packed(np.array([n for n in np.unique(rows.series) if n not in refused], dtype=np.intp))
-    if packed.series.size == 0:
-        return np.zeros(rows.plates.size)
-    plate = rows.plate_of(packed.series)
-    usable = np.ones(packed.series.size, dtype=bool)
-    return plate_cv(law(CV_LAW), packed, plate, packed.spread(rows.level_um), usable, rows.plates.size)
+def _scatter_by_plate(rows: RateRows, eligible: Mapping[str, list[int]]) -> Scatter:
+    """Replicate scatter of each plate, each series about the law with most constants that it may have.
+
+    A law too rich does no harm here: replicates share its value, and only its slope in substrate counts.
+    """
+    richest: dict[int, str] = {}
+    for name in sorted(eligible, key=lambda name: (law(name).constant_count, law(name).rank)):
+        richest.update(dict.fromkeys(eligible[name], name))
+    sources = []
+    for name in sorted(set(richest.values())):
+        packed = rows.packed(np.array([n for n, of in richest.items() if of == name], dtype=np.intp))
+        level = packed.spread(rows.level_um)
+        sources.append(ScatterSource(law(name), packed, rows.plate_of(packed.series), level))
+    if not sources:
+        return Scatter.of_constant(np.zeros(rows.plates.size))
+    return plate_scatter(sources, rows.plates.size)
 
 
 def _fit_candidates(
-    each: RateLaw, rows: RateRows, eligible: Integers, cv: Floats
+    each: RateLaw, rows: RateRows, eligible: Integers, scatter: Scatter, settings: FitSettings
 ) -> tuple[dict[int, _Candidate], dict[int, Refusal]]:
     if eligible.size == 0:
         return {}, {}
     packed = rows.packed(eligible)
-    weighted = fit_with_weights(each, packed, cv[rows.plate_of(packed.series)])
+    of_plate = scatter.select(rows.plate_of(packed.series))
+    weighted = fit_with_weights(each, packed, of_plate, loss=settings.loss)
     fit = weighted.fit
     low, high = profile_intervals(fit, packed.conditions, packed.rate, weighted.weights)
     criterion = _aicc(packed, weighted)
-    half = np.log(fit.constants[1])
     limits = each.limits(packed.conditions, weighted.weights)
+    half = each.coordinates(fit.constants[each.first_shape :])[0]
     fitted, failed = {}, {}
     for column, number in enumerate(packed.series):
         refusal = refuse_fit(
@@ -190,7 +225,7 @@ def _fit_candidates(
 
 
 def _aicc(packed: Packed, weighted: WeightedFit) -> Floats:
-    log_variance = -np.log(np.where(packed.present, weighted.weights, 1.0))
+    log_variance = -np.log(np.where(weighted.weights > 0, weighted.weights, 1.0))
     fit = weighted.fit
     return aicc(fit.residual_sum, sum_rows(log_variance), fit.point_count, fit.law.constant_count)
 
@@ -244,7 +279,10 @@ def _distrust(fit: LawFit, column: int, low: Floats, high: Floats) -> str | None
 
 
 def _result(
-    candidates: Mapping[int, dict[str, _Candidate]], refused: Mapping[int, Refusal], cv: dict[int, float]
+    candidates: Mapping[int, dict[str, _Candidate]],
+    refused: Mapping[int, Refusal],
+    rows: RateRows,
+    scatter: Scatter,
 ) -> FitResult:
     fits: list[dict[str, object]] = []
     constants: list[dict[str, object]] = []
@@ -266,5 +304,6 @@ def _result(
         pd.DataFrame(constants, columns=list(CONSTANT_COLUMNS)),
         pd.DataFrame(refusals, columns=list(REFUSAL_COLUMNS)),
         covariance,
-        cv,
+        dict(zip(rows.plates.tolist(), scatter.constant_cv.tolist(), strict=True)),
+        dict(zip(rows.plates.tolist(), scatter.substrate_cv.tolist(), strict=True)),
     )

@@ -63,9 +63,12 @@ class Packed:
         """Some neighbouring series, with no more levels than they need."""
         levels = int(self.point_count[start:stop].max(initial=1))
         cut = (slice(0, levels), slice(start, stop))
+        whole = self.conditions
         conditions = Conditions(
-            np.ascontiguousarray(self.conditions.substrate_um[cut]),
-            np.ascontiguousarray(self.conditions.log_substrate[cut]),
+            np.ascontiguousarray(whole.substrate_um[cut]),
+            np.ascontiguousarray(whole.log_substrate[cut]),
+            None if whole.modulator_um is None else np.ascontiguousarray(whole.modulator_um[cut]),
+            None if whole.enzyme_um is None else np.ascontiguousarray(whole.enzyme_um[cut]),
         )
         return Packed(
             self.series[start:stop],
@@ -76,7 +79,14 @@ class Packed:
         )
 
 
-def pack(series: Integers, substrate_um: Floats, rate: Floats, standard_error: Floats) -> Packed:
+def pack(
+    series: Integers,
+    substrate_um: Floats,
+    rate: Floats,
+    standard_error: Floats,
+    modulator_um: Floats | None = None,
+    enzyme_um: Floats | None = None,
+) -> Packed:
     """Lay rows out by series.
 
     Parameters
@@ -85,6 +95,8 @@ def pack(series: Integers, substrate_um: Floats, rate: Floats, standard_error: F
         Series of each row, shape (rows,); rows with -1 are left out.
     substrate_um, rate, standard_error
         Of each row, shape (rows,).
+    modulator_um, enzyme_um
+        Of each row, shape (rows,); None where no law needs them.
 
     Returns
     -------
@@ -92,7 +104,10 @@ def pack(series: Integers, substrate_um: Floats, rate: Floats, standard_error: F
         Series by number of rates, then by number; empty places carry weight 0 through `present`.
     """
     kept = np.flatnonzero(series >= 0)
-    order = kept[np.lexsort((standard_error[kept], rate[kept], substrate_um[kept], series[kept]))]
+    keys = [standard_error[kept], rate[kept], substrate_um[kept], series[kept]]
+    if modulator_um is not None:
+        keys.insert(2, modulator_um[kept])
+    order = kept[np.lexsort(keys)]
     numbers, first, counts = np.unique(series[order], return_index=True, return_counts=True)
     by_size = np.lexsort((numbers, counts))
     levels = int(counts.max(initial=1))
@@ -106,7 +121,11 @@ def pack(series: Integers, substrate_um: Floats, rate: Floats, standard_error: F
 
     return Packed(
         series=numbers[by_size],
-        conditions=at_levels(laid_out(substrate_um, 1.0)),
+        conditions=at_levels(
+            laid_out(substrate_um, 1.0),
+            None if modulator_um is None else laid_out(modulator_um, 0.0),
+            None if enzyme_um is None else laid_out(enzyme_um, 1.0),
+        ),
         rate=laid_out(rate, 0.0),
         standard_error=laid_out(standard_error, 0.0),
         row=row,

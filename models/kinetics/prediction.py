@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from models.kinetics.laws import RateLaw, at_levels, law
 from models.kinetics.packing import pack
-from models.kinetics.replicate_weights import fit_with_weights
+from models.kinetics.replicate_weights import Scatter, fit_with_weights
 from models.kinetics.selection import aicc, choose_law
 from models.statistics.sums import sum_rows
 
@@ -125,8 +125,8 @@ def predict_courses(
         if not mine.any():
             continue
         packed = pack(np.where(mine, series, -1), mean_substrate_um, rate_um_per_s, standard_error_um_per_s)
-        cv = np.full(packed.series.size, _ASSUMED_CV)
-        weighted = fit_with_weights(candidate, packed, cv, rounds=2)
+        scatter = Scatter.of_constant(np.full(packed.series.size, _ASSUMED_CV))
+        weighted = fit_with_weights(candidate, packed, scatter, rounds=2)
         fit = weighted.fit
         log_variance = np.where(packed.present, -np.log(np.where(packed.present, weighted.weights, 1.0)), 0.0)
         criterion = aicc(fit.residual_sum, sum_rows(log_variance), fit.point_count, candidate.constant_count)

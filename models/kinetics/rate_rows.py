@@ -12,7 +12,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from models.kinetics.packing import Packed, pack
-from models.kinetics.refusals import Refusal, refuse_series
+from models.kinetics.refusals import Counts, Refusal, refuse_series
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int_]
@@ -32,6 +32,9 @@ class RateRows:
         Mean substrate over the window and nominal level [umol/L], shape (rows,).
     rate, standard_error
         [umol/L/s], shape (rows,).
+    modulator_um, enzyme_um
+        Modulator and the enzyme's active sites [umol/L], shape (rows,); None where the frame has no such
+        column.
     """
 
     series: Integers
@@ -41,6 +44,8 @@ class RateRows:
     level_um: Floats
     rate: Floats
     standard_error: Floats
+    modulator_um: Floats | None
+    enzyme_um: Floats | None
 
     @classmethod
     def of(cls, rates: pd.DataFrame) -> RateRows:
@@ -54,6 +59,10 @@ class RateRows:
         # so that its series is refused.
         kept = np.flatnonzero(np.isfinite(rate) & ~(substrate <= 0) & ~(level <= 0) & (series >= 0))
         kept = kept[np.argsort(series[kept], kind="stable")]
+        further = [
+            rates[name].to_numpy(dtype=np.float64)[kept] if name in rates.columns else None
+            for name in ("modulator_um", "enzyme_um")
+        ]
         return cls(
             series[kept],
             np.asarray(plate)[kept],
@@ -62,17 +71,26 @@ class RateRows:
             level[kept],
             rate[kept],
             rates["v_se_um_per_s"].to_numpy(dtype=np.float64)[kept],
+            *further,
         )
 
     def refusal(self, number: int) -> Refusal | None:
         """Why a series is refused before any law is tried, or None."""
         mine = self._members(number)
-        return refuse_series(self.rate[mine], self.standard_error[mine], self.substrate_um[mine])
+        modulator = None if self.modulator_um is None else self.modulator_um[mine]
+        return refuse_series(self.rate[mine], self.standard_error[mine], self.substrate_um[mine], modulator)
 
-    def counts(self, number: int) -> tuple[int, int]:
-        """Distinct levels and rates of a series."""
-        levels = self.level_um[self._members(number)]
-        return int(np.unique(levels).size), int(levels.size)
+    def counts(self, number: int) -> Counts:
+        """What of a series can be counted."""
+        mine = self._members(number)
+        modulator_levels = 1 if self.modulator_um is None else np.unique(self.modulator_um[mine]).size
+        enzyme = None if self.enzyme_um is None else self.enzyme_um[mine]
+        return Counts(
+            levels=int(np.unique(self.level_um[mine]).size),
+            points=int(self.level_um[mine].size),
+            modulator_levels=int(modulator_levels),
+            enzyme_known=enzyme is not None and bool(np.all(np.isfinite(enzyme) & (enzyme > 0))),
+        )
 
     def plate_of(self, series: Integers) -> Integers:
         """Place of each series' plate in `plates`."""
@@ -81,7 +99,14 @@ class RateRows:
     def packed(self, series: Integers) -> Packed:
         """Rates of some of the series, laid out for the batched fit."""
         chosen = np.where(np.isin(self.series, series), self.series, -1)
-        return pack(chosen, self.substrate_um, self.rate, self.standard_error)
+        return pack(
+            chosen,
+            self.substrate_um,
+            self.rate,
+            self.standard_error,
+            self.modulator_um,
+            self.enzyme_um,
+        )
 
     def _members(self, number: int) -> slice:
         first, last = np.searchsorted(self.series, [number, number + 1])

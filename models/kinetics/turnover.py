@@ -79,7 +79,9 @@ def turnover(
     rows: list[tuple[object, ...]] = []
     fits = [result.fits[name].tolist() for name in ("series", "law", "chosen", "degrees_of_freedom")]
     for number, name, chosen, degrees in zip(*fits, strict=True):
-        vmax = estimates[number, name, "vmax"]
+        vmax = estimates.get((number, name, "vmax"))
+        if vmax is None:
+            continue
         found: list[tuple[str, _Estimate, str]] = []
         if amount[number] > 0:
             per_enzyme = 1.0 / (amount[number] * UM_PER_NM)
