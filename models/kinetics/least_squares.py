@@ -17,11 +17,13 @@ from numpy.typing import NDArray
 from models.kinetics.laws.law import Conditions, Floats, RateLaw
 from models.statistics.sums import sum_rows
 
-CHUNK = 1024
+CHUNK = 4096
 """Series worked on together: small enough that a (levels, series) array stays in the processor's cache."""
 
 _STEP_TOLERANCE = 1e-10
 _LONGEST_STEP = 1.5
+"""Of a logarithm; a constant without limits may move by its own size, and by this where it is near 0:"""
+_LEAST_REACH = 1e-3
 _ITERATIONS = 60
 _ROUNDING = 4e-15
 
@@ -189,7 +191,8 @@ def minimise(
         free[fixed] = 0.0
     work = _Work(
         np.arange(series_count), conditions, rates, weights, sum_rows(weights * rates * rates), lower, upper,
-        free, amplitude, np.full(series_count, 1e-8), np.zeros(series_count, dtype=bool),
+        free, amplitude, np.full(series_count, 1e-8), np.full(series_count, np.inf),
+        np.zeros(series_count, dtype=bool),
     )  # fmt: skip
     best_coordinates, best_amplitude = start.copy(), np.zeros(series_count)
     converged = np.zeros(series_count, dtype=bool)
@@ -227,6 +230,7 @@ class _Work:
     free: Floats
     amplitude: Floats | None
     damping: Floats
+    last_move: Floats
     done: Flags
 
     def point(self, law: RateLaw, coordinates: Floats) -> _Point:
@@ -246,6 +250,7 @@ class _Work:
             self.free[:, where],
             None if self.amplitude is None else self.amplitude[where],
             self.damping[where],
+            self.last_move[where],
             self.done[where],
         )
 
@@ -257,14 +262,16 @@ def _advance(law: RateLaw, work: _Work, at: _Point) -> Flags:
     longest = np.zeros(work.series.size)
     for k, step in enumerate(steps):
         positive = law.shape_constants[k].positive
+        limited = np.isfinite(work.lower[k]) & np.isfinite(work.upper[k])
+        longest_step = np.where(limited, np.inf, np.maximum(np.abs(at.coordinates[k]), _LEAST_REACH))
         if positive:
-            step = np.minimum(np.maximum(step, -_LONGEST_STEP), _LONGEST_STEP)
+            longest_step = np.full_like(longest_step, _LONGEST_STEP)
+        step = np.minimum(np.maximum(step, -longest_step), longest_step)
         wanted = at.coordinates[k] + step
         trial_at[k] = np.minimum(np.maximum(wanted, work.lower[k]), work.upper[k])
         moved = np.abs(trial_at[k] - at.coordinates[k])
         if not positive:
             # A constant without limits has no scale but its own size.
-            limited = np.isfinite(work.lower[k]) & np.isfinite(work.upper[k])
             moved = moved / np.where(limited, 1.0, np.maximum(np.abs(at.coordinates[k]), 1e-300))
         longest = np.maximum(longest, moved)
     trial = work.point(law, trial_at)
@@ -272,7 +279,11 @@ def _advance(law: RateLaw, work: _Work, at: _Point) -> Flags:
     better = (trial.cost <= at.cost + _ROUNDING * work.square_sum) & open_still
     # A step that is refused although tiny is refused by rounding: nothing is left to gain.
     exhausted = ~better & (longest < 1e-7)
-    rests = open_still & ((better & (longest < _STEP_TOLERANCE) & (work.damping < 1e-2)) | exhausted)
+    # Steps shrink by a steady factor near the optimum: what is left is told by the next one.
+    next_move = longest * np.minimum(longest / work.last_move, 1.0)
+    at_rest = (longest < _STEP_TOLERANCE) | ((longest < 1e-7) & (next_move < _STEP_TOLERANCE))
+    rests = open_still & ((better & at_rest & (work.damping < 1e-2)) | exhausted)
+    work.last_move = np.where(better, longest, np.inf)
     at.accept(trial, better)
     work.damping = np.where(better, np.maximum(work.damping * 0.1, 1e-12), work.damping * 30.0)
     work.done |= rests | (work.damping > 1e12)
