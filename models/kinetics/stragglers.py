@@ -50,17 +50,21 @@ def settle(
             continue
         # SciPy wants a start strictly between the limits.
         inside = np.minimum(np.maximum(start, np.nextafter(low, np.inf)), np.nextafter(high, -np.inf))
-        found = least_squares(
-            problem.residuals,
-            inside,
-            jac=problem.jacobian,
-            bounds=(low, high),
-            x_scale="jac",
-            xtol=1e-14,
-            ftol=1e-15,
-            gtol=1e-15,
-            max_nfev=2000,
-        )
+        try:
+            found = least_squares(
+                problem.residuals,
+                inside,
+                jac=problem.jacobian,
+                bounds=(low, high),
+                x_scale="jac",
+                xtol=1e-14,
+                ftol=1e-15,
+                gtol=1e-15,
+                max_nfev=2000,
+            )
+        except (ValueError, np.linalg.LinAlgError):
+            # Residuals or derivatives without a finite value on the way: the series stays unsettled.
+            continue
         if 2.0 * found.cost <= residual_sum[series] * (1.0 + 1e-12):
             amplitude[series] = problem.amplitude(found.x)
             coordinates[:, series] = found.x

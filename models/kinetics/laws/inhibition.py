@@ -1,8 +1,8 @@
 """Reversible inhibition over a grid of substrate and inhibitor: competitive, uncompetitive, pure
 noncompetitive and mixed.
 
-All four are f = 1 / D, D = (Km / S)(1 + I / Kic) + 1 + I / Kiu, with one of the two terms left out or both
-constants equal.
+All four are S / (Km (1 + I / Kic) + S (1 + I / Kiu)) with one of the two terms left out or both constants
+equal.
 """
 
 from __future__ import annotations
@@ -46,23 +46,25 @@ _SOURCE = "Cleland 1963, doi:10.1016/0926-6569(63)90226-8; Cornish-Bowden 1974, 
 
 
 def competitive(conditions: Conditions, constants: tuple[Array, ...]) -> tuple[Array, tuple[Array, ...]]:
-    """D = (Km / S)(1 + I / Kic) + 1."""
-    ratio = constants[0] / conditions.substrate_um
-    bound = ratio * (conditions.modulator / constants[1])
-    shape = 1.0 / (1.0 + ratio + bound)
-    return shape, (-shape * ((ratio + bound) * shape), shape * (bound * shape))
+    """Shape S / (Km + Km I / Kic + S); the slopes are shares of enzyme times the shape."""
+    substrate, km = conditions.substrate_um, constants[0]
+    taken = km * (conditions.modulator / constants[1])
+    total = km + taken + substrate
+    shape, bound = substrate / total, taken / total
+    return shape, (-shape * (km / total + bound), shape * bound)
 
 
 def uncompetitive(conditions: Conditions, constants: tuple[Array, ...]) -> tuple[Array, tuple[Array, ...]]:
-    """D = Km / S + 1 + I / Kiu."""
-    ratio = constants[0] / conditions.substrate_um
-    bound = conditions.modulator / constants[1]
-    shape = 1.0 / (1.0 + ratio + bound)
-    return shape, (-shape * (ratio * shape), shape * (bound * shape))
+    """Shape S / (Km + S + S I / Kiu)."""
+    substrate, km = conditions.substrate_um, constants[0]
+    taken = substrate * (conditions.modulator / constants[1])
+    total = km + substrate + taken
+    shape = substrate / total
+    return shape, (-shape * (km / total), shape * (taken / total))
 
 
 def noncompetitive(conditions: Conditions, constants: tuple[Array, ...]) -> tuple[Array, tuple[Array, ...]]:
-    """D = (Km / S + 1)(1 + I / Ki)."""
+    """Shape S / (Km + S) Ki / (Ki + I)."""
     saturation = conditions.substrate_um / (constants[0] + conditions.substrate_um)
     free = constants[1] / (constants[1] + conditions.modulator)
     shape = saturation * free
@@ -70,16 +72,13 @@ def noncompetitive(conditions: Conditions, constants: tuple[Array, ...]) -> tupl
 
 
 def mixed(conditions: Conditions, constants: tuple[Array, ...]) -> tuple[Array, tuple[Array, ...]]:
-    """D = (Km / S)(1 + I / Kic) + 1 + I / Kiu."""
-    ratio = constants[0] / conditions.substrate_um
-    to_free = ratio * (conditions.modulator / constants[1])
-    to_complex = conditions.modulator / constants[2]
-    shape = 1.0 / (1.0 + ratio + to_free + to_complex)
-    return shape, (
-        -shape * ((ratio + to_free) * shape),
-        shape * (to_free * shape),
-        shape * (to_complex * shape),
-    )
+    """Shape S / (Km + Km I / Kic + S + S I / Kiu)."""
+    substrate, km = conditions.substrate_um, constants[0]
+    from_free = km * (conditions.modulator / constants[1])
+    from_complex = substrate * (conditions.modulator / constants[2])
+    total = km + from_free + substrate + from_complex
+    shape, bound = substrate / total, from_free / total
+    return shape, (-shape * (km / total + bound), shape * bound, shape * (from_complex / total))
 
 
 def starts_with_one(conditions: Conditions, weights: Floats) -> Floats:

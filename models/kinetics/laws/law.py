@@ -19,6 +19,10 @@ Array = NDArray[Any]
 """Real while fitting; complex where a test takes derivatives by complex step."""
 
 
+_LOG_OF_NOTHING = -700.0
+"""Stands for minus infinity where there is no substrate, so that it times 0 is 0."""
+
+
 @dataclass(frozen=True)
 class Conditions:
     """What the rates of a batch of series were measured at.
@@ -89,7 +93,8 @@ def at_levels(
 ) -> Conditions:
     """Conditions of series, each array of shape (levels, series)."""
     with np.errstate(divide="ignore", invalid="ignore"):
-        return Conditions(substrate_um, np.log(substrate_um), modulator_um, enzyme_um)
+        log_substrate = np.where(substrate_um == 0, _LOG_OF_NOTHING, np.log(substrate_um))
+    return Conditions(substrate_um, log_substrate, modulator_um, enzyme_um)
 
 
 @dataclass(frozen=True)

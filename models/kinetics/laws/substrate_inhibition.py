@@ -21,10 +21,12 @@ K_SI = Constant("k_si", "umol/L", "Dissociation constant of the substrate that i
 
 
 def evaluate(conditions: Conditions, constants: tuple[Array, ...]) -> tuple[Array, tuple[Array, ...]]:
-    """Shape f = 1 / D, D = 1 + Km / S + S / Ksi: df / d ln Km = -f^2 Km / S, df / d ln Ksi = f^2 S / Ksi."""
-    below, above = constants[0] / conditions.substrate_um, conditions.substrate_um / constants[1]
-    shape = 1.0 / (1.0 + below + above)
-    return shape, (-shape * (below * shape), shape * (above * shape))
+    """Shape f = S / D, D = Km + S + S^2 / Ksi: df / d ln Km = -f Km / D, df / d ln Ksi = f S^2 / (Ksi D)."""
+    substrate, km = conditions.substrate_um, constants[0]
+    blocked = substrate * (substrate / constants[1])
+    total = km + substrate + blocked
+    shape = substrate / total
+    return shape, (-shape * (km / total), shape * (blocked / total))
 
 
 def starts(conditions: Conditions, weights: Floats) -> Floats:

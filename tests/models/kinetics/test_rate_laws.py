@@ -59,7 +59,7 @@ def conditions_for(each: RateLaw, factor: float = 1.0) -> Conditions:
 
 
 def extreme_conditions() -> Conditions:
-    axes = np.meshgrid(np.geomspace(1e-6, 1e6, 13), [0.0, *np.geomspace(1e-6, 1e6, 7)], [1e-6, 1e3])
+    axes = np.meshgrid([0.0, *np.geomspace(1e-6, 1e6, 13)], [0.0, *np.geomspace(1e-6, 1e6, 7)], [1e-6, 1e3])
     substrate, modulator, enzyme = (axis.ravel()[:, None] for axis in axes)
     return at_levels(substrate, modulator, enzyme)
 
