@@ -233,7 +233,7 @@ def _aicc(packed: Packed, weighted: WeightedFit) -> Floats:
 def _candidate(
     number: int, fit: LawFit, column: int, low: Floats, high: Floats, criterion: float
 ) -> _Candidate:
-    distrust = _distrust(fit, column, low, high)
+    distrust = reason_to_distrust(fit, column, low, high)
     errors = fit.standard_error[:, column]
     row = {
         "series": number,
@@ -262,7 +262,7 @@ def _candidate(
     return _Candidate(row, constants, fit.covariance[column])
 
 
-def _distrust(fit: LawFit, column: int, low: Floats, high: Floats) -> str | None:
+def reason_to_distrust(fit: LawFit, column: int, low: Floats, high: Floats) -> str | None:
     """Why the uncertainty of a fit that converged cannot be trusted, or None."""
     if not fit.full_rank[column]:
         return "the data do not tell the constants apart"

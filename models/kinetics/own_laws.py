@@ -15,6 +15,8 @@ from models.kinetics.laws.law import Array, Conditions, Constant, Evaluate, Floa
 Equation = Callable[..., Array]
 """Response for variables (each of shape (points, series)), then constants (each of shape (series,))."""
 
+OWN_RANK = 1000
+"""Place of laws of one's own among candidates: after those of the registry."""
 _STEP = 1e-30
 
 
@@ -85,7 +87,7 @@ def own_law(
         starts=own_starts,
         half_saturation=None,
         source=source,
-        rank=1000,
+        rank=OWN_RANK,
         fewest_levels=1,
     )
 
