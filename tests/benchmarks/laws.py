@@ -186,8 +186,8 @@ def report(outcomes: Sequence[Outcome], series: int, seed: int) -> str:
         "a law, each a plate of its own. 8 substrate levels from 0.125 to 12 times 80 umol/L in triplicate",
         "(with 4 modulator levels for grids), or 12 doses in triplicate; 2 % error of every dispensing step",
         "(enzyme, substrate, modulator), 0.3 % of the highest rate beside it. Coverage is the share of 95 %",
-        "intervals that hold the truth. Silent: trusted, and a constant wrong by more than 5 standard errors;",
-        "by chance: how many those would be if every standard error were exact, from the t distribution.",
+        "intervals that hold the truth. Silent: trusted, and a constant wrong by more than 5 standard",
+        "errors; by chance: how many those would be with exact standard errors, by the t distribution.",
         "",
         "| law | constant | true | bias % | scatter % | coverage % | refused / 1,000 | flagged / 1,000 "
         "| silent / 1,000 | by chance |",
