@@ -53,7 +53,7 @@ def stored_constants(rated: RatedBatch, result: FitResult) -> pd.DataFrame:
 
 
 def _of_sample(work: PlateWork, constants: pd.DataFrame, series: int) -> pd.DataFrame:
-    """Activity of the undiluted sample at saturation, per mL and per mg of its protein, where that is stated."""
+    """Activity of the undiluted sample at saturation, per mL and per mg of protein, where stated."""
     sample = work.recipe.assay.sample
     vmax = constants[(constants["series"] == series) & (constants["constant"] == VMAX)]
     if sample is None or vmax.empty:
