@@ -56,7 +56,8 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
                 continue
             value = _combined(rows)
             estimate_ids = sorted(rows["estimate_id"])
-            lot_value_id = result_id("lot_value", assay, lot, role, constant, estimate_ids)
+            held_count = of_lot.loc[held, "series_id"].nunique()
+            lot_value_id = result_id("lot_value", assay, lot, role, constant, estimate_ids, held_count)
             values.append(
                 {
                     "lot_value_id": lot_value_id,
@@ -73,9 +74,10 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
                     "between_plate_sd": value.between_plate_sd,
                     "plate_read_count": rows["plate_read_id"].nunique(),
                     "series_count": rows["series_id"].nunique(),
-                    "held_series_count": of_lot.loc[held, "series_id"].nunique(),
+                    "held_series_count": held_count,
                     "measured_at": rows["measured_at"].max(),
                     "standing": "held" if held.any() else "clear",
+                    "reason": value.reason,
                 }
             )
             sources.extend({"lot_value_id": lot_value_id, "estimate_id": each} for each in estimate_ids)

@@ -145,12 +145,14 @@ LOT_LATEST = View(
     columns(
         taken(LOT_VALUES, "lot", "assay", "role", "constant", "value", "standard_error", "low", "high"),
         taken(LOT_VALUES, "unit", "between_plate_sd", "plate_read_count", "series_count"),
-        taken(LOT_VALUES, "held_series_count", "measured_at", "standing", "lot_value_id", "pass_id"),
+        taken(
+            LOT_VALUES, "held_series_count", "measured_at", "standing", "reason", "lot_value_id", "pass_id"
+        ),
     ),
     f"""
     SELECT lot, assay, role, constant, value, standard_error, low, high,
            unit, between_plate_sd, plate_read_count, series_count,
-           held_series_count, measured_at, standing, lot_value_id, pass_id
+           held_series_count, measured_at, standing, reason, lot_value_id, pass_id
     FROM ({_CURRENT_LOT_VALUES})
     QUALIFY rank() OVER (PARTITION BY lot, assay, role ORDER BY passed_at DESC, pass_id DESC) = 1
     """,

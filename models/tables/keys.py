@@ -14,7 +14,11 @@ ANALYSIS_ID = Column(
 SERIES_ID = Column("series_id", "text", "Digest of the analysis and of what the series' wells share")
 FIT_ID = Column("fit_id", "text", "Digest of the series, the rate law and the wells fitted")
 ESTIMATE_ID = Column("estimate_id", "text", "Digest of the fit and the constant's name")
-LOT_VALUE_ID = Column("lot_value_id", "text", "Digest of lot, assay, constant and the estimates it rests on")
+LOT_VALUE_ID = Column(
+    "lot_value_id",
+    "text",
+    "Digest of lot, assay, constant, the estimates it rests on and how many series are held",
+)
 
 ASSAY = Column("assay", "text", "Name of the assay, as its file in the site's configuration is called")
 LOT = Column("lot", "text", "The enzyme lot")

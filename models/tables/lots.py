@@ -34,6 +34,7 @@ LOT_VALUES = Table(
             "Start of the latest plate read it rests on, UTC; its receipt where unknown",
         ),
         Column("standing", "text", "clear, or held where a series of the lot is"),
+        Column("reason", "text", "Why there is no value, or why an end is open; NULL else", nullable=True),
     ),
     "warehouse",
 )

@@ -445,6 +445,7 @@ def lot_tables(made: TinySite, pass_id: str, at: datetime) -> dict[str, pd.DataF
                 "held_series_count": 0,
                 "measured_at": at - timedelta(hours=8),
                 "standing": "clear",
+                "reason": None,
             }
         )
         sources += [{"lot_value_id": lot_value_id, "estimate_id": each} for each in estimate_ids]
