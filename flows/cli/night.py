@@ -80,10 +80,12 @@ def show_pass(screen: Console, site: Site, report: PassReport) -> None:
     with open_published(site) as connection:
         read = _ask(connection, _READ, report)
         held = _ask(connection, _HELD, report)
-    _show_read(screen, read)
+    if not read.empty:
+        _show_read(screen, read)
     _show_quarantine(screen, report)
     _show_waiting(screen, report)
-    _show_held(screen, held)
+    if report.analysis_ids:
+        _show_held(screen, held)
 
 
 def show_lots(screen: Console, site: Site) -> None:
