@@ -5,6 +5,7 @@ Says which reads can be used and what the blanks leave uncertain; fits nothing.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -128,7 +129,7 @@ class Selection:
 
 def grouped(values: Floats, group: Integers, count: int) -> Floats:
     """Sums of the last axis by group; each sum is taken in the order of the values."""
-    flat = values.reshape(-1, values.shape[-1])
+    flat = values.reshape(math.prod(values.shape[:-1]), values.shape[-1])
     sums = [np.bincount(group, row, minlength=count) for row in flat]
     return np.array(sums, dtype=np.float64).reshape(*values.shape[:-1], count)
 

@@ -1,0 +1,89 @@
+"""Whole curves fitted: recovery where no initial rate is left, refusals, open ends, any batch alike."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pandas as pd
+import pytest
+
+from models.kinetics.curves import CurveBatch
+from models.kinetics.progress.fitting import ProgressOptions, fit_progress
+from models.simulation import TRIPLICATE_NOISE, TRIPLICATE_TRUTH, simulate_plate, triplicate_design
+from tests.models.kinetics.kinetic_plates import curve_batch
+
+KM_UM, KCAT_PER_S = 80.0, 2000.0
+PLATES = 60
+
+
+def depleted(plates: int, *, highest: float = 12.0, seed: int = 11) -> CurveBatch:
+    """Plates on which Vmax is 2 umol/L/s: five reads use up 11 % of the highest level, 60 % of the lowest."""
+    design = triplicate_design(highest=highest)
+    truth = {"lot": replace(TRIPLICATE_TRUTH, k_um=KM_UM, kcat_per_s=KCAT_PER_S)}
+    simulated = [
+        simulate_plate(design, truth, TRIPLICATE_NOISE, (), np.random.default_rng([seed, number]))
+        for number in range(plates)
+    ]
+    return curve_batch(simulated, design)
+
+
+@pytest.fixture(scope="module")
+def batch() -> CurveBatch:
+    return depleted(PLATES)
+
+
+def test_constants_come_out_of_curves_that_leave_no_initial_rate(batch: CurveBatch) -> None:
+    """Mean of Km and Vmax within 1 % of the truth, 95 % intervals that hold it as often as chance allows."""
+    result = fit_progress(batch, PLATES)
+    assert result.refusals.empty
+    assert result.fits["converged"].all()
+    for constant, true in (("km", KM_UM), ("vmax", KCAT_PER_S * 1e-3)):
+        found = result.constants[result.constants["constant"] == constant]
+        assert len(found) == PLATES
+        assert found["value"].mean() == pytest.approx(true, rel=0.01)
+        covered = ((found["low"] < true) & (true < found["high"])).mean()
+        # Three standard errors of a share of 0.95 over 60 plates.
+        assert covered >= 0.95 - 3 * np.sqrt(0.95 * 0.05 / PLATES)
+        assert (found["low"] < found["value"]).all()
+        assert (found["value"] < found["high"]).all()
+
+
+def test_a_series_is_fitted_the_same_alone_and_among_others(batch: CurveBatch) -> None:
+    together = fit_progress(batch.select(np.flatnonzero(batch.plate < 3)), 3).constants
+    one = batch.select(np.flatnonzero(batch.plate == 1))
+    alone = fit_progress(replace(one, series=np.where(one.series == 1, 0, -1)), 1).constants
+    expected = together[together["series"] == 1].assign(series=0).reset_index(drop=True)
+    pd.testing.assert_frame_equal(alone.reset_index(drop=True), expected, check_exact=True)
+
+
+def test_constants_that_the_curves_leave_open_are_open_or_not_trusted() -> None:
+    """All levels far below Km, little turned over: only Vmax / Km is known."""
+    design = triplicate_design(lowest=0.001, highest=0.01)
+    plate = simulate_plate(design, {"lot": TRIPLICATE_TRUTH}, TRIPLICATE_NOISE, (), np.random.default_rng(3))
+    result = fit_progress(curve_batch([plate], design), 1)
+    if result.refusals.empty:
+        km = result.constants.set_index("constant").loc["km"]
+        assert np.isnan(km["high"]) or not result.fits["trusted"].iloc[0]
+    else:
+        assert result.refusals["reason"].str.len().gt(10).all()
+
+
+def test_what_cannot_be_fitted_is_refused_by_name(batch: CurveBatch) -> None:
+    one = batch.select(np.flatnonzero(batch.plate == 0))
+    unread = replace(one, product_um=np.full_like(one.product_um, np.nan))
+    flat = replace(one, product_um=np.zeros_like(one.product_um))
+    same = replace(one, substrate_um=np.full_like(one.substrate_um, 100.0))
+    for broken in (unread, flat, same):
+        result = fit_progress(broken, 1)
+        assert list(result.refusals["series"]) == [0]
+        assert result.constants.empty
+
+
+def test_product_inhibition_is_found_where_it_is_asked_for(batch: CurveBatch) -> None:
+    """Curves without inhibition: the fitted kp lies far above the products, or has no upper end."""
+    few = batch.select(np.flatnonzero(batch.plate < 5))
+    result = fit_progress(few, 5, ProgressOptions(product_inhibition=True))
+    kp = result.constants[result.constants["constant"] == "kp"]
+    assert len(kp) == 5
+    assert (kp["high"].isna() | (kp["high"] > 1000.0)).all()
