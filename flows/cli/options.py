@@ -3,11 +3,8 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Any, TypeVar
 
 import click
-
-Command = TypeVar("Command", bound=Any)
 
 site_option = click.option(
     "--site",

@@ -25,6 +25,7 @@ from flows.stages.work import PlateWork
 from flows.warehouse.writer import loader
 from models.errors import HalfsatError
 from models.tables import READINGS
+from models.tables.keys import ONLY_CHANNEL
 
 _NOT_ANALYSED = """
     SELECT p.plate_read_id, p.plate_id, p.channels, f.file_name, f.profile,
@@ -174,8 +175,10 @@ def _assay_of(plate_id: str, named: str | None, configuration: Configuration) ->
 
 
 def _channel_of(channels: list[str], assay_name: str, configuration: Configuration) -> str:
-    """Channel of the export that the assay reads."""
+    """Channel of the export that the assay reads; an export that names none has only the one."""
     wanted = configuration.assays[assay_name].signal.channel
+    if channels == [ONLY_CHANNEL]:
+        return ONLY_CHANNEL
     if wanted is None:
         if len(channels) == 1:
             return channels[0]

@@ -9,7 +9,7 @@ import numpy as np
 import pandas as pd
 
 from flows.stages.work import PlateWork, RatedBatch
-from models.calibration.activity import activity
+from models.calibration.activity import activity, nkat_from_u
 from models.calibration.shared_error import add_shared_error
 from models.kinetics.fitting import FitResult
 from models.kinetics.turnover import turnover
@@ -18,7 +18,6 @@ from models.kinetics.turnover import turnover
 PROPORTIONAL_UNITS = ("umol/L/s", "1/s", "L/mol/s", "umol/min/mg", "nmol/s/mg", "umol/min/mL", "nmol/s/mL")
 VMAX = "vmax"
 SPECIFIC_ACTIVITY = "specific_activity"
-NKAT_PER_U = 1000.0 / 60.0
 
 
 def stored_constants(rated: RatedBatch, result: FitResult) -> pd.DataFrame:
@@ -47,7 +46,9 @@ def stored_constants(rated: RatedBatch, result: FitResult) -> pd.DataFrame:
     fitted = pd.concat([result.constants, derived], ignore_index=True)
     samples = [_of_sample(work, fitted, number) for number, work in enumerate(works)]
     by_sample = pd.concat(samples) if samples else fitted[:0]
-    in_katal = _in_katal(fitted[fitted["constant"] == SPECIFIC_ACTIVITY])
+    in_units = fitted[fitted["constant"] == SPECIFIC_ACTIVITY]
+    nkat_per_u = float(nkat_from_u(np.ones(1))[0])
+    in_katal = _scaled(in_units, f"{SPECIFIC_ACTIVITY}_katal", nkat_per_u, "nmol/s/mg")
     constants = pd.concat([fitted, in_katal, by_sample], ignore_index=True)
     return _with_calibration_error(constants, works)
 
@@ -67,10 +68,6 @@ def _of_sample(work: PlateWork, constants: pd.DataFrame, series: int) -> pd.Data
         _scaled(vmax, "sample_activity_katal", float(one.nkat_per_mg[0]), "nmol/s/mg"),
     ]
     return pd.concat([each for each in rows if each["value"].notna().all()], ignore_index=True)
-
-
-def _in_katal(constants: pd.DataFrame) -> pd.DataFrame:
-    return _scaled(constants, f"{SPECIFIC_ACTIVITY}_katal", NKAT_PER_U, "nmol/s/mg")
 
 
 def _scaled(constants: pd.DataFrame, name: str, factor: float, unit: str) -> pd.DataFrame:

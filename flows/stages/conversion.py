@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from models.calibration.calibration import Calibration
 from models.calibration.path_length import path_from_water_band
 from models.calibration.standard_curve import CalibrationRefusal
+from models.calibration.standards import standard_wells
 from models.errors import HalfsatError
 from models.records.assay import Absorption, Assay, StandardCurve, WaterBand
 
@@ -110,13 +111,13 @@ def _curve(assay: Assay, stated: StandardCurve, readings: pd.DataFrame, wells: p
         curve = stated.stated(assay.signal.direction)
     else:
         known = wells[(wells["role"] == "standard") & wells["product_um"].notna()]
-        read = readings[readings["state"] == "ok"].groupby("well")["signal"].mean()
-        standards = known.set_index("well").join(read, how="inner").dropna(subset=["signal"])
-        curve = stated.fit(
-            standards["product_um"].to_numpy(dtype=np.float64),
-            standards["signal"].to_numpy(dtype=np.float64),
-            assay.signal.direction,
-        )
+        limit = np.inf if assay.signal.linear_limit is None else assay.signal.linear_limit
+        usable = readings[(readings["state"] == "ok") & (readings["signal"] <= limit)]
+        reads = usable.pivot(index="well", columns="read_number", values="signal").reindex(known["well"])
+        signal = standard_wells(reads.to_numpy(dtype=np.float64)).signal
+        read = np.isfinite(signal)
+        product_um = known["product_um"].to_numpy(dtype=np.float64)
+        curve = stated.fit(product_um[read], signal[read], assay.signal.direction)
     if isinstance(curve, CalibrationRefusal):
         raise HalfsatError(
             f"its standard curve cannot be used: {curve.reason}",

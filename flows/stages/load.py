@@ -138,6 +138,7 @@ def _body(
 
 def _recorded(site: Site, entry: Entry) -> tuple[Batch, dict[str, pa.Table]]:
     try:
+        # Any JSON may stand there; what is no list of lake files is caught below.
         files = [LakeFile(**each) for each in entry.body["lake_files"]]  # type: ignore[union-attr, arg-type]
         batch = Batch(str(entry.body["batch_id"]), entry.seq, entry.time, files)
     except (KeyError, TypeError) as error:

@@ -314,20 +314,6 @@ class Assay(Record):
             raise ValueError("laws must name at least one rate law")
         return self
 
-    @property
-    def signal_per_um(self) -> float:
-        """Signal per umol/L of product, positive, where one number says it for all wells.
-
-        Raises
-        ------
-        ValueError
-            If it is a standard curve's, which may bend, or differs from well to well with the path length.
-        """
-        conversion = self.absorption or self.response
-        if conversion is None:
-            raise ValueError("with a standard curve, product is read through the curve")
-        return conversion.signal_per_um * self.product_recovery
-
     def consumable_um(self, substrate_um: float) -> float:
         """Substrate, umol/L, that can be consumed before substrate or limiting reagent runs out."""
         if self.limiting_reagent is None:

@@ -12,6 +12,7 @@ from pydantic import AfterValidator, Field, StringConstraints, model_validator
 
 from models.records.record import Record
 from models.records.site_settings import TimeZoneName
+from models.tables.keys import ONLY_CHANNEL
 
 Shape = Literal["long", "wide", "wells_by_rows", "grids"]
 Notation = Literal["s", "min", "h", "ms", "mm:ss", "hh:mm:ss", "timestamp"]
@@ -261,7 +262,7 @@ class ExportProfile(Record):
     time), or grids (a block shaped like the plate for each time)."""
     container: Literal["text", "xlsx"] = "text"
     """What kind of file it is."""
-    channel: str = Field(default="signal", min_length=1)
+    channel: str = Field(default=ONLY_CHANNEL, min_length=1)
     """Name of the channel where the file does not name one."""
     detect: Detection
     """How an export of this profile is told from others."""

@@ -23,6 +23,8 @@ LOT_VALUE_ID = Column(
 ASSAY = Column("assay", "text", "Name of the assay, as its file in the site's configuration is called")
 LOT = Column("lot", "text", "The enzyme lot")
 WELL = Column("well", "text", "Well name: row letters and column number without padding, such as B7")
+ONLY_CHANNEL = "signal"
+"""What the channel of an export is called that names none."""
 CHANNEL = Column(
     "channel", "text", "Channel of the read, such as a wavelength; 'signal' where there is one only"
 )

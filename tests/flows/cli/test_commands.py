@@ -172,3 +172,15 @@ def test_the_demo_runs_again_in_its_own_folder_and_nowhere_else(demo_night: Nigh
     assert_holds_at_80_columns(again.output, but=["halfsat history", "halfsat lineage", "halfsat overnight"])
     (tmp_path / "letter.txt").write_text("not a site")
     assert typed("demo", tmp_path).returncode == EXIT_FAILED
+
+
+def test_the_shipped_profiles_and_assays_work_together(tmp_path: Path) -> None:
+    """An export that names no channel has the only one, whatever its assay would choose among several."""
+    call("site", "new", tmp_path / "site")
+    examples = Path(__file__).resolve().parents[3] / "fixtures" / "exports"
+    for path in examples.iterdir():
+        (tmp_path / "site" / "inbox" / path.name).write_bytes(path.read_bytes())
+    done = call("overnight", "--site", tmp_path / "site")
+    assert done.exit_code == 0, done.output
+    assert "no channel" not in done.output
+    assert "In quarantine" not in done.output

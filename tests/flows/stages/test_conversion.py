@@ -25,13 +25,12 @@ def assay(**changes: object) -> Assay:
 
 def readings(signals: dict[str, float], channel: str = "signal", reads: int = 3) -> pd.DataFrame:
     """The same signal in every read of a well."""
-    return pd.DataFrame(
-        [
-            {"channel": channel, "well": well, "read_number": read, "signal": signal, "state": "ok"}
-            for well, signal in signals.items()
-            for read in range(1, reads + 1)
-        ]
-    )
+    rows = [
+        {"channel": channel, "well": well, "read_number": read, "signal": signal, "state": "ok"}
+        for well, signal in signals.items()
+        for read in range(1, reads + 1)
+    ]
+    return pd.DataFrame(rows, columns=["channel", "well", "read_number", "signal", "state"])
 
 
 def standards(levels_um: list[float]) -> pd.DataFrame:
@@ -55,6 +54,40 @@ def test_a_curve_from_the_plates_standards_reads_its_own_wells() -> None:
     doubled = assay(standard_curve=curve, product_per_substrate=2.0)
     half = plate_conversion(doubled, read, wells, "signal").turnover_um(["B1"], asked)
     np.testing.assert_allclose(half * 2, conversion.turnover_um(["B1"], asked), rtol=1e-12)
+
+
+def test_a_standard_past_the_linear_limit_is_left_out_of_the_curve() -> None:
+    wells = standards([0.0, 0.5, 1.0, 2.0, 50.0])
+    # The detector tops out: the last standard shows far less than its product.
+    signals = dict(zip(wells["well"], [250.0, 2670.0, 5080.0, 9910.0, 30000.0], strict=True))
+    curve = {"points_from": "plate", "model": "linear"}
+    limited = assay(standard_curve=curve, signal={"kind": "fluorescence", "linear_limit": 12000.0})
+    conversion = plate_conversion(limited, readings(signals), wells, "signal")
+    turnover = conversion.turnover_um(["B1"], np.array([[BACKGROUND + SLOPE * 1.5]]))
+    np.testing.assert_allclose(turnover, [[1.5]], rtol=5e-3)
+
+
+@pytest.mark.parametrize(
+    "way",
+    [
+        {"response": {"signal_per_um": 0.01, "source": "test"}},
+        {
+            "standard_curve": {
+                "points_from": "stated",
+                "points": [{"product_um": p, "signal": 0.01 * p} for p in (0.0, 10.0, 50.0, 100.0)],
+                "source": "test",
+            }
+        },
+    ],
+    ids=["response", "curve"],
+)
+def test_what_the_measurement_does_not_recover_was_turned_over_all_the_same(way: dict[str, object]) -> None:
+    signal = np.array([[0.1, 0.45]])
+    whole = plate_conversion(assay(**way), readings({}), standards([]), "signal")
+    part = plate_conversion(assay(**way, product_recovery=0.9), readings({}), standards([]), "signal")
+    np.testing.assert_allclose(
+        part.turnover_um(["B1"], signal) * 0.9, whole.turnover_um(["B1"], signal), rtol=1e-9
+    )
 
 
 def test_standards_that_make_no_curve_are_refused_with_the_reason() -> None:

@@ -10,6 +10,7 @@ import pytest
 
 from models.kinetics.curves import CurveBatch
 from models.kinetics.progress.fitting import ProgressOptions, fit_progress
+from models.kinetics.progress.integrated import product_formed
 from models.simulation import TRIPLICATE_NOISE, TRIPLICATE_TRUTH, simulate_plate, triplicate_design
 from tests.models.kinetics.kinetic_plates import curve_batch
 
@@ -80,10 +81,21 @@ def test_what_cannot_be_fitted_is_refused_by_name(batch: CurveBatch) -> None:
         assert result.constants.empty
 
 
-def test_product_inhibition_is_found_where_it_is_asked_for(batch: CurveBatch) -> None:
-    """Curves without inhibition: the fitted kp lies far above the products, or has no upper end."""
-    few = batch.select(np.flatnonzero(batch.plate < 5))
-    result = fit_progress(few, 5, ProgressOptions(product_inhibition=True))
-    kp = result.constants[result.constants["constant"] == "kp"]
-    assert len(kp) == 5
-    assert (kp["high"].isna() | (kp["high"] > 1000.0)).all()
+def test_product_inhibition_is_found_where_there_is_some_and_left_open_where_there_is_none(
+    batch: CurveBatch,
+) -> None:
+    """The same plate with each well's turnover replaced by what a product with Kp 30 umol/L leaves of it."""
+    one = batch.select(np.flatnonzero(batch.plate == 0))
+    asked = ProgressOptions(product_inhibition=True)
+    without = fit_progress(one, 1, asked).constants.set_index("constant").loc["kp"]
+    assert np.isnan(without["high"]) or without["high"] > 1000.0
+
+    vmax = np.where(one.is_blank, 0.0, KCAT_PER_S * 1e-3)[:, None]
+    level = one.substrate_um[:, None]
+    change = product_formed(level, vmax, KM_UM, one.time_s, 30.0) - product_formed(
+        level, vmax, KM_UM, one.time_s
+    )
+    inhibited = replace(one, product_um=one.product_um + change)
+    kp = fit_progress(inhibited, 1, asked).constants.set_index("constant").loc["kp"]
+    assert kp["low"] < 30.0 < kp["high"]
+    assert kp["high"] < 100.0
