@@ -103,7 +103,9 @@ def test_assay_and_bench_agree_on_signal_and_schedule(scenario, configuration):
     for name, bench in scenario.benches.items():
         assay = configuration.assays[name]
         sign = 1 if assay.signal.direction == "rises" else -1
-        assert bench.signal_per_um == pytest.approx(sign * assay.signal_per_um, rel=1e-4)
+        proportional = assay.absorption or assay.response
+        assert proportional is not None
+        assert bench.signal_per_um == pytest.approx(sign * proportional.signal_per_um, rel=1e-4)
         assert (assay.schedule.read_count, assay.schedule.interval_s) == (bench.read_count, bench.interval_s)
         assert assay.conditions.temperature_c == bench.temperature_c
 
