@@ -14,7 +14,7 @@ import numpy as np
 import pandas as pd
 
 from checks.gates import GATES
-from checks.gates.gate import SUBJECT_KEYS, Gate, GateInput, Limits, Phase, Subject
+from checks.gates.gate import ID_COLUMNS, SUBJECT_KEYS, Gate, GateInput, Limits, Phase, Subject
 from checks.validation import Validation, validate
 from models.errors import UnknownName
 from models.identity import Json, result_id
@@ -31,7 +31,7 @@ class GateRun:
     Attributes
     ----------
     suite
-        The subject: well, series or plate_read.
+        Phase and subject, such as `wells.plate_read`.
     document
         `suite`, `result` (counts and ids of flagged rows) and `limits`, ready for JSON.
     """
@@ -55,12 +55,13 @@ class Assessment:
 def assess(
     phase: Phase, data: GateInput, limits: Mapping[str, Limits], gates: Mapping[str, Gate] = GATES
 ) -> Assessment:
-    """Hold the wells and plate reads, or the series, of a batch against the gates.
+    """Hold a batch against the gates of one phase.
 
     Parameters
     ----------
     phase
-        `wells` before the fit, `series` after it (then `data` must hold series and estimates).
+        `wells` before the fit, `fit` after a first fit, `series` after the last; for these two, `data` must
+        hold series, estimates, fits and points.
     data
         Frames of the batch.
     limits
@@ -101,9 +102,9 @@ def assess(
             table = metrics_table(on, metrics, subject, analyses)
             if table.empty:
                 continue
-            outcome = _run(on, table, subject, limits[recipe_id])
+            outcome = _run(on, table, phase, subject, limits[recipe_id])
             findings += _findings(on, outcome, table, subject, limits[recipe_id])
-            runs.append(_gate_run(outcome, subject, recipe_id, len(table), limits[recipe_id]))
+            runs.append(_gate_run(outcome, f"{phase}.{subject}", recipe_id, len(table), limits[recipe_id]))
     frame = pd.DataFrame(findings, columns=FINDINGS.column_names) if findings else FINDINGS.empty()
     return Assessment(frame, runs)
 
@@ -124,9 +125,7 @@ def metrics_table(
         unknown = rows[list(gate.needs[subject])].isna().any(axis=1)
         rows["reason"] = rows["reason"].where(rows["reason"].notna() | ~unknown, UNKNOWN_VALUE)
         rows["state"] = np.where(rows["reason"].notna(), "not assessed", "assessed")
-        measured = [
-            name for name in rows.columns if name not in ("subject", "analysis_id", "well", "series_id")
-        ]
+        measured = [name for name in rows.columns if name not in ID_COLUMNS]
         indexed = rows.set_index(keys)[measured].add_prefix(f"{gate.name}__")
         if not indexed.index.is_unique:
             raise ValueError(f"gate {gate.name} measures a {subject} twice")
@@ -143,7 +142,9 @@ def metrics_table(
     return table.reset_index(names=keys)
 
 
-def _run(gates: Sequence[Gate], table: pd.DataFrame, subject: Subject, limits: Limits) -> Validation:
+def _run(
+    gates: Sequence[Gate], table: pd.DataFrame, phase: Phase, subject: Subject, limits: Limits
+) -> Validation:
     from checks.expectations import assessed
 
     expectations = [
@@ -151,18 +152,16 @@ def _run(gates: Sequence[Gate], table: pd.DataFrame, subject: Subject, limits: L
         for gate in gates
         for expectation in (*gate.expectations(limits, subject), assessed(gate.name))
     ]
-    return validate(subject, expectations, table, SUBJECT_KEYS[subject])
+    return validate(f"{phase}.{subject}", expectations, table, SUBJECT_KEYS[subject])
 
 
-def _gate_run(
-    outcome: Validation, subject: Subject, recipe_id: str, row_count: int, limits: Limits
-) -> GateRun:
+def _gate_run(outcome: Validation, suite: str, recipe_id: str, row_count: int, limits: Limits) -> GateRun:
     document: dict[str, Json] = {
         **outcome.document,
         "recipe_id": recipe_id,
         "limits": {gate: dict(settings) for gate, settings in limits.items()},
     }
-    return GateRun(subject, recipe_id, len(outcome.flagged), row_count, outcome.success, document)
+    return GateRun(suite, recipe_id, len(outcome.flagged), row_count, outcome.success, document)
 
 
 def _findings(
@@ -186,14 +185,15 @@ def _findings(
 
 
 def _finding(gate: Gate, row: dict[str, Any], meta: Mapping[str, str], limits: Limits) -> dict[str, Any]:
-    well, series_id = row.get("well"), row.get("series_id")
+    well, series_id, lot = row.get("well"), row.get("series_id"), row.get("lot")
     finding: dict[str, Any] = {
-        "finding_id": result_id(row["analysis_id"], gate.name, row["subject"], well, series_id),
+        "finding_id": result_id(row["analysis_id"], gate.name, row["subject"], well, series_id, lot),
         "analysis_id": row["analysis_id"],
         "gate": gate.name,
         "subject": row["subject"],
         "well": well,
         "series_id": series_id,
+        "lot": lot,
         "severity": meta["severity"],
     }
     if meta["rule"] == NOT_ASSESSED:

@@ -38,6 +38,8 @@ STANDING_RULES: tuple[StandingRule, ...] = (
     StandingRule("well", "breach", "hold", ANY, "held", "a person decides"),
     StandingRule("series", "breach", "void", ANY, "void", "there is nothing to fit"),
     StandingRule("series", "breach", "hold", ANY, "held", "a person decides"),
+    StandingRule("lot", "breach", "void", ANY, "void", "there is nothing of the lot to fit"),
+    StandingRule("lot", "breach", "hold", ANY, "held", "a person decides"),
     StandingRule("plate_read", "breach", "void", ANY, "void", "the whole read is no data"),
     StandingRule("plate_read", "breach", "hold", ANY, "held", "a person decides"),
     *(
@@ -133,13 +135,14 @@ def series_standings(
 ) -> pd.Series:
     """Standing of each series.
 
-    Held where a finding on the series or on its plate read holds it, where it was refused, or where more than
-    `MOST_WELLS` of its wells are not clear. Void where a finding voids it, or all of its wells are void.
+    Held where a finding on the series, its lot or its plate read holds it, where it was refused, or where
+    more than `MOST_WELLS` of its wells are not clear. Void where a finding voids it, or all its wells are
+    void.
 
     Parameters
     ----------
     series
-        series_id, analysis_id, well_count, clear_well_count, refusal.
+        series_id, analysis_id, lot, well_count, clear_well_count, refusal.
     findings
         FINDINGS columns, those on plate reads included.
     wells
@@ -151,13 +154,14 @@ def series_standings(
         Standings on the index of `series`.
     """
     own = _worst_by(series, findings, "series", ["analysis_id", "series_id"])
-    # A finding on the plate read holds for every rate on it, so for what is fitted to them.
+    # A finding on the lot or the plate read holds for every rate of it, so for what is fitted to them.
+    lot = _worst_by(series, findings, "lot", ["analysis_id", "lot"])
     plate = _worst_by(series, findings, "plate_read", ["analysis_id"])
     lost = series["well_count"].to_numpy(dtype=float) - series["clear_well_count"].to_numpy(dtype=float)
     most_lost = pd.Series(lost > MOST_WELLS * series["well_count"].to_numpy(dtype=float), index=series.index)
     refused = series["refusal"].notna()
     waits = pd.Series("clear", index=series.index, dtype=object).mask(most_lost | refused, "held")
-    parts = [own, plate, waits]
+    parts = [own, lot, plate, waits]
     if wells is not None:
         member = wells[wells["series_id"].notna()]
         all_void = (member["standing"] == "void").groupby(member["series_id"]).all()
@@ -226,5 +230,5 @@ def _key_index(frame: pd.DataFrame) -> pd.Index:
 
 
 def _subject_code(findings: pd.DataFrame) -> np.ndarray:
-    keys = findings[["subject", "analysis_id", "well", "series_id"]].astype(object)
+    keys = findings[["subject", "analysis_id", "well", "series_id", "lot"]].astype(object)
     return keys.groupby(list(keys.columns), dropna=False, sort=False).ngroup().to_numpy()

@@ -13,19 +13,20 @@ from typing import Any, Literal
 import numpy as np
 import pandas as pd
 
-from models.records.assay import Schedule, SettingValue
+from models.records.assay import Assay, SettingValue
 
-Phase = Literal["wells", "series"]
-Subject = Literal["well", "series", "plate_read"]
+Phase = Literal["wells", "fit", "series"]
+Subject = Literal["well", "series", "lot", "plate_read"]
 Limits = dict[str, dict[str, SettingValue]]
 Row = Mapping[str, Any]
 
 SUBJECT_KEYS: dict[Subject, tuple[str, ...]] = {
     "well": ("analysis_id", "well"),
     "series": ("analysis_id", "series_id"),
+    "lot": ("analysis_id", "lot"),
     "plate_read": ("analysis_id",),
 }
-ID_COLUMNS = ("subject", "analysis_id", "well", "series_id")
+ID_COLUMNS = ("subject", "analysis_id", "well", "series_id", "lot")
 ENZYME_ROLES = ("sample", "reference")
 READ_ROLES = ("sample", "reference", "blank", "enzyme_blank")
 BEYOND_DETECTOR = ("overflow", "past_limit")
@@ -73,7 +74,9 @@ class Gate:
     subjects
         What its findings are about.
     phase
-        `wells` where it judges rates before the fit, `series` where it judges the fit.
+        `wells` where it judges rates before the fit; `fit` where it judges wells by a first fit of the wells
+        that are clear so far, which is done again without those it holds; `series` where it judges the final
+        fit.
     severity
         Severity of its usual breach; a rule that makes a subject void says so in its expectation.
     unassessed
@@ -144,6 +147,20 @@ class Reads:
         return found.to_numpy(dtype=float, na_value=absent)
 
 
+PLATE_READ_COLUMNS = ("analysis_id", "plate_format", "temperature_low_c", "temperature_high_c")
+STANDARD_COLUMNS = ("analysis_id", "well", "product_um", "signal", "back_calculated_um")
+
+
+def no_plate_reads() -> pd.DataFrame:
+    """Plate reads of a batch that has none."""
+    return pd.DataFrame(columns=list(PLATE_READ_COLUMNS))
+
+
+def no_standards() -> pd.DataFrame:
+    """Standards of a batch without standard curves of its own."""
+    return pd.DataFrame(columns=list(STANDARD_COLUMNS))
+
+
 @dataclass(frozen=True)
 class GateInput:
     """Frames of a batch that the gates read; columns as in `models.tables`.
@@ -155,13 +172,23 @@ class GateInput:
     wells
         WELLS without standing.
     readings
-        analysis_id, well, read_number, time_s, signal, state (ok, overflow, missing, past_limit).
+        analysis_id, well, read_number, time_s, signal, state (ok, overflow, missing, past_limit), product_um
+        (substrate turned over up to a constant [umol/L], blank not subtracted; NaN where not usable).
     rates
         RATES.
-    series, estimates
-        SERIES without standing, ESTIMATES; None before the fit.
-    schedules
-        The read schedule that each recipe's assay states.
+    series, estimates, fits, points
+        SERIES without standing, ESTIMATES, FITS, FIT_POINTS with series_id; None before the fit. All laws,
+        with clear wells and with all: the fit that counts has `chosen` and wells `clear`. Points are those
+        of fits that are chosen.
+    comparisons
+        COMPARISONS; None before the final fit.
+    plate_reads
+        analysis_id, plate_format, temperature_low_c, temperature_high_c (NaN where not reported).
+    standards
+        analysis_id, well, product_um (known), signal (mean over the reads) and back_calculated_um of each
+        standard that made a plate's own standard curve; no row for other plates.
+    assays
+        The assay of each recipe.
     """
 
     analyses: pd.DataFrame
@@ -170,7 +197,12 @@ class GateInput:
     rates: pd.DataFrame
     series: pd.DataFrame | None = None
     estimates: pd.DataFrame | None = None
-    schedules: Mapping[str, Schedule] = field(default_factory=dict)
+    fits: pd.DataFrame | None = None
+    points: pd.DataFrame | None = None
+    comparisons: pd.DataFrame | None = None
+    plate_reads: pd.DataFrame = field(default_factory=no_plate_reads)
+    standards: pd.DataFrame = field(default_factory=no_standards)
+    assays: Mapping[str, Assay] = field(default_factory=dict)
 
     @cached_property
     def reads(self) -> Reads:

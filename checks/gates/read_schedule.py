@@ -113,8 +113,8 @@ def _intervals(reads: Reads) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
 def _schedule(data: GateInput, wells: pd.DataFrame) -> tuple[np.ndarray, np.ndarray]:
     """Planned reads and planned interval [s] of each well; NaN where its assay states none."""
     recipe = data.analyses.set_index("analysis_id")["recipe_id"]
-    counts = {key: schedule.read_count for key, schedule in data.schedules.items()}
-    intervals = {key: schedule.interval_s for key, schedule in data.schedules.items()}
+    counts = {key: assay.schedule.read_count for key, assay in data.assays.items()}
+    intervals = {key: assay.schedule.interval_s for key, assay in data.assays.items()}
     recipes = wells["analysis_id"].map(recipe)
     return (
         recipes.map(counts).astype(float).to_numpy(),

@@ -6,6 +6,7 @@ are stored in order.
 
 from __future__ import annotations
 
+import numpy as np
 import pandas as pd
 
 from checks.assess import Assessment, assess
@@ -102,14 +103,14 @@ def _stored(rated: RatedBatch, result: FitResult, wells_fitted: str) -> tuple[pd
     """Fits and estimates of one way of fitting, with the ids and names of their series."""
     of_series = rated.series.set_index("series")
     fits = result.fits.join(of_series[["series_id", "analysis_id"]], on="series")
-    fits["wells"] = wells_fitted
+    fits = fits.assign(wells=wells_fitted, grid_id=None, lack_of_fit_p=np.nan, runs_p=np.nan)
     fits["fit_id"] = [result_id("fit", row.series_id, row.law, wells_fitted) for row in rows(fits)]
     constants = stored_constants(rated, result)
     constants = constants.join(of_series[["series_id", "analysis_id", "assay", "lot"]], on="series")
     constants = constants.merge(
         fits[["series_id", "law", "fit_id"]], on=["series_id", "law"], how="left", validate="m:1"
     )
-    constants["wells"] = wells_fitted
+    constants = constants.assign(wells=wells_fitted, grid_id=None)
     constants["estimate_id"] = [result_id("estimate", row.fit_id, row.constant) for row in rows(constants)]
     return fits, constants
 

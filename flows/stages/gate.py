@@ -52,7 +52,7 @@ def gate_input(
         rates=rated.rates,
         series=series,
         estimates=estimates,
-        schedules={work.recipe.recipe_id: work.recipe.assay.schedule for work in rated.plates},
+        assays={work.recipe.recipe_id: work.recipe.assay for work in rated.plates},
     )
 
 

@@ -4,9 +4,19 @@ Parquet schemas, DuckDB tables, column comments and the documentation page are a
 """
 
 from models.errors import UnknownName
+from models.tables.fits import (
+    COMPARISONS,
+    CORRELATIONS,
+    ESTIMATES,
+    FIT_POINTS,
+    FITS,
+    GRIDS,
+    SERIES,
+    SHIFTS,
+)
 from models.tables.intake import FILES, PASSES, PLATE_MAPS, PLATE_READS, READINGS
 from models.tables.lots import GATE_RUNS, LOT_VALUE_SOURCES, LOT_VALUES, RECIPES
-from models.tables.results import ANALYSES, ESTIMATES, FINDINGS, FITS, RATES, SERIES, WELLS
+from models.tables.results import ANALYSES, FINDINGS, RATES, WELLS
 from models.tables.table import Column, Table
 
 TABLES: tuple[Table, ...] = (
@@ -22,8 +32,13 @@ TABLES: tuple[Table, ...] = (
     FINDINGS,
     GATE_RUNS,
     SERIES,
+    GRIDS,
     FITS,
     ESTIMATES,
+    FIT_POINTS,
+    CORRELATIONS,
+    COMPARISONS,
+    SHIFTS,
     LOT_VALUES,
     LOT_VALUE_SOURCES,
 )
@@ -46,11 +61,15 @@ def table(name: str) -> Table:
 
 __all__ = [
     "ANALYSES",
+    "COMPARISONS",
+    "CORRELATIONS",
     "ESTIMATES",
     "FILES",
     "FINDINGS",
     "FITS",
+    "FIT_POINTS",
     "GATE_RUNS",
+    "GRIDS",
     "LOT_VALUES",
     "LOT_VALUE_SOURCES",
     "PASSES",
@@ -60,6 +79,7 @@ __all__ = [
     "READINGS",
     "RECIPES",
     "SERIES",
+    "SHIFTS",
     "TABLES",
     "WELLS",
     "Column",

@@ -12,7 +12,8 @@ ANALYSIS_ID = Column(
     "analysis_id", "text", "Digest of plate read, plate map, recipe and the decisions in force: one revision"
 )
 SERIES_ID = Column("series_id", "text", "Digest of the analysis and of what the series' wells share")
-FIT_ID = Column("fit_id", "text", "Digest of the series, the rate law and the wells fitted")
+GRID_ID = Column("grid_id", "text", "Digest of the analysis and of what the grid's wells share")
+FIT_ID = Column("fit_id", "text", "Digest of the series or grid, the law and the wells fitted")
 ESTIMATE_ID = Column("estimate_id", "text", "Digest of the fit and the constant's name")
 LOT_VALUE_ID = Column(
     "lot_value_id",
@@ -30,7 +31,11 @@ CHANNEL = Column(
 )
 LAW = Column("law", "text", "Name of the rate law")
 CONSTANT = Column("constant", "text", "Name of the constant: km, vmax, kcat, kcat_per_km, k_half, hill_n ...")
-WELLS_FITTED = Column("wells", "text", "Which wells the fit rests on: 'clear', or 'all' that are not void")
+WELLS_FITTED = Column(
+    "wells",
+    "text",
+    "What the fit rests on: rates of wells that are 'clear', of 'all' that are not void, or whole 'curves'",
+)
 STANDING = Column("standing", "text", "clear, held (waits for a person) or void (cannot be used)")
 
 SUBSTRATE_UM = Column("substrate_um", "real", "Nominal substrate concentration at the start", "umol/L")

@@ -55,7 +55,7 @@ GATE_RUNS = Table(
         Column("gate_run_id", "text", "Digest of the suite, the recipe and the analyses it ran on"),
         keys.PASS_ID,
         keys.RECIPE_ID,
-        Column("suite", "text", "structure, well, series or plate_read"),
+        Column("suite", "text", "structure, or phase and subject: wells.well, fit.well, series.series ..."),
         Column("expectation_count", "integer", "Expectations in the suite"),
         Column("row_count", "integer", "Rows of metrics it ran on"),
         Column("success", "flag", "Whether every row met every expectation"),

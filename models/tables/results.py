@@ -1,4 +1,4 @@
-"""Tables of what was made of a plate read: analysis, wells, rates, findings, series, fits, estimates."""
+"""Tables of what was measured on a plate read and how it was judged: analysis, wells, rates, findings."""
 
 from models.tables import keys
 from models.tables.table import Column, Table
@@ -148,97 +148,15 @@ FINDINGS = Table(
         Column("finding_id", "text", "Digest of the analysis, the gate and its subject"),
         keys.ANALYSIS_ID,
         Column("gate", "text", "Name of the gate"),
-        Column("subject", "text", "well, series or plate_read"),
-        keys.WELL.optional("The well; NULL where the subject is a series or the plate read"),
-        keys.SERIES_ID.optional("The series; NULL where the subject is no series"),
+        Column("subject", "text", "well, series, lot (all of a lot on the plate) or plate_read"),
+        keys.WELL.optional("The well; NULL where the subject is none"),
+        keys.SERIES_ID.optional("The series; NULL where the subject is none"),
+        keys.LOT.optional("The lot; NULL where the subject is none"),
         Column("outcome", "text", "breach, or not_assessed where the gate could not be computed"),
         Column("severity", "text", "hold or void; none for not_assessed"),
         Column("measured", "real", "What was measured, in the unit of its row", nullable=True),
         Column("limit_value", "real", "The limit in force, in the unit of its row", nullable=True),
         keys.UNIT,
         Column("sentence", "text", "What a reviewer reads: measured value, limit, and what it does"),
-    ),
-)
-
-SERIES = Table(
-    "series",
-    "Wells of one plate read that share lot, enzyme level and modulator level and differ in substrate",
-    ("series_id",),
-    (
-        keys.SERIES_ID,
-        keys.ANALYSIS_ID,
-        keys.LOT,
-        Column("role", "text", "sample or reference"),
-        keys.ENZYME_NM,
-        keys.ENZYME_NG_PER_ML,
-        keys.MODULATOR,
-        keys.MODULATOR_UM,
-        Column("well_count", "integer", "Wells in the series"),
-        Column("clear_well_count", "integer", "Wells that were clear and so were fitted"),
-        Column("level_count", "integer", "Distinct substrate levels among the clear wells"),
-        Column(
-            "lowest_substrate_um", "real", "Lowest substrate among the clear wells", "umol/L", nullable=True
-        ),
-        Column(
-            "highest_substrate_um", "real", "Highest substrate among the clear wells", "umol/L", nullable=True
-        ),
-        Column("law", "text", "The rate law chosen; NULL where nothing could be fitted", nullable=True),
-        Column(
-            "refusal", "text", "Why the clear wells could not be fitted; NULL where they were", nullable=True
-        ),
-        keys.STANDING,
-    ),
-)
-
-FITS = Table(
-    "fits",
-    "One rate law fitted to one series, with the clear wells and beside it with all that are not void",
-    ("fit_id",),
-    (
-        keys.FIT_ID,
-        keys.SERIES_ID,
-        keys.ANALYSIS_ID,
-        keys.LAW,
-        keys.WELLS_FITTED,
-        Column("chosen", "flag", "Whether this law was chosen for these wells"),
-        Column("converged", "flag", "Whether the solver reached the optimum"),
-        Column("trusted", "flag", "Whether the uncertainty can be trusted"),
-        Column("distrust", "text", "Why the uncertainty cannot be trusted; NULL where it can", nullable=True),
-        Column("point_count", "integer", "Rates fitted"),
-        Column("degrees_of_freedom", "integer", "Rates less constants"),
-        Column("weighted_residual_sum", "real", "Sum of squared residuals, each over its variance", "1"),
-        Column(
-            "aicc", "real", "Akaike's information criterion, corrected for few points", "1", nullable=True
-        ),
-        Column("evidence_weight", "real", "Akaike weight among the candidate laws", "1", nullable=True),
-    ),
-)
-
-ESTIMATES = Table(
-    "estimates",
-    "One fitted constant with its 95 % interval, in one revision",
-    ("estimate_id",),
-    (
-        keys.ESTIMATE_ID,
-        keys.FIT_ID,
-        keys.SERIES_ID,
-        keys.ANALYSIS_ID,
-        keys.ASSAY,
-        keys.LOT,
-        keys.LAW,
-        keys.WELLS_FITTED,
-        Column("chosen", "flag", "Whether the estimate's law was chosen for these wells"),
-        keys.CONSTANT,
-        keys.VALUE,
-        keys.STANDARD_ERROR,
-        keys.LOW,
-        keys.HIGH,
-        keys.UNIT,
-        Column(
-            "assay_relative_error",
-            "real",
-            "Relative error of the assay's own calibration, in error and interval; shared by all its plates",
-            "1",
-        ),
     ),
 )

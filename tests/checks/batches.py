@@ -8,13 +8,28 @@ from typing import Any
 import pandas as pd
 
 from checks.gates.gate import GateInput
-from models.records.assay import Schedule
+from models.records.assay import Assay, Schedule
 
 READS = 20
 INTERVAL_S = 10.0
 WELLS = [f"{row}{column}" for row in "ABC" for column in range(1, 5)]
 BLANKS = ("A1", "A2")
 PLATES = ("plate-1", "plate-2")
+
+
+def an_assay(schedule: Schedule | None = None, **stated: Any) -> Assay:
+    """An assay with nothing particular about it."""
+    return Assay.model_validate(
+        {
+            "enzyme": "an enzyme",
+            "substrate": "a substrate",
+            "product": "a product",
+            "signal": {"kind": "absorbance"},
+            "response": {"signal_per_um": 0.01, "source": "invented"},
+            "schedule": schedule or Schedule(),
+            **stated,
+        }
+    )
 
 
 def clean_batch(recipes: tuple[str, str] = ("recipe-1", "recipe-1")) -> GateInput:
@@ -26,8 +41,12 @@ def clean_batch(recipes: tuple[str, str] = ("recipe-1", "recipe-1")) -> GateInpu
                 "analysis_id": plate,
                 "well": well,
                 "role": "blank" if well in BLANKS else "sample",
+                "lot": None if well in BLANKS else "L1",
                 "substrate_um": 10.0 * 2 ** (number % 6),
+                "enzyme_nm": None if well in BLANKS else 5.0,
                 "series_id": None if well in BLANKS else f"{plate} series",
+                "row_number": "ABC".index(well[0]) + 1,
+                "column_number": int(well[1:]),
             }
             for plate in PLATES
             for number, well in enumerate(WELLS)
@@ -59,15 +78,31 @@ def clean_batch(recipes: tuple[str, str] = ("recipe-1", "recipe-1")) -> GateInpu
     )
     readings = pd.DataFrame(
         [
-            (plate, well, number, INTERVAL_S * (number - 1), 0.1 + 0.01 * number * (well not in BLANKS), "ok")
+            (
+                plate,
+                well,
+                number,
+                INTERVAL_S * (number - 1),
+                0.1 + 0.01 * number * (well not in BLANKS),
+                "ok",
+                10.0 + number * (well not in BLANKS),
+            )
             for plate in PLATES
             for well in WELLS
             for number in range(1, READS + 1)
         ],
-        columns=["analysis_id", "well", "read_number", "time_s", "signal", "state"],
+        columns=["analysis_id", "well", "read_number", "time_s", "signal", "state", "product_um"],
     )
-    schedules = {recipe: Schedule() for recipe in recipes}
-    return GateInput(analyses, wells, readings, rates, schedules=schedules)
+    plate_reads = pd.DataFrame(
+        {
+            "analysis_id": list(PLATES),
+            "plate_format": 96,
+            "temperature_low_c": 24.9,
+            "temperature_high_c": 25.1,
+        }
+    )
+    assays = {recipe: an_assay() for recipe in recipes}
+    return GateInput(analyses, wells, readings, rates, plate_reads=plate_reads, assays=assays)
 
 
 def clean_series() -> GateInput:
@@ -160,6 +195,6 @@ def together(batches: dict[str, GateInput]) -> GateInput:
         ]
         return pd.concat(frames, ignore_index=True)
 
-    schedules = {recipe: schedule for data in batches.values() for recipe, schedule in data.schedules.items()}
-    frames = {name: stacked(name) for name in ("analyses", "wells", "readings", "rates")}
-    return GateInput(**frames, schedules=schedules)
+    assays = {recipe: assay for data in batches.values() for recipe, assay in data.assays.items()}
+    frames = {name: stacked(name) for name in ("analyses", "wells", "readings", "rates", "plate_reads")}
+    return GateInput(**frames, assays=assays)

@@ -41,8 +41,8 @@ def test_each_recipe_is_judged_by_its_own_limits() -> None:
         ["plate-1", "B3", 0.10]
     ]
     assert [(run.suite, run.recipe_id, run.success) for run in result.runs] == [
-        ("well", "recipe-1", False),
-        ("well", "recipe-2", True),
+        ("wells.well", "recipe-1", False),
+        ("wells.well", "recipe-2", True),
     ]
 
 
@@ -50,7 +50,7 @@ def test_a_gate_turned_off_finds_nothing_and_the_document_says_so() -> None:
     off = resolve_limits({"substrate_depletion": {"on": False}}, {})
     result = assess("wells", depleted(), {"recipe-1": off, "recipe-2": DEFAULTS})
     assert result.findings["analysis_id"].tolist() == ["plate-2"]
-    well_run = next(run for run in result.runs if run.suite == "well" and run.recipe_id == "recipe-1")
+    well_run = next(run for run in result.runs if run.suite == "wells.well" and run.recipe_id == "recipe-1")
     assert well_run.document["limits"]["substrate_depletion"]["on"] is False
     rules = [expectation["meta"]["gate"] for expectation in well_run.document["suite"]["expectations"]]
     assert "substrate_depletion" not in rules
@@ -85,12 +85,12 @@ def test_a_stored_suite_loads_again_and_judges_the_same() -> None:
         json.dumps(assess("wells", data, dict.fromkeys(("recipe-1", "recipe-2"), DEFAULTS)).runs[0].document)
     )
     suite = gx.ExpectationSuite(
-        name="well", expectations=[dict(entry) for entry in stored["suite"]["expectations"]]
+        name="wells.well", expectations=[dict(entry) for entry in stored["suite"]["expectations"]]
     )
-    gates = [gate for gate in GATES.values() if "well" in gate.subjects]
+    gates = [gate for gate in GATES.values() if "well" in gate.subjects and gate.phase == "wells"]
     metrics = {gate.name: gate.metrics(data) for gate in gates}
     table = metrics_table(gates, metrics, "well", {"plate-1"})
-    again = validate("well", suite.expectations, table, ("analysis_id", "well"))
+    again = validate("wells.well", suite.expectations, table, ("analysis_id", "well"))
     assert again.document["result"] == stored["result"]
 
 
@@ -99,7 +99,7 @@ def test_same_input_gives_the_same_findings_runs_and_ids() -> None:
     first, second = (assess("wells", depleted(), limits, DEPLETION) for _ in range(2))
     pd.testing.assert_frame_equal(first.findings, second.findings)
     assert first.runs == second.runs
-    expected = result_id("plate-1", "substrate_depletion", "well", "B3", None)
+    expected = result_id("plate-1", "substrate_depletion", "well", "B3", None, None)
     assert first.findings["finding_id"].tolist()[0] == expected
 
 

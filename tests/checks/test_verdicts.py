@@ -23,10 +23,11 @@ WELLS = pd.DataFrame({"analysis_id": ["a", "a", "b"], "well": ["A1", "A2", "A1"]
 
 
 def findings(*rows: tuple[str, str, str, str, str]) -> pd.DataFrame:
-    """Rows of analysis, well or series or '', gate, outcome, severity."""
+    """Rows of analysis, well or series or lot or '', gate, outcome, severity."""
     full = []
     for number, (analysis, subject, gate, outcome, severity) in enumerate(rows):
-        kind = "plate_read" if not subject else "series" if subject.startswith("series") else "well"
+        named = {"s": "series", "L": "lot"}
+        kind = "plate_read" if not subject else named.get(subject[0], "well")
         full.append(
             {
                 "finding_id": str(number),
@@ -35,6 +36,7 @@ def findings(*rows: tuple[str, str, str, str, str]) -> pd.DataFrame:
                 "subject": kind,
                 "well": subject if kind == "well" else None,
                 "series_id": subject if kind == "series" else None,
+                "lot": subject if kind == "lot" else None,
                 "outcome": outcome,
                 "severity": severity,
             }
@@ -136,6 +138,7 @@ def one_series(**values: object) -> pd.DataFrame:
     row = {
         "series_id": "series 1",
         "analysis_id": "a",
+        "lot": "L1",
         "well_count": 10,
         "clear_well_count": 10,
         "refusal": None,
@@ -153,6 +156,9 @@ def one_series(**values: object) -> pd.DataFrame:
         (one_series(), findings(("a", "series 1", "saturation_not_reached", *HOLD)), "held"),
         (one_series(), findings(("a", "series 1", "saturation_not_reached", *UNKNOWN)), "held"),
         (one_series(), findings(("a", "series 2", "saturation_not_reached", *HOLD)), "clear"),
+        (one_series(), findings(("a", "L1", "enzyme_linearity", *HOLD)), "held"),
+        (one_series(), findings(("a", "L2", "enzyme_linearity", *HOLD)), "clear"),
+        (one_series(), findings(("b", "L1", "enzyme_linearity", *HOLD)), "clear"),
         (one_series(), findings(("a", "", "blank_drift", *HOLD)), "held"),
         (one_series(), findings(("a", "", "blank_drift", *UNKNOWN)), "clear"),
         (one_series(), findings(("b", "", "blank_drift", *HOLD)), "clear"),

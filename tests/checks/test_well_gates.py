@@ -14,7 +14,16 @@ from checks.assess import Assessment, assess
 from checks.gates import GATES, GateInput, resolve_limits
 from models.records.assay import Schedule
 from models.tables import FINDINGS
-from tests.checks.batches import BLANKS, READS, clean_batch, together, unread, with_rates, with_reads
+from tests.checks.batches import (
+    BLANKS,
+    READS,
+    an_assay,
+    clean_batch,
+    together,
+    unread,
+    with_rates,
+    with_reads,
+)
 
 Change = Callable[[GateInput], GateInput]
 
@@ -161,7 +170,7 @@ def test_what_keeps_within_its_limit_is_not_held(outcome: Assessment, name: str)
 )
 def test_a_schedule_is_held_in_every_well_of_that_recipe(schedule: Schedule, words: str | None) -> None:
     data = clean_batch(("recipe-1", "recipe-2"))
-    data = replace(data, schedules={"recipe-1": schedule, "recipe-2": Schedule()})
+    data = replace(data, assays={"recipe-1": an_assay(schedule), "recipe-2": an_assay()})
     findings = findings_of(data, "read_schedule")
     assert len(findings) == (0 if words is None else 12)
     if words is not None:

@@ -265,7 +265,7 @@ def analysed_tables(
             "gate_run_id": result_id("gate_run", analysis_id),
             "pass_id": pass_id,
             "recipe_id": recipe.recipe_id,
-            "suite": "well",
+            "suite": "wells.well",
             "expectation_count": 1,
             "row_count": 9,
             "success": plate != HELD[0],
