@@ -14,6 +14,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from models.kinetics.fit_points import FitPoints, fit_points
 from models.kinetics.intervals import profile_intervals
 from models.kinetics.law_fits import LawFit
 from models.kinetics.laws import RateLaw, law
@@ -47,6 +48,19 @@ FIT_COLUMNS = (
     "weighted_residual_sum",
     "aicc",
     "evidence_weight",
+    "lack_of_fit_p",
+    "runs_p",
+)
+POINT_COLUMNS = (
+    "series",
+    "law",
+    "row",
+    "substrate_um",
+    "v_um_per_s",
+    "fitted_um_per_s",
+    "v_sd_um_per_s",
+    "leverage",
+    "studentised_residual",
 )
 CONSTANT_COLUMNS = (
     "series",
@@ -83,12 +97,15 @@ class FitResult:
     ----------
     fits
         A row a series and law that could be fitted: series, law, chosen, converged, trusted, distrust,
-        point_count, degrees_of_freedom, weighted_residual_sum, aicc, evidence_weight.
+        point_count, degrees_of_freedom, weighted_residual_sum, aicc, evidence_weight, lack_of_fit_p, runs_p.
     constants
         A row a constant: series, law, chosen, constant, value, standard_error, low, high, unit. low and high
         are NaN where the 95 % interval is open.
     refusals
         A row a series that no law could be fitted to: series, kind, reason.
+    points
+        A row a rate of the law chosen for its series: series, law, row (the index label in the frame that was
+        fitted), substrate_um, v_um_per_s, fitted_um_per_s, v_sd_um_per_s, leverage, studentised_residual.
     covariance
         Covariance of the constants, in the law's order, by series and law; NaN where it is not known.
     plate_cv
@@ -100,6 +117,7 @@ class FitResult:
     fits: pd.DataFrame
     constants: pd.DataFrame
     refusals: pd.DataFrame
+    points: pd.DataFrame
     covariance: Mapping[tuple[int, str], Floats] = field(repr=False)
     plate_cv: Mapping[int, float]
     substrate_cv: Mapping[int, float] = field(default_factory=dict)
@@ -159,9 +177,14 @@ def fit_rates(
                 reasons.setdefault(number, {})[name] = refusal
     scatter = _scatter_by_plate(rows, eligible)
     candidates: dict[int, dict[str, _Candidate]] = {}
+    points: dict[str, tuple[Packed, FitPoints]] = {}
     for name in names:
         series = np.array(eligible[name], dtype=np.intp)
-        fitted, failed = _fit_candidates(law(name), rows, series, scatter, settings)
+        if series.size == 0:
+            continue
+        packed = rows.packed(series)
+        fitted, failed, points_of = _fit_candidates(law(name), packed, rows, scatter, settings)
+        points[name] = packed, points_of
         for number, candidate in fitted.items():
             candidates.setdefault(number, {})[name] = candidate
         for number, refusal in failed.items():
@@ -169,7 +192,7 @@ def fit_rates(
     for number in range(len(series_laws)):
         if number not in candidates and number not in refused:
             refused[number] = _first_reason(series_laws[number], reasons.get(number, {}))
-    return _result(candidates, refused, rows, scatter)
+    return _result(candidates, refused, rows, scatter, _Points(rates.index, rows, points))
 
 
 def _first_reason(laws: tuple[str, ...], reasons: Mapping[str, Refusal]) -> Refusal:
@@ -195,11 +218,8 @@ def _scatter_by_plate(rows: RateRows, eligible: Mapping[str, list[int]]) -> Scat
 
 
 def _fit_candidates(
-    each: RateLaw, rows: RateRows, eligible: Integers, scatter: Scatter, settings: FitSettings
-) -> tuple[dict[int, _Candidate], dict[int, Refusal]]:
-    if eligible.size == 0:
-        return {}, {}
-    packed = rows.packed(eligible)
+    each: RateLaw, packed: Packed, rows: RateRows, scatter: Scatter, settings: FitSettings
+) -> tuple[dict[int, _Candidate], dict[int, Refusal], FitPoints]:
     of_plate = scatter.select(rows.plate_of(packed.series))
     weighted = fit_with_weights(each, packed, of_plate, loss=settings.loss)
     fit = weighted.fit
@@ -207,6 +227,7 @@ def _fit_candidates(
     criterion = _aicc(packed, weighted)
     limits = each.limits(packed.conditions, weighted.weights)
     half = each.coordinates(fit.constants[each.first_shape :])[0]
+    points = fit_points(packed, weighted, packed.spread(rows.level_um))
     fitted, failed = {}, {}
     for column, number in enumerate(packed.series):
         refusal = refuse_fit(
@@ -221,7 +242,9 @@ def _fit_candidates(
             failed[int(number)] = refusal
             continue
         fitted[int(number)] = _candidate(int(number), fit, column, low, high, float(criterion[column]))
-    return fitted, failed
+        fitted[int(number)].fit["lack_of_fit_p"] = float(points.lack_of_fit_p[column])
+        fitted[int(number)].fit["runs_p"] = float(points.runs_p[column])
+    return fitted, failed, points
 
 
 def _aicc(packed: Packed, weighted: WeightedFit) -> Floats:
@@ -278,11 +301,48 @@ def reason_to_distrust(fit: LawFit, column: int, low: Floats, high: Floats) -> s
     return ", ".join(is_open) if is_open else None
 
 
+@dataclass(frozen=True)
+class _Points:
+    """Rates of every law's fits, and the frame that they came from."""
+
+    index: pd.Index
+    rows: RateRows
+    by_law: Mapping[str, tuple[Packed, FitPoints]]
+
+    def of_chosen(self, chosen: Mapping[int, str]) -> pd.DataFrame:
+        """Points of the law chosen for each series, in the order of the frame."""
+        parts = []
+        for name, (packed, points) in self.by_law.items():
+            mine = np.array([chosen.get(int(number)) == name for number in packed.series], dtype=bool)
+            place, column = np.nonzero(packed.present & mine)
+            row = packed.row[place, column]
+            frame = pd.DataFrame(
+                {
+                    "place": self.rows.place[row],
+                    "series": packed.series[column],
+                    "law": name,
+                    "row": self.index[self.rows.place[row]],
+                    "substrate_um": packed.conditions.substrate_um[place, column],
+                    "v_um_per_s": packed.rate[place, column],
+                    "fitted_um_per_s": points.fitted[place, column],
+                    "v_sd_um_per_s": points.standard_deviation[place, column],
+                    "leverage": points.leverage[place, column],
+                    "studentised_residual": points.studentised[place, column],
+                }
+            )
+            parts.append(frame)
+        if not parts:
+            return pd.DataFrame({name: np.empty(0) for name in POINT_COLUMNS})
+        joined = pd.concat(parts, ignore_index=True).sort_values("place", ignore_index=True)
+        return joined[list(POINT_COLUMNS)]
+
+
 def _result(
     candidates: Mapping[int, dict[str, _Candidate]],
     refused: Mapping[int, Refusal],
     rows: RateRows,
     scatter: Scatter,
+    points: _Points,
 ) -> FitResult:
     fits: list[dict[str, object]] = []
     constants: list[dict[str, object]] = []
@@ -303,6 +363,7 @@ def _result(
         pd.DataFrame(fits, columns=list(FIT_COLUMNS)),
         pd.DataFrame(constants, columns=list(CONSTANT_COLUMNS)),
         pd.DataFrame(refusals, columns=list(REFUSAL_COLUMNS)),
+        points.of_chosen({int(str(fit["series"])): str(fit["law"]) for fit in fits if fit["chosen"]}),
         covariance,
         dict(zip(rows.plates.tolist(), scatter.constant_cv.tolist(), strict=True)),
         dict(zip(rows.plates.tolist(), scatter.substrate_cv.tolist(), strict=True)),

@@ -24,6 +24,8 @@ class RateRows:
 
     Attributes
     ----------
+    place
+        Place of each row in the frame it was taken from, shape (rows,).
     series, plate
         Series number and place of the plate in `plates`, shape (rows,).
     plates
@@ -37,6 +39,7 @@ class RateRows:
         column.
     """
 
+    place: Integers
     series: Integers
     plate: Integers
     plates: Integers
@@ -64,6 +67,7 @@ class RateRows:
             for name in ("modulator_um", "enzyme_um")
         ]
         return cls(
+            kept,
             series[kept],
             np.asarray(plate)[kept],
             plates,

@@ -111,8 +111,20 @@ FIT_POINTS = Table(
         Column("substrate_um", "real", "Mean substrate over the rate's window", "umol/L"),
         Column("v_um_per_s", "real", "Rate, blank subtracted", "umol/L/s"),
         Column("fitted_um_per_s", "real", "Rate that the law gives", "umol/L/s"),
-        Column("v_sd_um_per_s", "real", "Standard deviation that the weights give the rate", "umol/L/s"),
-        Column("leverage", "real", "Share of the fitted rate that the rate itself makes", "1"),
+        Column(
+            "v_sd_um_per_s",
+            "real",
+            "Standard deviation that the weights give the rate; NULL where a robust loss gave it no weight",
+            "umol/L/s",
+            nullable=True,
+        ),
+        Column(
+            "leverage",
+            "real",
+            "Share of the fitted rate that the rate itself makes; NULL where constants are not told apart",
+            "1",
+            nullable=True,
+        ),
         Column(
             "studentised_residual",
             "real",

@@ -357,6 +357,60 @@ def _add_series(
     for law in ("michaelis_menten", "hill"):
         for wells in ("clear", "all"):
             _add_fit(made, given, plate, lot, law, wells, clear if wells == "clear" else 4)
+    ids = {"analysis_id": analysis_id, "fit_id": made.fit_ids[plate, lot]}
+    for column, level in enumerate(LEVELS_UM[:clear], start=1):
+        rate = {"v_um_per_s": rate_um_per_s(level), "fitted_um_per_s": rate_um_per_s(level)}
+        point = {"well": f"{row}{column}", "substrate_um": level, "v_sd_um_per_s": 0.001, "leverage": 0.5}
+        given["fit_points"].append({**ids, **rate, **point})
+    given["correlations"].append(
+        {**ids, "constant": "vmax", "other_constant": "km", "correlation": 0.9},
+    )
+    given["comparisons"].append(
+        {
+            "series_id": series_id,
+            "analysis_id": analysis_id,
+            "km_ratio": 1.02,
+            "km_ratio_low": 0.95,
+            "km_ratio_high": 1.1,
+            "vmax_ratio": 1.01,
+            "vmax_ratio_low": 0.99,
+            "vmax_ratio_high": 1.03,
+            "p_value": 0.6,
+        }
+    )
+    _add_grid(given, analysis_id, lot, role)
+
+
+def _add_grid(given: dict[str, list[dict[str, object]]], analysis_id: str, lot: str, role: str) -> None:
+    grid_id = result_id("grid", analysis_id, lot)
+    given["grids"].append(
+        {
+            "grid_id": grid_id,
+            "analysis_id": analysis_id,
+            "lot": lot,
+            "role": role,
+            "enzyme_nm": 5.0,
+            "modulator": "an inhibitor",
+            "well_count": 4,
+            "clear_well_count": 4,
+            "substrate_level_count": 4,
+            "modulator_level_count": 1,
+            "refusal": "one modulator level only",
+            "standing": "held",
+        }
+    )
+    given["shifts"].append(
+        {
+            "grid_id": grid_id,
+            "analysis_id": analysis_id,
+            "law": "michaelis_menten",
+            "constants": "km",
+            "f_value": 1.0,
+            "numerator_degrees": 1,
+            "denominator_degrees": 10,
+            "p_value": 0.34,
+        }
+    )
 
 
 def _add_fit(
@@ -473,7 +527,22 @@ def _finding(
     }
 
 
-_ANALYSED = ("recipes", "analyses", "wells", "rates", "findings", "series", "fits", "estimates", "gate_runs")
+_ANALYSED = (
+    "recipes",
+    "analyses",
+    "wells",
+    "rates",
+    "findings",
+    "series",
+    "grids",
+    "fits",
+    "estimates",
+    "fit_points",
+    "correlations",
+    "comparisons",
+    "shifts",
+    "gate_runs",
+)
 
 
 def _table(name: str) -> Table:

@@ -208,7 +208,7 @@ def test_times_come_as_utc(site):
     ("sql", "what", "remedy"),
     [
         ("SELECT lott FROM lot_latest", "there is no column 'lott' here", "did you mean lot?"),
-        ("SELECT l.valu FROM lot_latest l", "there is no column 'valu' here", "did you mean value?"),
+        ("SELECT l.valu FROM lot_latest l", "there is no column 'valu' here", "did you mean value"),
         ("SELECT * FROM lot_latst", "there is no table or view 'lot_latst'", "did you mean lot_latest"),
         ("SELECT * FROM readings", "there is no table or view 'readings'", "did you mean reading"),
         ("SELECT medain(value) FROM lot_latest", "there is no function 'medain'", "did you mean median"),
