@@ -6,7 +6,9 @@ that mismatch is left in the rate.
 
 Formula: well: s = |blank rate| / max(|raw rate|, low_rate_share x highest |raw rate| of its series)
 > limit, where |blank rate| >= t_limit standard errors. Plate read: |median slope of its blanks| in
-signal per minute > plate_slope_limit, where plate_slope_on.
+signal per minute > plate_slope_limit, where plate_slope_on; median over its blanks of the distance between
+the highest and the lowest residual of a blank about its own line, in signal, > plate_wander_limit, where
+that is above 0: a baseline that wanders has no slope to subtract.
 
 What it leaves alone, and why: (1) A blank whose slope does not stand out of its own noise is no drift:
 its error is in the rate's error already. (2) A raw rate that does not stand out of its own noise has no
@@ -18,8 +20,8 @@ blanks gets one finding, not assessed, for the plate read, not one for each of i
 Source: common practice, no source.
 
 Default: 10 % of the rate (common practice); 3 standard errors, because chance alone exceeds
-that in 1 blank of 370. The slope of a plate's blanks has no default that
-suits every signal: off until a site sets it.
+that in 1 blank of 370. Slope and wander of a plate's blanks have no default that suits every signal: off
+until a site sets them. A quiet blank of 60 reads wanders by some 4.6 standard deviations of a read.
 """
 
 from __future__ import annotations
@@ -43,9 +45,10 @@ from checks.gates.gate import (
     metrics_frame,
     number,
 )
-from checks.gates.wording import beside, plain
+from checks.gates.wording import beside, plain, significant
 
 NAME = "blank_drift"
+WANDER = "plate_wander"
 FEWEST_READS = 3
 SIGNIFICANT_RAW_T = 3.0
 """Standard errors below which a raw rate is lost in its noise."""
@@ -97,14 +100,17 @@ def blank_share(blank: Any, raw: Any, highest: Any, low_rate_share: float) -> An
 
 
 def expectations(limits: Limits, subject: Subject) -> list[Any]:
-    """Expect a small or insignificant blank in each well; a slope of the blanks within the site's limit."""
+    """Expect a small or insignificant blank in each well; blanks within the site's limits on each plate."""
     from checks import expectations as expect
 
     if subject == "plate_read":
-        if not limits[NAME]["plate_slope_on"]:
-            return []
-        limit = number(limits, NAME, "plate_slope_limit")
-        return [expect.at_most(NAME, "blank_slope_per_min", limit, rule="plate_slope")]
+        rules = []
+        if limits[NAME]["plate_slope_on"]:
+            limit = number(limits, NAME, "plate_slope_limit")
+            rules.append(expect.at_most(NAME, "blank_slope_per_min", limit, rule="plate_slope"))
+        if (limit := number(limits, NAME, "plate_wander_limit")) > 0:
+            rules.append(expect.at_most(NAME, "blank_wander", limit, rule=WANDER))
+        return rules
     return [
         expect.blank_share_within(
             NAME,
@@ -118,7 +124,10 @@ def expectations(limits: Limits, subject: Subject) -> list[Any]:
 
 
 def measure(row: Row, limits: Limits) -> Measure:
-    """Share of the rate, or slope of the plate's blanks, against its limit."""
+    """Share of the rate, or slope or wander of the plate's blanks, against its limit."""
+    if row["rule"] == WANDER:
+        # What blanks are read in, which no unit describes.
+        return Measure(known_or_none(row["blank_wander"]), number(limits, NAME, "plate_wander_limit"), "1")
     if row["subject"] == "plate_read":
         slope = known_or_none(row["blank_slope_per_min"])
         return Measure(slope, number(limits, NAME, "plate_slope_limit"), "1/min")
@@ -127,10 +136,18 @@ def measure(row: Row, limits: Limits) -> Measure:
 
 def sentence(row: Row, limits: Limits) -> str:
     """What the blank does to the rate, or to the plate."""
+    if row["rule"] == WANDER:
+        wander_limit = number(limits, NAME, "plate_wander_limit")
+        return (
+            "The blanks of this plate wander by "
+            f"{significant(float(row['blank_wander']), wander_limit)} signal about their line (limit "
+            f"{plain(wander_limit)}): no slope takes that out of the rates."
+        )
     if row["subject"] == "plate_read":
         limit_slope = number(limits, NAME, "plate_slope_limit")
         return (
-            f"The blanks of this plate move by {_slope_text(row, limit_slope)} signal per min (limit "
+            "The blanks of this plate move by "
+            f"{significant(float(row['blank_slope_per_min']), limit_slope)} signal per min (limit "
             f"{plain(limit_slope)}): every rate of the plate read carries that."
         )
     measured, limit = beside(_row_share(row, limits), number(limits, NAME, "limit"), 100)
@@ -149,15 +166,6 @@ def _row_share(row: Row, limits: Limits) -> float:
     return float(blank_share(blank, raw, highest, floor))
 
 
-def _slope_text(row: Row, limit: float) -> str:
-    slope = float(row["blank_slope_per_min"])
-    for digits in range(3, 12):
-        text = f"{slope:.{digits}g}"
-        if float(text) != limit:
-            return text
-    return f"{slope!r}"
-
-
 def _over(value: np.ndarray, standard_error: np.ndarray) -> np.ndarray:
     """Value in standard errors; an unknown or zero error excuses no value but zero."""
     with np.errstate(divide="ignore", invalid="ignore"):
@@ -166,14 +174,19 @@ def _over(value: np.ndarray, standard_error: np.ndarray) -> np.ndarray:
 
 
 def _plate_metrics(data: GateInput) -> pd.DataFrame:
-    """Median slope of the blanks of each plate read that has enzyme wells, in signal per minute."""
+    """Median slope [signal/min] and wander [signal] of the blanks of each plate read with enzyme wells."""
     enzyme = data.wells["role"].isin(ENZYME_ROLES)
     plates = data.wells.loc[enzyme, ["analysis_id"]].drop_duplicates(ignore_index=True)
     blanks = data.wells.loc[data.wells["role"] == "blank", ["analysis_id", "well"]]
-    slopes = data.reads.for_wells(_signal_slopes(data) * 60, blanks)
-    median = pd.Series(slopes).groupby(blanks["analysis_id"].to_numpy()).median()
-    slope = median.reindex(plates["analysis_id"]).abs().to_numpy(dtype=float)
-    has_blank = plates["analysis_id"].isin(blanks["analysis_id"]).to_numpy()
+    plate_of_blank = blanks["analysis_id"].to_numpy()
+
+    def median_of_blanks(values: np.ndarray) -> np.ndarray:
+        of_blank = pd.Series(data.reads.for_wells(values, blanks)).groupby(plate_of_blank).median()
+        return of_blank.reindex(plates["analysis_id"]).to_numpy(dtype=float)
+
+    slopes, wanders = _signal_lines(data)
+    slope = np.abs(median_of_blanks(slopes * 60))
+    has_blank = plates["analysis_id"].isin(plate_of_blank).to_numpy()
     reason = np.select(
         [~has_blank, ~np.isfinite(slope)],
         [
@@ -182,11 +195,14 @@ def _plate_metrics(data: GateInput) -> pd.DataFrame:
         ],
         default="",
     )
-    return metrics_frame("plate_read", plates, reason, blank_slope_per_min=slope)
+    return metrics_frame(
+        "plate_read", plates, reason, blank_slope_per_min=slope, blank_wander=median_of_blanks(wanders)
+    )
 
 
-def _signal_slopes(data: GateInput) -> np.ndarray:
-    """Least-squares slope of the signal of every read well, signal per second; NaN with too few reads."""
+def _signal_lines(data: GateInput) -> tuple[np.ndarray, np.ndarray]:
+    """Least-squares line through every read well's signal: slope [signal/s] and distance between its highest
+    and lowest residual [signal]; NaN with too few reads."""
     reads = data.reads
     usable = np.isfinite(reads.signal) & ~reads.beyond & ~reads.missing & np.isfinite(reads.time_s)
     code, size = reads.code[usable], len(reads.wells)
@@ -201,7 +217,15 @@ def _signal_slopes(data: GateInput) -> np.ndarray:
         time_s = time_s - (total(time_s) / count)[code]
         signal = signal - (total(signal) / count)[code]
         slope = total(time_s * signal) / total(time_s**2)
-    return np.where(count >= FEWEST_READS, slope, np.nan)
+    enough = count >= FEWEST_READS
+    wander = np.full(size, np.nan)
+    if code.size:
+        residual = signal - slope[code] * time_s
+        # Reads stand in the order of their wells, so each well's are one stretch.
+        read_wells = np.flatnonzero(count)
+        first = np.searchsorted(code, read_wells)
+        wander[read_wells] = np.maximum.reduceat(residual, first) - np.minimum.reduceat(residual, first)
+    return np.where(enough, slope, np.nan), np.where(enough, wander, np.nan)
 
 
 GATE = Gate(
@@ -253,11 +277,19 @@ GATE = Gate(
             "1 mAU/min, common practice for absorbance, no source",
             low=0.0,
         ),
+        Setting(
+            "plate_wander_limit",
+            0.0,
+            "1",
+            "Signal by which the blanks of a plate may wander about their line; 0 for not judged",
+            "no limit suits every signal",
+            low=0.0,
+        ),
     ),
     text=__doc__,
     needs={
         "well": ("blank_rate_um_per_s", "raw_rate_um_per_s", "highest_rate_um_per_s", "blank_t"),
-        "plate_read": ("blank_slope_per_min",),
+        "plate_read": ("blank_slope_per_min", "blank_wander"),
     },
     metrics=metrics,
     expectations=expectations,
