@@ -7,7 +7,7 @@ standings are no business of this module: it reports what it measured.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
@@ -16,9 +16,11 @@ from numpy.typing import NDArray
 from models.kinetics.blanks import MatchedBlanks, match_blanks
 from models.kinetics.curves import CurveBatch
 from models.kinetics.prediction import SeriesCourse, no_course, predict_courses
+from models.kinetics.settling import Settling, goes_on
 from models.kinetics.window_choice import Choice, Curves, choose_windows
 from models.kinetics.windows import WindowFits, windows_from
 from models.statistics.moderation import moderate_variances
+from models.statistics.sums import sum_rows
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int_]
@@ -56,7 +58,10 @@ class RateSettings:
 
 @dataclass(frozen=True)
 class _Measured:
-    """Rates of a plate read over the windows chosen, shape (wells,) each."""
+    """Rates of a plate read over the windows chosen, shape (wells,) each.
+
+    `transients` and their errors are v0, vs and k, shape (3, wells); NaN where they are not told.
+    """
 
     line: WindowFits
     rate: Floats
@@ -66,6 +71,9 @@ class _Measured:
     mean_substrate_um: Floats
     conversion: Floats
     shortest_conversion: Floats
+    basis: NDArray[np.object_]
+    transients: Floats
+    transient_errors: Floats
 
 
 def measure_rates(
@@ -173,18 +181,21 @@ def _predict(
 def _measure(curves: Curves, blanks: MatchedBlanks, choice: Choice) -> _Measured:
     fits = windows_from(curves.time_s, curves.net_um, choice.start)
     line = fits.pick(choice.end)
-    # The parabola's residuals: what depletion bends is not noise.
-    steadied = moderate_variances(
-        np.where(choice.readable, line.parabola_variance, np.nan), np.maximum(line.count - 3.0, 0.0)
-    )
+    settling, sound = choice.settling, choice.settling.sound
+    # The parabola's residuals: what depletion bends is not noise. Where a transient is used, its own.
+    own_variance, degrees = line.parabola_variance.copy(), np.maximum(line.count - 3.0, 0.0)
+    own_variance[settling.wells[sound]] = settling.fits.read_variance[sound]
+    degrees[settling.wells[sound]] = settling.fits.degrees_of_freedom[sound]
+    variance = moderate_variances(np.where(choice.readable, own_variance, np.nan), degrees).variance
     reads = np.arange(curves.time_s.shape[0])[:, None]
     used = np.isfinite(curves.net_um) & (reads >= choice.start) & (reads <= choice.end)
     blank_rate, blank_error = blanks.slope(curves.time_s, used)
     with np.errstate(invalid="ignore"):
-        own_variance = steadied.variance * line.slope_factor
-        standard_error = np.sqrt(own_variance + np.where(np.isfinite(blank_error), blank_error, 0.0) ** 2)
+        standard_error = np.sqrt(
+            variance * line.slope_factor + np.where(np.isfinite(blank_error), blank_error, 0.0) ** 2
+        )
     shortest_end = curves.time_s[choice.shortest_end, np.arange(choice.start.size)]
-    return _Measured(
+    straight = _Measured(
         line=line,
         rate=line.slope,
         standard_error=standard_error,
@@ -193,7 +204,74 @@ def _measure(curves: Curves, blanks: MatchedBlanks, choice: Choice) -> _Measured
         mean_substrate_um=np.where(curves.plain, np.nan, curves.substrate_um - (line.mean - choice.zero_um)),
         conversion=(line.at(line.end_s) - choice.zero_um) / curves.consumable_um,
         shortest_conversion=(line.at(shortest_end) - choice.zero_um) / curves.consumable_um,
+        basis=np.full(line.slope.size, "line", dtype=object),
+        transients=np.full((3, line.slope.size), np.nan),
+        transient_errors=np.full((3, line.slope.size), np.nan),
     )
+    return _with_transients(straight, curves, blanks, choice, variance) if settling.wells.size else straight
+
+
+def _with_transients(
+    straight: _Measured, curves: Curves, blanks: MatchedBlanks, choice: Choice, variance: Floats
+) -> _Measured:
+    """The steady rate after a lag and the initial rate of a burst, where the transient is sound."""
+    settling = choice.settling
+    wells, fits, lagging = settling.wells, settling.fits, choice.lagging[settling.wells]
+    # What is consumed where the rate is paired with substrate: over a lag's window, at a burst's first read.
+    consumed = np.where(
+        lagging, curves.substrate_um[wells] - straight.mean_substrate_um[wells], settling.first_um
+    )
+    scale = settling.scale_at(consumed) * np.array([[1.0], [1.0], [0.0]]) + np.array([[0.0], [0.0], [1.0]])
+    values = np.stack([fits.v0_um_per_s, fits.vs_um_per_s, fits.k_per_s]) * scale
+    factor = np.stack([fits.unit_covariance[k, k] for k in range(3)])
+    with np.errstate(invalid="ignore"):
+        errors = scale * np.sqrt(variance[wells] * factor + _blank_variance(blanks, settling))
+    told = fits.told & np.isfinite(errors).all(axis=0) & choice.readable[wells]
+    steady = told & settling.sound & lagging
+    initial = told & settling.sound & ~lagging & goes_on(fits)
+    from_blank = curves.zero_is_blank[wells]
+    at_first = curves.substrate_um[wells] - np.where(from_blank, settling.first_um, 0.0)
+
+    def replaced(old: Floats, *changes: tuple[Flags, Floats]) -> Floats:
+        new = old.copy()
+        for where, value in changes:
+            new[wells[where]] = value[where]
+        return new
+
+    basis = straight.basis.copy()
+    basis[wells[steady]], basis[wells[initial]] = "steady_state", "initial"
+    transients, transient_errors = straight.transients.copy(), straight.transient_errors.copy()
+    transients[:, wells] = np.where(told, values, np.nan)
+    transient_errors[:, wells] = np.where(told, errors, np.nan)
+    return replace(
+        straight,
+        rate=replaced(straight.rate, (steady, values[1]), (initial, values[0])),
+        standard_error=replaced(straight.standard_error, (steady, errors[1]), (initial, errors[0])),
+        mean_substrate_um=replaced(straight.mean_substrate_um, (initial, at_first)),
+        basis=basis,
+        transients=transients,
+        transient_errors=transient_errors,
+    )
+
+
+def _blank_variance(blanks: MatchedBlanks, settling: Settling) -> Floats:
+    """Variance of v0, vs and k from the blank curves that were subtracted, shape (3, wells).
+
+    Blanks whose slopes differ shift both rates alike and leave k as it is.
+    """
+    variance = np.zeros((3, settling.wells.size))
+    for number, curve in enumerate(blanks.curves):
+        mine = np.flatnonzero(blanks.curve[settling.wells] == number)
+        if mine.size:
+            influence = settling.influence[:, :, mine]
+            share = sum(
+                np.stack([sum_rows(row * column[:, None]) for row in influence]) ** 2
+                for column in curve.basis.T
+            )
+            variance[:, mine] = curve.read_variance * share + curve.slope_excess * np.array(
+                [[1.0], [1.0], [0.0]]
+            )
+    return variance
 
 
 def _rows(curves: Curves, blanks: MatchedBlanks, choice: Choice, measured: _Measured) -> pd.DataFrame:
@@ -232,6 +310,13 @@ def _rows(curves: Curves, blanks: MatchedBlanks, choice: Choice, measured: _Meas
             "early_slope_change_t": where_known(choice.early_slope_change_t),
             "lag_s": where_known(choice.lag_s),
             "shape": choice.shape(measured.shortest_conversion),
+            "rate_basis": pd.Series(measured.basis, dtype=object).where(known),
+            "transient_v0_um_per_s": measured.transients[0],
+            "transient_v0_se_um_per_s": measured.transient_errors[0],
+            "transient_vs_um_per_s": measured.transients[1],
+            "transient_vs_se_um_per_s": measured.transient_errors[1],
+            "transient_k_per_s": measured.transients[2],
+            "transient_k_se_per_s": measured.transient_errors[2],
         }
     ).assign(
         window_first_read=lambda frame: frame["window_first_read"].where(known),

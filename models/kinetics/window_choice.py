@@ -12,7 +12,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from models.kinetics.prediction import SeriesCourse
-from models.kinetics.transients import fit_transient
+from models.kinetics.settling import Settling, fit_settling, goes_on, slowing
+from models.kinetics.transients import fit_transients
 from models.kinetics.windows import WindowFits, all_windows, windows_from
 from models.statistics.moderation import moderate_variances
 
@@ -26,8 +27,6 @@ _STRETCHES = (1.0, 0.5, 0.25)
 """Shares of the reads before the conversion limit on which curvature is looked for: a short lag is lost in a
 long one."""
 _FEWEST_FOR_CURVATURE = 5
-_STEADY_SHARE = 0.15
-"""A burst goes on at more than this share of its first rate; what falls further is falling."""
 
 
 @dataclass(frozen=True)
@@ -55,7 +54,7 @@ class Choice:
     """The window of each well and what was seen of its curvature, shape (wells,) each.
 
     `zero_um` is where the curve stands when nothing is consumed yet: 0 where product counts from the blank,
-    else the first read, smoothed.
+    else the first read, smoothed. `settling` has the transients of the wells that lag or burst.
     """
 
     start: Integers
@@ -77,6 +76,7 @@ class Choice:
     bends: Flags
     plain: Flags
     depletion_limit: Floats
+    settling: Settling
 
     def shape(self, shortest_conversion: Floats) -> NDArray[np.object_]:
         """straight, falling, lag, burst or unread, shape (wells,)."""
@@ -143,7 +143,10 @@ def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
     lagging &= readable & ~curves.plain & enough
     falls &= readable & ~curves.plain & enough & ~lagging
 
-    start, lag_shortest = _after_lag(curves, lagging, first, shortest_end, early_um)
+    bursts = _bursts(curves, falls, last)
+    base_um = np.where(curves.zero_is_blank, 0.0, early_um)
+    settling = _settle(curves, course, base_um, lagging | bursts)
+    start, lag_shortest = _after_lag(curves, lagging, first, shortest_end, base_um, settling)
     late_fits, late_excess = fits, excess
     if lagging.any():
         start_s = curves.time_s[start, wells]
@@ -161,9 +164,6 @@ def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
     bend = _bend(late_fits.pick(end), late_excess.pick(end), noise, course.known)
     # The line alone would start too high by what depletion bends the curve within the window.
     zero = np.where(course.known, late_excess.pick(end).at(first_s), late_fits.pick(end).at(first_s))
-    bursts = np.zeros(wells.size, dtype=bool)
-    for well in np.flatnonzero(falls):
-        bursts[well] = _is_burst(curves.time_s[:, well], curves.net_um[:, well], usable[:, well], last[well])
     with np.errstate(invalid="ignore"):
         bends = (bend.raw_change < -curves.slope_change_limit) & (-bend.raw_t > curves.slope_change_t_limit)
     return Choice(
@@ -186,6 +186,7 @@ def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
         bends=bends,
         plain=curves.plain,
         depletion_limit=curves.depletion_limit,
+        settling=settling,
     )
 
 
@@ -318,31 +319,52 @@ def _curved_early(
     return lagging, falls
 
 
+def _settle(curves: Curves, course: SeriesCourse, base_um: Floats, curved: Flags) -> Settling:
+    """Transients of the curved wells, over their reads up to the last one below the conversion limit."""
+    ceiling = curves.depletion_limit * curves.consumable_um
+    product = curves.net_um - base_um
+    with np.errstate(invalid="ignore"):
+        used = _up_to_last(np.isfinite(product) & ~(product > ceiling)) & np.isfinite(product)
+    return fit_settling(
+        curves.time_s,
+        product,
+        used,
+        slowing(course, curves.substrate_um, ceiling),
+        np.flatnonzero(curved),
+    )
+
+
+def _up_to_last(chosen: Flags) -> Flags:
+    """Every read up to the last one chosen, shape (reads, wells)."""
+    return np.logical_or.accumulate(chosen[::-1], axis=0)[::-1]
+
+
 def _after_lag(
-    curves: Curves, lagging: Flags, first: Integers, shortest_end: Integers, early_um: Floats
+    curves: Curves,
+    lagging: Flags,
+    first: Integers,
+    shortest_end: Integers,
+    base_um: Floats,
+    settling: Settling,
 ) -> tuple[Integers, Integers]:
     """First read after the lag, and the end of the shortest window from there."""
     start, stop = first.copy(), shortest_end.copy()
-    for well in np.flatnonzero(lagging):
+    for place, well in enumerate(settling.wells):
+        if not lagging[well]:
+            continue
         net, time_s = curves.net_um[:, well], curves.time_s[:, well]
         fewest = int(curves.shortest_points[well])
         ceiling = curves.depletion_limit[well] * curves.consumable_um[well]
-        base = 0.0 if curves.zero_is_blank[well] else early_um[well]
-        below = np.isfinite(net) & ~(net - base > ceiling)
-        reads = np.flatnonzero(
-            np.isfinite(net) & (np.arange(net.size) <= np.max(np.flatnonzero(below), initial=0))
-        )
+        known = np.isfinite(net)
+        reads = np.flatnonzero(_up_to_last(known & ~(net - base_um[well] > ceiling)) & known)
         if reads.size < fewest + 1:
             continue
-        transient = fit_transient(time_s[reads], net[reads])
-        if transient is not None and transient.settles:
-            settled = int(
-                np.searchsorted(time_s[reads], time_s[first[well]] + _LAG_TIME_CONSTANTS * transient.tau_s)
-            )
-            place = min(settled, reads.size - fewest)
+        if settling.fits.settles[place]:
+            settled_s = time_s[first[well]] + _LAG_TIME_CONSTANTS / settling.fits.k_per_s[place]
+            begin = min(int(np.searchsorted(time_s[reads], settled_s)), reads.size - fewest)
         else:
-            place = _steepest(time_s[reads], net[reads], fewest)
-        start[well], stop[well] = reads[place], reads[place + fewest - 1]
+            begin = _steepest(time_s[reads], net[reads], fewest)
+        start[well], stop[well] = reads[begin], reads[begin + fewest - 1]
     return start, stop
 
 
@@ -374,12 +396,13 @@ def _straight_end(
     return np.where(curves.plain | (end < shortest_end), end, longest)
 
 
-def _is_burst(time_s: Floats, net_um: Floats, usable: Flags, last: int) -> bool:
-    """Whether a slowing curve settles to a steady rate instead of falling on."""
-    reads = np.flatnonzero(usable[: last + 1])
-    transient = fit_transient(time_s[reads], net_um[reads])
-    return (
-        transient is not None
-        and transient.settles
-        and transient.steady_rate > _STEADY_SHARE * transient.initial_rate > 0
-    )
+def _bursts(curves: Curves, falls: Flags, last: Integers) -> Flags:
+    """Which slowing curves settle to a steady rate within all their reads instead of falling on."""
+    bursts = np.zeros(falls.size, dtype=bool)
+    wells = np.flatnonzero(falls)
+    if wells.size:
+        reads = np.arange(curves.net_um.shape[0])[:, None]
+        net = np.where(reads <= last, curves.net_um, np.nan)[:, wells]
+        fits = fit_transients(curves.time_s[:, wells], net)
+        bursts[wells] = fits.settles & goes_on(fits)
+    return bursts

@@ -135,6 +135,52 @@ RATES = Table(
             nullable=True,
         ),
         Column("shape", "text", "straight, falling, lag, burst, or unread where there is no rate"),
+        Column(
+            "rate_basis",
+            "text",
+            "What the rate is: line, the slope over the window; steady_state, vs of the lag's exponential; "
+            "initial, v0 of the burst's; NULL where there is no rate",
+            nullable=True,
+        ),
+        Column(
+            "transient_v0_um_per_s",
+            "real",
+            "Lag or burst: rate at the first read, from its exponential approach to a steady rate; NULL "
+            "where the reads do not tell it",
+            "umol/L/s",
+            nullable=True,
+        ),
+        Column(
+            "transient_v0_se_um_per_s",
+            "real",
+            "Standard error of that rate, blank's error included",
+            "umol/L/s",
+            nullable=True,
+        ),
+        Column(
+            "transient_vs_um_per_s",
+            "real",
+            "Lag or burst: the steady rate that the exponential approaches, at the same substrate",
+            "umol/L/s",
+            nullable=True,
+        ),
+        Column(
+            "transient_vs_se_um_per_s",
+            "real",
+            "Standard error of that rate, blank's error included",
+            "umol/L/s",
+            nullable=True,
+        ),
+        Column(
+            "transient_k_per_s", "real", "Lag or burst: rate constant of the approach", "1/s", nullable=True
+        ),
+        Column(
+            "transient_k_se_per_s",
+            "real",
+            "Standard error of that rate constant, blank's error included",
+            "1/s",
+            nullable=True,
+        ),
         Column("overflow_count", "integer", "Reads past the linear limit or overflowed, all of the curve"),
         Column("missing_count", "integer", "Reads missing in the curve"),
     ),
