@@ -43,8 +43,10 @@ DIGITS = 9
 def metrics(data: GateInput) -> pd.DataFrame:
     """Largest excursion from the assay's temperature, of plate reads whose assay states one."""
     stated = {recipe: assay.conditions.temperature_c for recipe, assay in data.assays.items()}
-    demanded = data.analyses["recipe_id"].map(stated).astype(float)
-    plates = data.analyses.loc[demanded.notna(), ["analysis_id"]].assign(assay_c=demanded)
+    demanded = data.analyses[["analysis_id"]].assign(
+        assay_c=data.analyses["recipe_id"].map(stated).astype(float)
+    )
+    plates = demanded.dropna(subset="assay_c")
     reported = data.plate_reads[["analysis_id", "temperature_low_c", "temperature_high_c"]]
     plates = plates.merge(reported, on="analysis_id", how="left", validate="1:1")
     low, high, assay_c = (

@@ -2,19 +2,29 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import replace
 from typing import Any
 
+import numpy as np
 import pandas as pd
 
-from checks.gates.gate import GateInput
+from checks.assess import assess
+from checks.gates.gate import Gate, GateInput
+from checks.gates.limits import resolve
 from models.records.assay import Assay, Schedule
+from models.tables import COMPARISONS, FIT_POINTS, FITS, SERIES
 
 READS = 20
 INTERVAL_S = 10.0
 WELLS = [f"{row}{column}" for row in "ABC" for column in range(1, 5)]
 BLANKS = ("A1", "A2")
 PLATES = ("plate-1", "plate-2")
+ASSAY_C = 25.0
+REFERENCE = "R1"
+STANDARDS_UM = (0.0, 5.0, 10.0, 20.0, 40.0, 80.0)
+SERIES_LEVELS_UM = {320.0: 400.0}
+"""Series reach a little further than the wells that `clean_batch` lays out."""
 
 
 def an_assay(schedule: Schedule | None = None, **stated: Any) -> Assay:
@@ -27,6 +37,11 @@ def an_assay(schedule: Schedule | None = None, **stated: Any) -> Assay:
             "signal": {"kind": "absorbance"},
             "response": {"signal_per_um": 0.01, "source": "invented"},
             "schedule": schedule or Schedule(),
+            "conditions": {"temperature_c": ASSAY_C},
+            "chart_bases": [
+                {"lot": REFERENCE, "constant": name, "mean": mean, "sd": mean / 20, "source": "invented"}
+                for name, mean in (("km", 80.0), ("k_half", 200.0))
+            ],
             **stated,
         }
     )
@@ -44,6 +59,10 @@ def clean_batch(recipes: tuple[str, str] = ("recipe-1", "recipe-1")) -> GateInpu
                 "lot": None if well in BLANKS else "L1",
                 "substrate_um": 10.0 * 2 ** (number % 6),
                 "enzyme_nm": None if well in BLANKS else 5.0,
+                "enzyme_ng_per_ml": None,
+                "modulator": None,
+                "modulator_um": None,
+                "product_um": None,
                 "series_id": None if well in BLANKS else f"{plate} series",
                 "row_number": "ABC".index(well[0]) + 1,
                 "column_number": int(well[1:]),
@@ -94,29 +113,65 @@ def clean_batch(recipes: tuple[str, str] = ("recipe-1", "recipe-1")) -> GateInpu
         columns=["analysis_id", "well", "read_number", "time_s", "signal", "state", "product_um"],
     )
     plate_reads = pd.DataFrame(
+        {"analysis_id": list(PLATES), "temperature_low_c": ASSAY_C - 0.1, "temperature_high_c": ASSAY_C + 0.1}
+    )
+    return GateInput(
+        analyses,
+        wells,
+        readings,
+        rates,
+        plate_reads=plate_reads,
+        standards=pd.concat([standards(plate) for plate in PLATES], ignore_index=True),
+        assays={recipe: an_assay() for recipe in recipes},
+    )
+
+
+def standards(plate: str, read_um: Sequence[float] | None = None) -> pd.DataFrame:
+    """Standards of a plate read, in pairs, and what they read back as; left out, 1 % off to either side."""
+    known = np.repeat(STANDARDS_UM, 2)
+    read = known * np.tile([0.99, 1.01], len(STANDARDS_UM)) if read_um is None else np.repeat(read_um, 2)
+    return pd.DataFrame(
         {
-            "analysis_id": list(PLATES),
-            "plate_format": 96,
-            "temperature_low_c": 24.9,
-            "temperature_high_c": 25.1,
+            "analysis_id": plate,
+            "well": [f"H{number}" for number in range(1, len(known) + 1)],
+            "product_um": known,
+            "signal": 0.1 + 0.01 * read,
+            "back_calculated_um": read,
         }
     )
-    assays = {recipe: an_assay() for recipe in recipes}
-    return GateInput(analyses, wells, readings, rates, plate_reads=plate_reads, assays=assays)
 
 
 def clean_series() -> GateInput:
-    """A hyperbolic and a cooperative series, both well saturated."""
+    """A hyperbolic and a cooperative series of the reference lot, both well saturated."""
+    batch = clean_batch()
+    names = dict(zip(PLATES, ("hyperbolic", "cooperative"), strict=True))
+    member = batch.wells["series_id"].notna()
+    wells = batch.wells.assign(
+        series_id=batch.wells["analysis_id"].map(names).where(member, None),
+        role=batch.wells["role"].where(~member, "reference"),
+        lot=batch.wells["lot"].where(~member, REFERENCE),
+        substrate_um=batch.wells["substrate_um"].replace(SERIES_LEVELS_UM),
+    )
     series = pd.DataFrame(
         {
             "series_id": ["hyperbolic", "cooperative"],
             "analysis_id": ["plate-1", "plate-2"],
+            "lot": REFERENCE,
+            "role": "reference",
+            "enzyme_nm": 5.0,
+            "enzyme_ng_per_ml": np.nan,
+            "modulator": None,
+            "modulator_um": np.nan,
             "well_count": 10,
             "clear_well_count": 10,
+            "level_count": 6,
+            "lowest_substrate_um": [10.0, 10.0],
             "highest_substrate_um": [400.0, 400.0],
+            "law": ["michaelis_menten", "hill"],
             "refusal": pd.Series([None, None], dtype=object),
         }
     )
+    assert [*series.columns, "standing"] == SERIES.column_names
     estimates = pd.DataFrame(
         [
             ("hyperbolic", "vmax", 2.0, 1.9, 2.1, "umol/L/s"),
@@ -127,7 +182,85 @@ def clean_series() -> GateInput:
         ],
         columns=["series_id", "constant", "value", "low", "high", "unit"],
     ).assign(wells="clear", chosen=True)
-    return replace(clean_batch(), series=series, estimates=estimates)
+    fits = series[["series_id", "analysis_id", "law"]].assign(
+        fit_id="fit of " + series["series_id"],
+        grid_id=None,
+        wells="clear",
+        chosen=True,
+        converged=True,
+        trusted=True,
+        distrust=None,
+        point_count=10,
+        degrees_of_freedom=[8, 7],
+        weighted_residual_sum=7.0,
+        aicc=12.0,
+        evidence_weight=1.0,
+        lack_of_fit_p=0.4,
+        runs_p=0.6,
+    )[FITS.column_names]
+    points = wells.loc[member, ["series_id", "analysis_id", "well", "substrate_um"]].reset_index(drop=True)
+    level = points["substrate_um"]
+    fitted = 2.0 * level / (80.0 + level)
+    cooperative = points["series_id"] == "cooperative"
+    fitted = fitted.where(~cooperative, 2.0 * level**2 / (200.0**2 + level**2))
+    # Neighbours in a column hold one level: 2 % to either side of the curve.
+    side = np.where(points.groupby(["series_id", "substrate_um"]).cumcount() == 0, 0.02, -0.02)
+    points = points.assign(
+        fit_id="fit of " + points["series_id"],
+        v_um_per_s=fitted * (1 + side),
+        fitted_um_per_s=fitted,
+        v_sd_um_per_s=0.02 * fitted,
+        leverage=0.2,
+        studentised_residual=np.sign(side),
+    )[[*FIT_POINTS.column_names, "series_id"]]
+    comparisons = pd.DataFrame(
+        {
+            "series_id": ["hyperbolic"],
+            "analysis_id": ["plate-1"],
+            "km_ratio": [1.03],
+            "km_ratio_low": [0.95],
+            "km_ratio_high": [1.12],
+            "vmax_ratio": [1.01],
+            "vmax_ratio_low": [0.97],
+            "vmax_ratio_high": [1.05],
+            "p_value": [0.5],
+        }
+    )
+    assert list(comparisons.columns) == COMPARISONS.column_names
+    return replace(
+        batch,
+        wells=wells,
+        series=series,
+        estimates=estimates,
+        fits=fits,
+        points=points,
+        comparisons=comparisons,
+    )
+
+
+def judged(gate: Gate, data: GateInput, **settings: bool | float) -> pd.DataFrame:
+    """Findings of one gate alone, under its defaults but for some settings."""
+    limits = resolve({gate.name: gate}, {gate.name: settings}, {})
+    recipes = dict.fromkeys(data.analyses["recipe_id"], limits)
+    return assess(gate.phase, data, recipes, {gate.name: gate}).findings
+
+
+def with_frame(data: GateInput, frame: str, where: dict[str, Any], **values: Any) -> GateInput:
+    """The batch with other values in the rows of one frame that match."""
+    changed = getattr(data, frame).copy()
+    rows = np.ones(len(changed), dtype=bool)
+    for name, value in where.items():
+        rows &= (changed[name] == value).to_numpy()
+    assert rows.any(), where
+    for name, value in values.items():
+        changed[name] = changed[name].astype(object) if isinstance(value, str) else changed[name]
+        changed.loc[rows, name] = value
+    return replace(data, **{frame: changed})
+
+
+def with_assay(data: GateInput, **stated: Any) -> GateInput:
+    """The batch with another assay in all its recipes."""
+    return replace(data, assays=dict.fromkeys(data.assays, an_assay(**stated)))
 
 
 def with_rates(data: GateInput, well: str, plate: str = "plate-1", **values: Any) -> GateInput:
@@ -196,5 +329,6 @@ def together(batches: dict[str, GateInput]) -> GateInput:
         return pd.concat(frames, ignore_index=True)
 
     assays = {recipe: assay for data in batches.values() for recipe, assay in data.assays.items()}
-    frames = {name: stacked(name) for name in ("analyses", "wells", "readings", "rates", "plate_reads")}
+    names = ("analyses", "wells", "readings", "rates", "plate_reads", "standards")
+    frames = {name: stacked(name) for name in names}
     return GateInput(**frames, assays=assays)
