@@ -255,6 +255,21 @@ class Conditions(Record):
     """Further components, such as a coupling enzyme with its activity."""
 
 
+class ChartBase(Record):
+    """Where a constant of a reference lot has always lain: the centre and width of its control chart."""
+
+    lot: str = Field(min_length=1)
+    """The reference lot."""
+    constant: str = Field(min_length=1)
+    """The constant, as estimates name it, such as km, k_half, vmax or kcat."""
+    mean: float = Field(gt=0)
+    """Mean of the plate reads that the base rests on, in the unit in which the constant is stored."""
+    sd: float = Field(gt=0)
+    """Standard deviation between those plate reads, in the same unit."""
+    source: str = Field(min_length=3)
+    """Where the base comes from: which plate reads, and when."""
+
+
 class Assay(Record):
     """One assay: enzyme, reaction, signal, and what its results are held against."""
 
@@ -294,6 +309,8 @@ class Assay(Record):
     """What the read schedule should have been."""
     conditions: Conditions = Conditions()
     """Conditions to report."""
+    chart_bases: tuple[ChartBase, ...] = ()
+    """Bases of the control charts of reference lots: a plate read waits where a constant leaves its band."""
     gates: dict[str, dict[str, SettingValue]] = Field(default_factory=dict)
     """Gate limits that differ from the site's, by gate and setting."""
 
@@ -312,6 +329,14 @@ class Assay(Record):
                 raise ValueError(f"the stated standard curve cannot be used: {curve.reason}")
         if not self.laws:
             raise ValueError("laws must name at least one rate law")
+        return self
+
+    @model_validator(mode="after")
+    def _one_base_a_constant(self) -> Assay:
+        stated = [(base.lot, base.constant) for base in self.chart_bases]
+        twice = next((key for key in stated if stated.count(key) > 1), None)
+        if twice is not None:
+            raise ValueError(f"chart_bases state {twice[1]} of lot {twice[0]} twice")
         return self
 
     def consumable_um(self, substrate_um: float) -> float:
