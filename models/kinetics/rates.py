@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from models.kinetics.blanks import MatchedBlanks, match_blanks
 from models.kinetics.curves import CurveBatch
 from models.kinetics.prediction import SeriesCourse, no_course, predict_courses
-from models.kinetics.settling import Settling, goes_on
+from models.kinetics.settling import Settling
 from models.kinetics.window_choice import Choice, Curves, choose_windows
 from models.kinetics.windows import WindowFits, windows_from
 from models.statistics.moderation import moderate_variances
@@ -71,6 +71,7 @@ class _Measured:
     mean_substrate_um: Floats
     conversion: Floats
     shortest_conversion: Floats
+    read_variance: Floats
     basis: NDArray[np.object_]
     transients: Floats
     transient_errors: Floats
@@ -82,8 +83,13 @@ def measure_rates(
     """Measure the initial rate of every well.
 
     The window runs from the end of any lag over the longest stretch in which the predicted conversion stays
-    within the depletion limit and a straight line holds. The rate is paired with the mean substrate over its
-    window (Lee and Wilson 1971, doi:10.1016/0005-2744(71)90144-6).
+    within the depletion limit and a straight line holds. The rate is the line's slope, paired with the mean
+    substrate over its window (Lee and Wilson 1971, doi:10.1016/0005-2744(71)90144-6).
+
+    Where a lag or a burst was found and the reads before the conversion limit tell its exponential (see
+    `models.kinetics.transients`), the rate is the exponential's instead, depletion taken out of the curve
+    first: the steady rate after a lag that settles, paired with the mean substrate over the window after it;
+    the initial rate of a burst, paired with the substrate at the first read. `rate_basis` says which.
 
     Parameters
     ----------
@@ -155,7 +161,8 @@ def _measure_plate(
         measured = _measure(curves, blanks, choice)
         if turn < settings.rounds:
             course = _predict(batch, series_laws, curves, choice, measured)
-    return _rows(curves, blanks, choice, measured)
+    # Only now: consumption is predicted from lines, as the first rate of a burst does not last.
+    return _rows(curves, blanks, choice, _with_transients(measured, curves, blanks, choice))
 
 
 def _predict(
@@ -181,11 +188,12 @@ def _predict(
 def _measure(curves: Curves, blanks: MatchedBlanks, choice: Choice) -> _Measured:
     fits = windows_from(curves.time_s, curves.net_um, choice.start)
     line = fits.pick(choice.end)
-    settling, sound = choice.settling, choice.settling.sound
+    settling = choice.settling
+    usable = settling.fits.told & (settling.fits.settles | ~choice.lagging[settling.wells])
     # The parabola's residuals: what depletion bends is not noise. Where a transient is used, its own.
     own_variance, degrees = line.parabola_variance.copy(), np.maximum(line.count - 3.0, 0.0)
-    own_variance[settling.wells[sound]] = settling.fits.read_variance[sound]
-    degrees[settling.wells[sound]] = settling.fits.degrees_of_freedom[sound]
+    own_variance[settling.wells[usable]] = settling.fits.read_variance[usable]
+    degrees[settling.wells[usable]] = settling.fits.degrees_of_freedom[usable]
     variance = moderate_variances(np.where(choice.readable, own_variance, np.nan), degrees).variance
     reads = np.arange(curves.time_s.shape[0])[:, None]
     used = np.isfinite(curves.net_um) & (reads >= choice.start) & (reads <= choice.end)
@@ -195,7 +203,7 @@ def _measure(curves: Curves, blanks: MatchedBlanks, choice: Choice) -> _Measured
             variance * line.slope_factor + np.where(np.isfinite(blank_error), blank_error, 0.0) ** 2
         )
     shortest_end = curves.time_s[choice.shortest_end, np.arange(choice.start.size)]
-    straight = _Measured(
+    return _Measured(
         line=line,
         rate=line.slope,
         standard_error=standard_error,
@@ -204,18 +212,20 @@ def _measure(curves: Curves, blanks: MatchedBlanks, choice: Choice) -> _Measured
         mean_substrate_um=np.where(curves.plain, np.nan, curves.substrate_um - (line.mean - choice.zero_um)),
         conversion=(line.at(line.end_s) - choice.zero_um) / curves.consumable_um,
         shortest_conversion=(line.at(shortest_end) - choice.zero_um) / curves.consumable_um,
+        read_variance=variance,
         basis=np.full(line.slope.size, "line", dtype=object),
         transients=np.full((3, line.slope.size), np.nan),
         transient_errors=np.full((3, line.slope.size), np.nan),
     )
-    return _with_transients(straight, curves, blanks, choice, variance) if settling.wells.size else straight
 
 
 def _with_transients(
-    straight: _Measured, curves: Curves, blanks: MatchedBlanks, choice: Choice, variance: Floats
+    straight: _Measured, curves: Curves, blanks: MatchedBlanks, choice: Choice
 ) -> _Measured:
-    """The steady rate after a lag and the initial rate of a burst, where the transient is sound."""
+    """The steady rate after a lag and the initial rate of a burst, where the transient tells them."""
     settling = choice.settling
+    if settling.wells.size == 0:
+        return straight
     wells, fits, lagging = settling.wells, settling.fits, choice.lagging[settling.wells]
     # What is consumed where the rate is paired with substrate: over a lag's window, at a burst's first read.
     consumed = np.where(
@@ -225,10 +235,12 @@ def _with_transients(
     values = np.stack([fits.v0_um_per_s, fits.vs_um_per_s, fits.k_per_s]) * scale
     factor = np.stack([fits.unit_covariance[k, k] for k in range(3)])
     with np.errstate(invalid="ignore"):
-        errors = scale * np.sqrt(variance[wells] * factor + _blank_variance(blanks, settling))
+        errors = scale * np.sqrt(straight.read_variance[wells] * factor + _blank_variance(blanks, settling))
     told = fits.told & np.isfinite(errors).all(axis=0) & choice.readable[wells]
-    steady = told & settling.sound & lagging
-    initial = told & settling.sound & ~lagging & goes_on(fits)
+    steady = told & fits.settles & (values[1] > 0) & lagging
+    # That a burst settles within all its reads made it one; v0 lies at the reads, so that those before the
+    # conversion limit need not settle as well: simulated, that leaves 93 % coverage where lines have none.
+    initial = told & (values[0] > 0) & ~lagging
     from_blank = curves.zero_is_blank[wells]
     at_first = curves.substrate_um[wells] - np.where(from_blank, settling.first_um, 0.0)
 
@@ -263,11 +275,8 @@ def _blank_variance(blanks: MatchedBlanks, settling: Settling) -> Floats:
     for number, curve in enumerate(blanks.curves):
         mine = np.flatnonzero(blanks.curve[settling.wells] == number)
         if mine.size:
-            influence = settling.influence[:, :, mine]
-            share = sum(
-                np.stack([sum_rows(row * column[:, None]) for row in influence]) ** 2
-                for column in curve.basis.T
-            )
+            influence = np.moveaxis(settling.influence[:, :, mine], 1, 0)
+            share = sum(sum_rows(influence * column[:, None, None]) ** 2 for column in curve.basis.T)
             variance[:, mine] = curve.read_variance * share + curve.slope_excess * np.array(
                 [[1.0], [1.0], [0.0]]
             )

@@ -103,11 +103,6 @@ class Settling:
     influence: Floats
     first_um: Floats
 
-    @property
-    def sound(self) -> Flags:
-        """Whether the transient is told and settles within the reads, so that its rates can be used."""
-        return self.fits.told & self.fits.settles
-
     def scale_at(self, product_um: Floats) -> Floats:
         """What v0 and vs are multiplied with where so much product has formed, shape (wells,)."""
         scale: Floats = 1.0 / self.slowed.at(product_um)

@@ -213,7 +213,9 @@ def _fit(time_s: Floats, product_um: Floats) -> Transients:
     first = np.argmax(usable, axis=0)
     since = np.where(usable, time_s - time_s[first, wells], 0.0)
     length = np.max(since, axis=0)
-    rise = np.where(usable, product_um - product_um[first, wells], 0.0)
+    read_um = np.where(usable, product_um, 0.0)
+    first_um = read_um[first, wells]
+    rise = np.where(usable, read_um - first_um, 0.0)
     with np.errstate(all="ignore"):
         place = since / length
         count = _sum(usable.astype(np.float64))
@@ -221,7 +223,7 @@ def _fit(time_s: Floats, product_um: Floats) -> Transients:
         lines = _Lines(usable.astype(np.float64), place, centred, count, _sum(centred * centred))
         bent = lines.less_line(rise)
         log_k, at_limit = _optimum(lines, bent)
-        return _judged(lines, rise, bent, log_k, at_limit, length, product_um[first, wells])
+        return _judged(lines, rise, bent, log_k, at_limit, length, first_um)
 
 
 def _approach(place: Floats, log_k: Floats) -> tuple[Floats, Floats]:
