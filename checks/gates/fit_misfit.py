@@ -4,7 +4,8 @@ Purpose: constants mean what their law means. Where the curve misses the rates b
 scatter, or lies above them over one stretch of substrate and below over another, it is the wrong law or the
 rates of some levels are wrong, and intervals around its constants are too narrow.
 
-Formula: p < limit, with p twice the smaller of two p values (Bonferroni), or the one where only one is known:
+Formula: p < limit, with p twice the smaller of two p values (Bonferroni), be it the only one known, for it
+is the rates themselves that leave one untold:
 
 - lack of fit: F test of the means of replicates about the curve against the scatter of replicates;
 - runs: exact chance of so few runs of residuals of one sign, in order of substrate.
@@ -39,6 +40,7 @@ from checks.gates.gate import (
 from checks.gates.wording import chance, plain
 
 NAME = "fit_misfit"
+TESTS = 2
 
 
 def metrics(data: GateInput) -> pd.DataFrame:
@@ -51,8 +53,7 @@ def metrics(data: GateInput) -> pd.DataFrame:
         of_series(fits, series, name).to_numpy(dtype=float, na_value=np.nan)
         for name in ("lack_of_fit_p", "runs_p")
     )
-    known = np.isfinite(lack).astype(float) + np.isfinite(runs)
-    p_value = np.minimum(np.fmin(lack, runs) * known, 1.0)
+    p_value = np.minimum(np.fmin(lack, runs) * TESTS, 1.0)
     why = not_fitted(series)
     untold = "the series has neither replicates nor levels enough to show whether it follows its law"
     reason = np.where((why == "") & np.isnan(p_value), untold, why)
@@ -90,11 +91,10 @@ def sentence(row: Row, limits: Limits) -> str:
         if by_lack
         else "lies above its rates over one stretch of substrate and below over another"
     )
-    both = "" if lack is None or runs is None else " with two tests tried"
     return (
         f"The curve ({law}) {how}: chance does that with a probability of "
-        f"{chance(float(row['p_value']), limit)}{both} (limit {plain(limit)}). Another law, or wrong rates "
-        "at some level; the intervals of its constants are too narrow."
+        f"{chance(float(row['p_value']), limit)}, two tests allowed for (limit {plain(limit)}). "
+        "Another law, or wrong rates at some level; the intervals of its constants are too narrow."
     )
 
 

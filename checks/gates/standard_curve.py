@@ -6,8 +6,9 @@ standard that does not read back as what it is, or a bend that the curve does no
 Formula, the first rule that is breached is told:
 
 - bend: relative change of slope, over the range of the standards, of product read back against known product
-  (a parabola through all standards) > limit, where |t| of its square term >= t_limit: what is left of the
-  standards' shape once the curve has been taken off. A rate at one end is off from one at the other by that.
+  (a parabola through all standards, each weighted by 1 / max(known product, a fifth of the highest)^2)
+  > limit, where |t| of its square term >= t_limit: what is left of the standards' shape once the curve has
+  been taken off. A rate at one end is off from one at the other by that.
 - error: |mean product read back at a level - known product| / max(known product, a fifth of the highest
   standard) > limit, at the worst level.
 
@@ -103,24 +104,27 @@ def _bend(
     """Relative change of slope of product read back over the range of the standards, and its |t|.
 
     By the parabola through each plate's standards, in polynomials that are orthogonal over them; shape
-    (plates,) each, NaN where there is nothing to fit or to spare.
+    (plates,) each, NaN where there is nothing to fit or to spare. Without weights the highest standards,
+    whose errors of dispensing are the largest, would bend a straight curve by themselves.
     """
-
-    def total(values: np.ndarray) -> np.ndarray:
-        return np.bincount(row, weights=values, minlength=count)
-
     members = np.bincount(row, minlength=count).astype(float)
     high, low = np.full(count, -np.inf), np.full(count, np.inf)
     np.maximum.at(high, row, known_um)
     np.minimum.at(low, row, known_um)
     with np.errstate(divide="ignore", invalid="ignore"):
         span = high - low
-        x = (known_um - (total(known_um) / members)[row]) / span[row]
-        y = (read_um - (total(read_um) / members)[row]) / span[row]
+        weight = (high[row] / np.maximum(known_um, LOW_LEVEL_SHARE * high[row])) ** 2
+
+        def total(values: np.ndarray) -> np.ndarray:
+            return np.bincount(row, weights=weight * values, minlength=count)
+
+        mass = total(np.ones_like(known_um))
+        x = (known_um - (total(known_um) / mass)[row]) / span[row]
+        y = (read_um - (total(read_um) / mass)[row]) / span[row]
         square = total(x**2)
         line = total(x * y) / square
         # The square less its own mean and its projection on x: what a line cannot take up.
-        bow = x**2 - (square / members)[row] - (total(x**3) / square)[row] * x
+        bow = x**2 - (square / mass)[row] - (total(x**3) / square)[row] * x
         bow_square = total(bow**2)
         height = total(bow * y) / bow_square
         residual = y - line[row] * x - height[row] * bow
