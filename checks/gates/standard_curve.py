@@ -34,6 +34,7 @@ import numpy as np
 import pandas as pd
 
 from checks.gates.gate import (
+    ENZYME_ROLES,
     Gate,
     GateInput,
     Limits,
@@ -55,7 +56,7 @@ FEWEST_LEVELS = 3
 
 
 def metrics(data: GateInput) -> pd.DataFrame:
-    """Worst error of a level, and bend, of the standards of every plate read that brings its own curve."""
+    """Worst error of a level, and bend, of the standards of every plate read with enzyme and a curve of its own."""
     own = {
         recipe
         for recipe, assay in data.assays.items()
@@ -63,6 +64,8 @@ def metrics(data: GateInput) -> pd.DataFrame:
     }
     has_curve = data.analyses["recipe_id"].isin(own)
     has_curve |= data.analyses["analysis_id"].isin(data.standards["analysis_id"])
+    with_rates = data.wells.loc[data.wells["role"].isin(ENZYME_ROLES), "analysis_id"]
+    has_curve &= data.analyses["analysis_id"].isin(with_rates)
     plates = data.analyses.loc[has_curve, ["analysis_id"]].reset_index(drop=True)
     row = pd.Index(plates["analysis_id"]).get_indexer(data.standards["analysis_id"])
     known_um = data.standards["product_um"].to_numpy(dtype=float, na_value=np.nan)

@@ -22,6 +22,7 @@ import numpy as np
 import pandas as pd
 
 from checks.gates.gate import (
+    ENZYME_ROLES,
     Gate,
     GateInput,
     Limits,
@@ -41,12 +42,13 @@ DIGITS = 9
 
 
 def metrics(data: GateInput) -> pd.DataFrame:
-    """Largest excursion from the assay's temperature, of plate reads whose assay states one."""
+    """Largest excursion from the assay's temperature, of plate reads with enzyme whose assay states one."""
     stated = {recipe: assay.conditions.temperature_c for recipe, assay in data.assays.items()}
     demanded = data.analyses[["analysis_id"]].assign(
         assay_c=data.analyses["recipe_id"].map(stated).astype(float)
     )
-    plates = demanded.dropna(subset="assay_c")
+    with_rates = data.wells.loc[data.wells["role"].isin(ENZYME_ROLES), "analysis_id"]
+    plates = demanded[demanded["analysis_id"].isin(with_rates)].dropna(subset="assay_c")
     reported = data.plate_reads[["analysis_id", "temperature_low_c", "temperature_high_c"]]
     plates = plates.merge(reported, on="analysis_id", how="left", validate="1:1")
     low, high, assay_c = (

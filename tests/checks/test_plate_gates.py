@@ -182,6 +182,13 @@ def test_a_standard_beyond_the_curve_is_left_out_and_the_others_are_judged() -> 
     assert judged(STANDARD_CURVE, read_back([0.0, 5.0, 10.0, 20.0, 40.0, NAN])).empty
 
 
+def test_a_plate_without_enzyme_has_no_rates_that_temperature_or_standards_could_spoil() -> None:
+    data = with_frame(at_temperature(30.0, 31.0), "wells", {"analysis_id": "plate-1"}, role="blank")
+    data = replace(data, standards=standards("plate-1", [0.0, 5.0, 10.0, 50.0, 40.0, 80.0]))
+    assert TEMPERATURE_BAND.metrics(data)["analysis_id"].tolist() == ["plate-2"]
+    assert STANDARD_CURVE.metrics(data).empty
+
+
 def wandering(amplitude: float) -> GateInput:
     """Both blanks of plate-1 on one slope with one wave, symmetric in time, about it."""
     data = clean_batch()
