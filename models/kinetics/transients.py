@@ -27,6 +27,8 @@ _NARROW = 64
 """Columns up to which a running sum is the faster way to add rows in their order."""
 _SETTLED = 3.0
 """Time constants within the reads: exp(-3) = 5 % of the transient is left at the last of them."""
+_INTERVAL = 1.96
+"""Standard errors to either end of a 95 % interval."""
 _DOUBT = 1e-3
 """A transient is told from a line only where chance bends a line as far with less than this probability."""
 _LARGEST_K_ERROR = 0.5
@@ -58,6 +60,8 @@ class Transients:
         error is below half its value; shape (wells,).
     settles
         Whether the reads last for three time constants or more, shape (wells,).
+    length_s
+        Time from the first usable read to the last [s], shape (wells,).
     """
 
     v0_um_per_s: Floats
@@ -69,6 +73,7 @@ class Transients:
     influence: Floats
     told: Flags
     settles: Flags
+    length_s: Floats
 
     @property
     def unit_covariance(self) -> Floats:
@@ -86,6 +91,14 @@ class Transients:
         covariance = self.covariance
         errors: Floats = np.sqrt(np.stack([covariance[i, i] for i in range(3)]))
         return errors
+
+    @property
+    def surely_settles(self) -> Flags:
+        """Whether they last as long at the lower end of the interval of k, shape (wells,)."""
+        with np.errstate(invalid="ignore"):
+            lowest = self.k_per_s - _INTERVAL * self.standard_errors[2]
+            sure: Flags = lowest * self.length_s > _SETTLED
+        return sure
 
     def table(self) -> pd.DataFrame:
         """One row a well: constants, standard errors, and whether they are told and settle."""
@@ -209,7 +222,9 @@ def _fit(time_s: Floats, product_um: Floats) -> Transients:
     if product_um.size == 0:
         nothing, never = np.full(wells.size, np.nan), np.zeros(wells.size, dtype=bool)
         influence = np.full((3, *product_um.shape), np.nan)
-        return Transients(nothing, nothing, nothing, nothing, nothing, nothing, influence, never, never)
+        return Transients(
+            nothing, nothing, nothing, nothing, nothing, nothing, influence, never, never, nothing
+        )
     first = np.argmax(usable, axis=0)
     since = np.where(usable, time_s - time_s[first, wells], 0.0)
     length = np.max(since, axis=0)
@@ -338,4 +353,5 @@ def _judged(
         influence=where_enough(influence),
         told=told,
         settles=enough & (np.exp(log_k) > _SETTLED),
+        length_s=where_enough(length_s),
     )

@@ -322,21 +322,22 @@ def _curved_early(
 def _settle(curves: Curves, course: SeriesCourse, base_um: Floats, curved: Flags) -> Settling:
     """Transients of the curved wells, over their reads up to the last one below the conversion limit."""
     ceiling = curves.depletion_limit * curves.consumable_um
-    product = curves.net_um - base_um
-    with np.errstate(invalid="ignore"):
-        used = _up_to_last(np.isfinite(product) & ~(product > ceiling)) & np.isfinite(product)
     return fit_settling(
         curves.time_s,
-        product,
-        used,
+        curves.net_um - base_um,
+        _before_limit(curves, base_um),
         slowing(course, curves.substrate_um, ceiling),
         np.flatnonzero(curved),
     )
 
 
-def _up_to_last(chosen: Flags) -> Flags:
-    """Every read up to the last one chosen, shape (reads, wells)."""
-    return np.logical_or.accumulate(chosen[::-1], axis=0)[::-1]
+def _before_limit(curves: Curves, base_um: Floats) -> Flags:
+    """Usable reads up to the last one below the conversion limit, shape (reads, wells)."""
+    product, known = curves.net_um - base_um, np.isfinite(curves.net_um)
+    with np.errstate(invalid="ignore"):
+        below = known & ~(product > curves.depletion_limit * curves.consumable_um)
+    until_last: Flags = np.logical_or.accumulate(below[::-1], axis=0)[::-1]
+    return until_last & known
 
 
 def _after_lag(
@@ -349,14 +350,13 @@ def _after_lag(
 ) -> tuple[Integers, Integers]:
     """First read after the lag, and the end of the shortest window from there."""
     start, stop = first.copy(), shortest_end.copy()
+    before_limit = _before_limit(curves, base_um)
     for place, well in enumerate(settling.wells):
         if not lagging[well]:
             continue
         net, time_s = curves.net_um[:, well], curves.time_s[:, well]
         fewest = int(curves.shortest_points[well])
-        ceiling = curves.depletion_limit[well] * curves.consumable_um[well]
-        known = np.isfinite(net)
-        reads = np.flatnonzero(_up_to_last(known & ~(net - base_um[well] > ceiling)) & known)
+        reads = np.flatnonzero(before_limit[:, well])
         if reads.size < fewest + 1:
             continue
         if settling.fits.settles[place]:

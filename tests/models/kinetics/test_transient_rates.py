@@ -8,7 +8,8 @@ import numpy as np
 import pandas as pd
 import pytest
 
-from models.kinetics.prediction import no_course
+from models.kinetics.laws import MICHAELIS_MENTEN
+from models.kinetics.prediction import SeriesCourse, no_course
 from models.kinetics.rates import measure_rates
 from models.kinetics.settling import slowing
 from models.simulation import TRIPLICATE_NOISE, TRIPLICATE_TRUTH, Noise, simulate_plate, triplicate_design
@@ -142,6 +143,12 @@ def test_a_lag_that_does_not_settle_keeps_its_line() -> None:
     assert (lagging["transient_k_per_s"].dropna() < 3.0 / 600.0).all()
 
 
+def test_noise_does_not_pass_a_long_lag_off_as_settled() -> None:
+    wells = measured([Lag(250.0)], noise=Noise(signal_sd=5e-4), plates=5)
+    assert (wells["shape"] == "lag").sum() > 60
+    assert (wells["rate_basis"] == "steady_state").sum() <= 1
+
+
 def test_too_few_reads_keep_the_line() -> None:
     short = replace(DESIGN, time_s=DESIGN.time_s[:5] * 12.0)
     wells = measured([Burst(3.0, 60.0)], design=short)
@@ -189,13 +196,9 @@ def test_order_and_batch_do_not_matter(fault) -> None:
 def test_product_without_depletion_is_the_integral_of_the_law() -> None:
     substrate_um = np.array([10.0, 80.0, 1000.0, 0.0])
 
-    class _Known:
-        known = np.array([True, True, True, True])
-
-        def rate(self, s):
-            return s / (80.0 + s)
-
-    slowed = slowing(_Known(), substrate_um, 0.1 * substrate_um)  # type: ignore[arg-type]
+    constants = np.repeat([[1.0], [80.0]], 4, axis=1)
+    course = SeriesCourse(np.ones(4, dtype=bool), ((MICHAELIS_MENTEN, np.arange(4), constants),))
+    slowed = slowing(course, substrate_um, 0.1 * substrate_um)
     product = np.linspace(0.0, 0.1, 6)[:, None] * substrate_um
     s = substrate_um[:3]
     exact = s / (80.0 + s) * (product[:, :3] - 80.0 * np.log1p(-product[:, :3] / s))
