@@ -42,7 +42,7 @@ FIT_COLUMNS = (
 )
 CONSTANT_COLUMNS = ("series", "law", "constant", "value", "standard_error", "low", "high", "unit")
 REFUSAL_COLUMNS = ("series", "kind", "reason")
-INFLUENCE_COLUMNS = ("series", "well", "vmax", "km")
+INFLUENCE_COLUMNS = ("series", "well", "vmax", "km", "leverage")
 UNITS = {"vmax": "umol/L/s", "km": "umol/L", "kp": "umol/L", "loss": "1/s", "dead_time": "s"}
 
 CHUNK = 32
@@ -107,7 +107,8 @@ class ProgressResult:
         known.
     influence
         A row a well that was fitted: series, well (its row in the batch), and by how much leaving it out
-        would move log vmax and log km (`vmax`, `km`), to first order.
+        would move log vmax and log km (`vmax`, `km`), to first order; `leverage`, the share of its pull that
+        its own part in the fit takes up [1].
     """
 
     fits: pd.DataFrame
@@ -240,6 +241,7 @@ def _fit(wells: Wells, numbers: Integers, rows: Integers, options: ProgressOptio
             "well": rows[wells.row[mine]],
             "vmax": fits.influence[0, mine],
             "km": fits.influence[1, mine],
+            "leverage": fits.leverage[mine],
         }
     )
     return replace(part, influence=influence)

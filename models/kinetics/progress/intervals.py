@@ -1,7 +1,8 @@
 """95 % profile-likelihood intervals of the constants of whole curves, open where the curves leave them open.
 
 For each value of a constant everything else is fitted again, dispensing and drift included; the scatter stays
-as estimated. The ends are where the sum of squares stands t^2 above its least.
+as estimated. The ends are where the sum of squares stands t^2 above its least: reached directly by steps on
+the linearised curves (Venzon and Moolgavkar 1988, doi:10.2307/2347496), by a search where those fail.
 """
 
 from __future__ import annotations
@@ -10,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.stats import t as t_distribution
 
-from models.kinetics.progress.normal_equations import Constants, Noise, State
+from models.kinetics.progress.normal_equations import Constants, Noise, State, linearise, reduce
 from models.kinetics.progress.search import Found, Limits, minimise
 from models.kinetics.progress.wells import Wells
 
@@ -22,6 +23,11 @@ LEVEL = 0.95
 _ROUNDS = 40
 _TOLERANCE = 1e-6
 _LARGEST_REACH = 2.0
+_DIRECT_ROUNDS = 8
+_NEAR_HEIGHT, _NEAR_GAIN = 1e-3, 1e-5
+"""How far a direct step's start may stand from the height sought, and what moving everything else may still
+gain, for the step to be the last: what it leaves is smaller by another such factor."""
+_LONGEST_DIRECT_STEP = 1.5
 
 
 def profile_ends(
@@ -58,9 +64,94 @@ def profile_ends(
     for index in range(constants.count):
         usable = np.flatnonzero(found.converged & inside[index])
         for side, ends in ((-1.0, low), (1.0, high)):
-            for_side = _Side(wells, constants, found, noise, limits, target, log_covariance, index, side)
-            ends[index] = np.exp(for_side.search(usable))
+            end = _direct(wells, constants, found, noise, limits, target, usable, index, side)
+            rest = usable[np.isnan(end[usable])]
+            if rest.size:
+                for_side = _Side(wells, constants, found, noise, limits, target, log_covariance, index, side)
+                end[rest] = for_side.search(rest)[rest]
+            ends[index] = np.exp(end)
     return low, high
+
+
+def _direct(
+    wells: Wells,
+    constants: Constants,
+    found: Found,
+    noise: Noise,
+    limits: Limits,
+    target: Floats,
+    usable: Integers,
+    index: int,
+    side: float,
+) -> Floats:
+    """Logarithm of one end by steps that keep all else at its best, NaN where they do not get there, (K,).
+
+    On linearised curves the least sum of squares for a step a of the constant is q + (a - s)^2 / C, with C its
+    variance, s its unrestricted step and q the least of all; the step aims where that is the height sought.
+    """
+    end = np.full(target.shape, np.nan)
+    state = State(found.state.log_constants.copy(), found.state.dispensed.copy(), found.state.drift.copy())
+    gram, objective = found.linear.gram.copy(), found.linear.objective.copy()
+    active = usable
+    for _ in range(_DIRECT_ROUNDS):
+        if active.size == 0:
+            break
+        chosen = wells.select(active)
+        part, at_wells, at_drifts = chosen.wells, chosen.well_places, chosen.drift_places
+        here = State(state.log_constants[:, active], state.dispensed[:, at_wells], state.drift[at_drifts])
+        scatter = Noise(noise.read_sd[active], noise.cv[:, active])
+        reduced = reduce(part, constants, gram[:, :, at_wells], scatter, here)
+        covariance = _inverse(reduced.information)
+        free = np.sum(covariance * reduced.pull[:, None, :], axis=2)
+        along = covariance[:, :, index]
+        with np.errstate(all="ignore"):
+            variance = along[:, index]
+            gain = reduced.own_gain + np.sum(free * reduced.pull, axis=1)
+            aim = found.linear.objective[active] + target[active] ** 2
+            away = side * np.sqrt(variance * (aim - objective[active] + gain))
+            step = free + along * (away / variance)[:, None]
+            height = np.sqrt(objective[active] - found.linear.objective[active])
+            others = gain - free[:, index] ** 2 / variance
+            near = (np.abs(height - target[active]) < _NEAR_HEIGHT) & (others < _NEAR_GAIN)
+            trial = here.log_constants + step.T
+            possible = np.all(np.abs(step) < _LONGEST_DIRECT_STEP, axis=1) & np.all(
+                (trial > limits.lower[:, active]) & (trial < limits.upper[:, active]), axis=0
+            )
+        last = near & possible
+        end[active[last]] = trial[index, last]
+        going = np.flatnonzero(possible & ~near)
+        kept = chosen.wells.select(going)
+        dispensed, drift = reduced.step(np.where(possible[None], step.T, 0.0))
+        state.log_constants[:, active[going]] = trial[:, going]
+        wells_on, drifts_on = at_wells[kept.well_places], at_drifts[kept.drift_places]
+        state.dispensed[:, wells_on] = (here.dispensed + dispensed)[:, kept.well_places]
+        state.drift[drifts_on] = (here.drift + drift)[kept.drift_places]
+        active = active[going]
+        if active.size:
+            moved = State(
+                state.log_constants[:, active], state.dispensed[:, wells_on], state.drift[drifts_on]
+            )
+            linear = linearise(
+                kept.wells, constants, moved, Noise(noise.read_sd[active], noise.cv[:, active])
+            )
+            gram[:, :, wells_on], objective[active] = linear.gram, linear.objective
+    return end
+
+
+def _inverse(information: Floats) -> Floats:
+    """Inverse of each matrix (K, n, n), NaN where it has none."""
+    diagonal = np.einsum("kii->ki", information)
+    with np.errstate(all="ignore"):
+        scale = 1.0 / np.sqrt(diagonal)
+        matrix = information * scale[:, :, None] * scale[:, None, :]
+    good = np.all(np.isfinite(matrix), axis=(1, 2))
+    eye = np.eye(information.shape[1])
+    safe = np.where(good[:, None, None], matrix, eye)
+    good &= np.linalg.eigvalsh(safe)[:, 0] > 1e-9
+    inverse = np.linalg.inv(np.where(good[:, None, None], safe, eye))
+    with np.errstate(all="ignore"):
+        inverse = inverse * scale[:, :, None] * scale[:, None, :]
+    return np.where(good[:, None, None], inverse, np.nan)
 
 
 class _Side:

@@ -20,6 +20,8 @@ Floats = NDArray[np.float64]
 Flags = NDArray[np.bool_]
 
 ENZYME, SUBSTRATE, DRIFT, FIRST_OTHER = 0, 1, 2, 3
+_BLOCK = 192
+"""Wells worked on together, so that their reads stay in the processor's cache."""
 
 
 @dataclass(frozen=True)
@@ -96,20 +98,30 @@ class Linear:
 
 def linearise(wells: Wells, constants: Constants, state: State, noise: Noise) -> Linear:
     """Compute the curves of a state, their derivatives by the logarithm of everything, and what is left."""
-    columns = _columns(wells, constants, state)
     weight = 1.0 / noise.read_sd[wells.series]
-    count = np.maximum(wells.read_count, 1.0)
-    mean = sum_rows(columns) / count
-    centred = np.where(wells.used[:, None, :], (columns - mean) * weight, 0.0)
-    size = centred.shape[1]
-    first, second = np.triu_indices(size)
-    products = sum_rows(centred[:, first, :] * centred[:, second, :])
-    gram = np.empty((size, size, wells.substrate_um.size))
-    gram[first, second] = gram[second, first] = products
+    size = FIRST_OTHER + constants.count
+    gram = np.empty((size, size, weight.size))
+    for start in range(0, weight.size, _BLOCK):
+        block = slice(start, start + _BLOCK)
+        part = wells.cut(block)
+        of_part = State(state.log_constants, state.dispensed[:, block], state.drift)
+        gram[:, :, block] = _products(_columns(part, constants, of_part), part, weight[block])
     read_sum = wells.by_series(gram[-1, -1])
     scaled, drift = _scaled(wells, state, noise)
     objective = read_sum + wells.by_series(np.sum(scaled**2, axis=0)) + wells.drifts_by_series(drift**2)
     return Linear(gram, np.where(np.isfinite(objective), objective, np.inf), read_sum)
+
+
+def _products(columns: Floats, wells: Wells, weight: Floats) -> Floats:
+    """Sums of products of the columns (T, columns, W), each less its mean, (columns, columns, W)."""
+    mean = sum_rows(columns) / np.maximum(wells.read_count, 1.0)
+    centred = np.where(wells.used[:, None, :], (columns - mean) * weight, 0.0)
+    each = [np.ascontiguousarray(centred[:, k]) for k in range(centred.shape[1])]
+    gram = np.empty((len(each), len(each), weight.size))
+    for k, left in enumerate(each):
+        for m in range(k + 1):
+            gram[k, m] = gram[m, k] = sum_rows(left * each[m])
+    return gram
 
 
 def residuals(wells: Wells, constants: Constants, state: State) -> tuple[Floats, Floats]:

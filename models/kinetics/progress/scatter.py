@@ -15,8 +15,8 @@ Floats = NDArray[np.float64]
 Flags = NDArray[np.bool_]
 
 SMALLEST_CV, LARGEST_CV = 1e-4, 0.5
-_FIRST_STEP, _LAST_STEP = np.log(4.0), 0.01
-_MOVES = tuple((a, b) for a in (-1.0, 0.0, 1.0) for b in (-1.0, 0.0, 1.0) if (a, b) != (0.0, 0.0))
+_FIRST_STEP, _LATER_STEP, _LAST_STEP = np.log(4.0), 0.16, 0.01
+_MOVES = np.array([(a, b) for a in (-1.0, 0.0, 1.0) for b in (-1.0, 0.0, 1.0) if (a, b) != (0.0, 0.0)])
 
 
 def read_noise(wells: Wells) -> Floats:
@@ -60,7 +60,9 @@ def restricted_loss(wells: Wells, constants: Constants, gram: Floats, noise: Noi
     return np.where(np.isfinite(total), total, np.inf)
 
 
-def dispensing_cv(wells: Wells, constants: Constants, gram: Floats, noise: Noise, estimated: Flags) -> Floats:
+def dispensing_cv(
+    wells: Wells, constants: Constants, gram: Floats, noise: Noise, estimated: Flags, *, first: bool
+) -> Floats:
     """CVs of enzyme and substrate as dispensed that the curves make most likely, shape (2, K).
 
     A search over both logarithms by ever smaller steps: two dimensions, no derivatives, and the end may lie
@@ -74,21 +76,31 @@ def dispensing_cv(wells: Wells, constants: Constants, gram: Floats, noise: Noise
         Scatter to start from; its read noise stays.
     estimated
         Series whose CVs are sought; others keep theirs, shape (K,).
+    first
+        Whether the start is a guess, from which long steps are taken.
     """
     log_cv = np.log(np.clip(noise.cv, SMALLEST_CV, LARGEST_CV))
     best = restricted_loss(wells, constants, gram, Noise(noise.read_sd, np.exp(log_cv)))
-    step = np.full(wells.series_count, _FIRST_STEP)
-    moving = estimated.copy()
-    while np.any(moving):
-        found, found_at = best.copy(), log_cv.copy()
-        for move in _MOVES:
-            trial = np.clip(log_cv + np.array(move)[:, None] * step, np.log(SMALLEST_CV), np.log(LARGEST_CV))
-            loss = restricted_loss(wells, constants, gram, Noise(noise.read_sd, np.exp(trial)))
-            better = moving & (loss < found - 1e-9)
-            found = np.where(better, loss, found)
-            found_at = np.where(better, trial, found_at)
-        gained = found < best
-        best, log_cv = found, found_at
-        step = np.where(gained, step, 0.5 * step)
-        moving &= step > _LAST_STEP
+    step = np.full(wells.series_count, _FIRST_STEP if first else _LATER_STEP)
+    active = np.flatnonzero(estimated)
+    while active.size:
+        chosen = wells.select(active, reads=False)
+        # All moves side by side, as if each were series of its own.
+        tiled = chosen.wells.repeated(len(_MOVES))
+        moved = log_cv[:, None, active] + _MOVES.T[:, :, None] * step[active]
+        trial = np.clip(moved, np.log(SMALLEST_CV), np.log(LARGEST_CV))
+        loss = restricted_loss(
+            tiled,
+            constants,
+            np.tile(gram[:, :, chosen.well_places], len(_MOVES)),
+            Noise(np.tile(noise.read_sd[active], len(_MOVES)), np.exp(trial).reshape(2, -1)),
+        ).reshape(len(_MOVES), -1)
+        move = np.argmin(loss, axis=0)
+        here = np.arange(active.size)
+        gained = loss[move, here] < best[active] - 1e-9
+        taken = active[gained]
+        best[taken] = loss[move, here][gained]
+        log_cv[:, taken] = trial[:, move, here][:, gained]
+        step[active[~gained]] *= 0.5
+        active = active[step[active] > _LAST_STEP]
     return np.where(estimated, np.exp(log_cv), noise.cv)

@@ -28,12 +28,13 @@ Floats = NDArray[np.float64]
 Integers = NDArray[np.int_]
 Flags = NDArray[np.bool_]
 
-_SCATTER_ROUNDS = 5
+_SCATTER_STEPS = (20, 2, 2, 2)
+"""Most steps towards the optimum before each estimate of the scatter: the optimum hardly moves with it."""
 _FEWEST_SPARE_WELLS = 3
 """Wells beyond the constants from which dispensing errors can be estimated."""
 _GUESSED_CV = 0.02
 """Start of the search for the dispensing CVs: 2 %, common practice, no source."""
-_START_READS, _START_ROUNDS = 12, 8
+_START_READS, _START_ROUNDS = 12, 2
 _START_KM = np.geomspace(0.01, 100.0, 9)
 """Start values of Km over the geometric mean of the substrate levels."""
 
@@ -72,6 +73,8 @@ class SeriesFits:
     influence
         Change of the logarithm of each constant when a well is left out, to first order, shape
         (constants, W).
+    leverage
+        Share of what a well pulls at the constants that its own part in the fit has taken up [1], shape (W,).
     """
 
     log_constants: Floats
@@ -91,6 +94,7 @@ class SeriesFits:
     conversion: Floats
     correlation_z: Floats
     influence: Floats
+    leverage: Floats
 
 
 def fit_series(wells: Wells, constants: Constants, given_cv: tuple[float, float] | None) -> SeriesFits:
@@ -121,10 +125,10 @@ def fit_series(wells: Wells, constants: Constants, given_cv: tuple[float, float]
     given = np.array(given_cv or (0.0, 0.0))[:, None]
     noise = Noise(read_sd, np.where(estimated, _GUESSED_CV, given))
     state = State(state.log_constants, np.zeros_like(state.dispensed), np.zeros_like(state.drift))
-    for _ in range(_SCATTER_ROUNDS):
-        found = minimise(wells, constants, state, noise, limits)
+    for number, steps in enumerate(_SCATTER_STEPS):
+        found = minimise(wells, constants, state, noise, limits, rounds=steps)
         state = found.state
-        noise = _scatter(wells, constants, found, noise, estimated, floor)
+        noise = _scatter(wells, constants, found, noise, estimated, floor, first=number == 0)
     found = minimise(wells, constants, state, noise, limits)
     state = found.state
     reduced = reduce(wells, constants, found.linear.gram, noise, state)
@@ -133,6 +137,7 @@ def fit_series(wells: Wells, constants: Constants, given_cv: tuple[float, float]
     log_covariance, full_rank = _covariance(reduced)
     low, high = profile_ends(wells, constants, found, noise, limits, degrees, log_covariance)
     margin = 1e-9
+    influence, leverage = _influence(wells, reduced)
     return SeriesFits(
         log_constants=state.log_constants,
         log_covariance=log_covariance,
@@ -151,7 +156,8 @@ def fit_series(wells: Wells, constants: Constants, given_cv: tuple[float, float]
         well_count=well_count,
         conversion=_highest(wells, conversion),
         correlation_z=_serial_correlation(wells, residual),
-        influence=_influence(wells, reduced),
+        influence=influence,
+        leverage=leverage,
     )
 
 
@@ -222,7 +228,14 @@ def _read_degrees(wells: Wells, constants: Constants, reduced: Reduced) -> Float
 
 
 def _scatter(
-    wells: Wells, constants: Constants, found: Found, noise: Noise, estimated: Flags, floor: Floats
+    wells: Wells,
+    constants: Constants,
+    found: Found,
+    noise: Noise,
+    estimated: Flags,
+    floor: Floats,
+    *,
+    first: bool,
 ) -> Noise:
     gram = found.linear.gram
     reduced = reduce(wells, constants, gram, noise, found.state)
@@ -232,7 +245,7 @@ def _scatter(
     # The Gram matrix is over the old read noise.
     gram = restored(wells, gram, found.state) * ((noise.read_sd / read_sd) ** 2)[wells.series]
     renewed = Noise(read_sd, noise.cv)
-    return Noise(read_sd, dispensing_cv(wells, constants, gram, renewed, estimated))
+    return Noise(read_sd, dispensing_cv(wells, constants, gram, renewed, estimated, first=first))
 
 
 def _covariance(reduced: Reduced) -> tuple[Floats, Flags]:
@@ -248,16 +261,21 @@ def _covariance(reduced: Reduced) -> tuple[Floats, Flags]:
     return np.where(full_rank[:, None, None], covariance, np.nan), full_rank
 
 
-def _influence(wells: Wells, reduced: Reduced) -> Floats:
-    """One step towards the fit without each well (Cook and Weisberg 1982, section 5), (constants, W)."""
+def _influence(wells: Wells, reduced: Reduced) -> tuple[Floats, Floats]:
+    """One step towards the fit without each well (Cook and Weisberg 1982, section 5), (constants, W), and the
+    share of its own pull that a well's part in the fit has taken away already, (W,)."""
     diagonal = np.einsum("kii->ki", reduced.information)
     scale = 1.0 / np.sqrt(np.maximum(diagonal, 1e-300))[wells.series]
-    left = reduced.information[wells.series] - reduced.well_information
-    matrix = left * scale[:, :, None] * scale[:, None, :] + 1e-12 * np.eye(scale.shape[1])
+    pair = scale[:, :, None] * scale[:, None, :]
+    whole = reduced.information[wells.series] * pair + 1e-12 * np.eye(scale.shape[1])
     right = (reduced.well_pull * scale)[:, :, None]
-    solved = np.linalg.solve(matrix, right)[:, :, 0] * scale
-    influence: Floats = -solved.T
-    return influence
+    solved = np.linalg.solve(whole - reduced.well_information * pair, right)
+    influence: Floats = -(solved[:, :, 0] * scale).T
+    with np.errstate(all="ignore"):
+        kept = np.sum(right * np.linalg.solve(whole, right), axis=(1, 2)) / np.sum(
+            right * solved, axis=(1, 2)
+        )
+    return influence, np.where(np.isfinite(kept), np.clip(1.0 - kept, 0.0, 1.0), np.nan)
 
 
 def _highest(wells: Wells, values: Floats) -> Floats:

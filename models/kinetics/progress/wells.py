@@ -6,7 +6,7 @@ Says which reads can be used and what the blanks leave uncertain; fits nothing.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -79,18 +79,19 @@ class Wells:
         """Sum of drift values (..., drifts) over each series, (..., K)."""
         return grouped(values, self.drift_series, self.series_count)
 
-    def select(self, series: Integers) -> Selection:
-        """Some of the series, by rising number."""
+    def select(self, series: Integers, *, reads: bool = True) -> Selection:
+        """Some of the series, by rising number; with their reads, or for sums over wells only."""
         number = np.full(self.series_count, -1)
         number[series] = np.arange(series.size)
         wells = np.flatnonzero(number[self.series] >= 0)
         drifts = np.flatnonzero(number[self.drift_series] >= 0)
         drift_number = np.full(self.drift_series.size, -1)
         drift_number[drifts] = np.arange(drifts.size)
+        rows = slice(None) if reads else slice(0)
         part = Wells(
-            np.ascontiguousarray(self.time_s[:, wells]),
-            np.ascontiguousarray(self.product_um[:, wells]),
-            np.ascontiguousarray(self.used[:, wells]),
+            np.ascontiguousarray(self.time_s[rows, wells]),
+            np.ascontiguousarray(self.product_um[rows, wells]),
+            np.ascontiguousarray(self.used[rows, wells]),
             self.substrate_um[wells],
             number[self.series[wells]],
             drift_number[self.drift[wells]],
@@ -100,6 +101,36 @@ class Wells:
             int(series.size),
         )
         return Selection(part, wells, drifts)
+
+    def cut(self, wells: slice) -> Wells:
+        """Some neighbouring wells, whatever their series."""
+        return replace(
+            self,
+            time_s=np.ascontiguousarray(self.time_s[:, wells]),
+            product_um=np.ascontiguousarray(self.product_um[:, wells]),
+            used=np.ascontiguousarray(self.used[:, wells]),
+            substrate_um=self.substrate_um[wells],
+            series=self.series[wells],
+            drift=self.drift[wells],
+            row=self.row[wells],
+        )
+
+    def repeated(self, times: int) -> Wells:
+        """The same series several times over, numbered on; for sums over wells, without reads."""
+        empty = np.empty((0, times * self.series.size))
+        turn = np.arange(times)[:, None]
+        return Wells(
+            empty,
+            empty,
+            empty > 0,
+            np.tile(self.substrate_um, times),
+            (self.series + turn * self.series_count).ravel(),
+            (self.drift + turn * self.drift_series.size).ravel(),
+            np.tile(self.drift_error, times),
+            (self.drift_series + turn * self.series_count).ravel(),
+            np.tile(self.row, times),
+            times * self.series_count,
+        )
 
     def thinned(self, reads: int) -> Wells:
         """About so many reads of each well, evenly spread."""
