@@ -167,7 +167,7 @@ def series_standings(
         all_void = (member["standing"] == "void").groupby(member["series_id"]).all()
         void = series["series_id"].map(all_void).fillna(False).astype(bool)
         parts.append(pd.Series("clear", index=series.index, dtype=object).mask(void, "void"))
-    return _worst(parts)
+    return worst_standing(*parts)
 
 
 def plate_read_standing(wells: pd.DataFrame, series: pd.DataFrame, findings: pd.DataFrame) -> pd.Series:
@@ -199,7 +199,7 @@ def plate_read_standing(wells: pd.DataFrame, series: pd.DataFrame, findings: pd.
     void = plates["analysis_id"].map(all_void).fillna(False).astype(bool)
     clear = pd.Series("clear", index=plates.index, dtype=object)
     waits = clear.mask(plates["analysis_id"].isin(waiting), "held")
-    worst = _worst([own, waits, clear.mask(void, "void")])
+    worst = worst_standing(own, waits, clear.mask(void, "void"))
     return pd.Series(worst.to_numpy(), index=plates["analysis_id"].to_numpy(), dtype=object)
 
 
@@ -219,7 +219,8 @@ def _worst_by(rows: pd.DataFrame, findings: pd.DataFrame, subject: str, keys: Se
     return pd.Series(np.array(STANDINGS, dtype=object)[found], index=rows.index, dtype=object)
 
 
-def _worst(parts: Sequence[pd.Series]) -> pd.Series:
+def worst_standing(*parts: pd.Series) -> pd.Series:
+    """The worst of several standings of the same rows."""
     ranks = np.stack([part.map(STANDINGS.index).to_numpy(dtype=int) for part in parts]).max(axis=0)
     return pd.Series(np.array(STANDINGS, dtype=object)[ranks], index=parts[0].index, dtype=object)
 

@@ -41,6 +41,11 @@ def result_id(*parts: Json) -> str:
     return digest(list(parts))[:RESULT_ID_LENGTH]
 
 
+def known_text(value: object) -> str | None:
+    """A text, or None for what is not known (a data frame's NaN among it)."""
+    return value if isinstance(value, str) else None
+
+
 def known(number: float | None) -> float | None:
     """A finite number, or None for what is not known."""
     return None if number is None or not math.isfinite(number) else float(number)

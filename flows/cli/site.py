@@ -21,6 +21,7 @@ from flows.site.shipped import shipped
 from flows.stages.read import TrialPlate, TrialReport, choose_profile, trial_report
 from flows.wording import number
 from models.errors import ConfigurationError
+from models.kinetics.grids import WITHOUT_EFFECT
 from models.kinetics.laws import law
 
 
@@ -71,8 +72,25 @@ def check_names(configuration: Configuration) -> None:
         except ConfigurationError as error:
             where = error.where or f"config/gates.toml, with config/assays/{name}.toml"
             raise ConfigurationError(error.what, where=where, remedy=error.remedy) from error
-        for each in assay.laws:
-            law(each)
+        where = f"config/assays/{name}.toml"
+        for key, names, with_modulator in (
+            ("laws", assay.laws, False),
+            ("modulator_laws", assay.modulator_laws, True),
+        ):
+            for each in names:
+                needs_modulator = law(each).fewest_modulator_levels > 0
+                if needs_modulator and not with_modulator:
+                    raise ConfigurationError(
+                        f"'{each}' is a law over a modulator, not of a series",
+                        where=f"{where}, {key}",
+                        remedy="name it in modulator_laws",
+                    )
+                if with_modulator and not needs_modulator and each != WITHOUT_EFFECT:
+                    raise ConfigurationError(
+                        f"'{each}' knows no modulator",
+                        where=f"{where}, {key}",
+                        remedy=f"name it in laws; only {WITHOUT_EFFECT} may stand here, for no effect at all",
+                    )
 
 
 def _gates_off(configuration: Configuration) -> list[str]:

@@ -5,10 +5,12 @@ The arithmetic is in models.kinetics.turnover and models.calibration; this stage
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 import pandas as pd
 
-from flows.stages.work import PlateWork, RatedBatch
+from flows.stages.work import PlateWork
 from models.calibration.activity import activity, nkat_from_u
 from models.calibration.shared_error import add_shared_error
 from models.kinetics.fitting import FitResult
@@ -20,27 +22,29 @@ VMAX = "vmax"
 SPECIFIC_ACTIVITY = "specific_activity"
 
 
-def stored_constants(rated: RatedBatch, result: FitResult) -> pd.DataFrame:
+def stored_constants(plates: Sequence[PlateWork], subjects: pd.DataFrame, result: FitResult) -> pd.DataFrame:
     """Every constant of every fit.
 
     Parameters
     ----------
-    rated
-        The batch: its series with their enzyme, its plates with assay and conversion.
+    plates
+        Plate reads by number, with assay and conversion.
+    subjects
+        Series or grids by number (the index 0, 1, ...): plate, enzyme_nm, enzyme_ng_per_ml.
     result
-        Fits of the batch.
+        Their fits.
 
     Returns
     -------
     DataFrame
         Columns of `FitResult.constants` and `assay_relative_error`.
     """
-    works = [rated.plates[plate] for plate in rated.series["plate"]]
+    works = [plates[plate] for plate in subjects["plate"]]
     masses = [work.recipe.assay.molar_mass_g_per_mol for work in works]
     derived = turnover(
         result,
-        enzyme_nm=rated.series["enzyme_nm"].to_numpy(dtype=float),
-        enzyme_ng_per_ml=rated.series["enzyme_ng_per_ml"].to_numpy(dtype=float),
+        enzyme_nm=subjects["enzyme_nm"].to_numpy(dtype=float),
+        enzyme_ng_per_ml=subjects["enzyme_ng_per_ml"].to_numpy(dtype=float),
         molar_mass_g_per_mol=np.array([np.nan if mass is None else mass for mass in masses]),
     )
     fitted = pd.concat([result.constants, derived], ignore_index=True)

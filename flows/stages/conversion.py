@@ -41,6 +41,9 @@ class Conversion:
         Relative standard error [1] that every well's rate shares.
     shared_by_assay
         Whether that error belongs to the assay, and so to all its plates, or to this plate's own standards.
+    standards
+        Those standards: well, product_um (known), signal and back_calculated_um; no rows where there are
+        none.
     """
 
     curve: Calibration | None
@@ -49,6 +52,7 @@ class Conversion:
     product_per_substrate: float
     relative_error_shared: float
     shared_by_assay: bool
+    standards: pd.DataFrame
 
     def turnover_um(self, wells: Sequence[str], signal: Floats) -> Floats:
         """Substrate turned over [umol/L] up to a constant, of signals with shape (wells, reads)."""
@@ -85,8 +89,11 @@ def plate_conversion(assay: Assay, readings: pd.DataFrame, wells: pd.DataFrame, 
     """
     curve: Calibration | None = None
     signal_per_um: dict[str, float] = {}
+    standards = pd.DataFrame(columns=["well", "product_um", "signal", "back_calculated_um"])
     if assay.standard_curve is not None:
-        curve = _curve(assay, assay.standard_curve, readings[readings["channel"] == channel], wells)
+        curve, standards = _curve(
+            assay, assay.standard_curve, readings[readings["channel"] == channel], wells
+        )
         shared = curve.relative_error_shared
     elif assay.absorption is not None and assay.absorption.water_band is not None:
         signal_per_um = _by_water_band(assay.absorption, assay.absorption.water_band, readings)
@@ -103,10 +110,15 @@ def plate_conversion(assay: Assay, readings: pd.DataFrame, wells: pd.DataFrame, 
         product_per_substrate=assay.product_per_substrate * assay.product_recovery,
         relative_error_shared=shared,
         shared_by_assay=assay.standard_curve is None or assay.standard_curve.points_from == "stated",
+        standards=standards,
     )
 
 
-def _curve(assay: Assay, stated: StandardCurve, readings: pd.DataFrame, wells: pd.DataFrame) -> Calibration:
+def _curve(
+    assay: Assay, stated: StandardCurve, readings: pd.DataFrame, wells: pd.DataFrame
+) -> tuple[Calibration, pd.DataFrame]:
+    """The plate's curve, and the standards of its own that it rests on."""
+    used, product_um, signal = wells[:0], np.empty(0), np.empty(0)
     if stated.points_from == "stated":
         curve = stated.stated(assay.signal.direction)
     else:
@@ -115,15 +127,16 @@ def _curve(assay: Assay, stated: StandardCurve, readings: pd.DataFrame, wells: p
         usable = readings[(readings["state"] == "ok") & (readings["signal"] <= limit)]
         reads = usable.pivot(index="well", columns="read_number", values="signal").reindex(known["well"])
         signal = standard_wells(reads.to_numpy(dtype=np.float64)).signal
-        read = np.isfinite(signal)
-        product_um = known["product_um"].to_numpy(dtype=np.float64)
-        curve = stated.fit(product_um[read], signal[read], assay.signal.direction)
+        used, signal = known[np.isfinite(signal)], signal[np.isfinite(signal)]
+        product_um = used["product_um"].to_numpy(dtype=np.float64)
+        curve = stated.fit(product_um, signal, assay.signal.direction)
     if isinstance(curve, CalibrationRefusal):
         raise HalfsatError(
             f"its standard curve cannot be used: {curve.reason}",
             remedy="mend the standards in the plate map, or the assay's [standard_curve]",
         )
-    return curve
+    columns = {"product_um": product_um, "signal": signal, "back_calculated_um": curve.to_product(signal)[0]}
+    return curve, pd.DataFrame({"well": used["well"].to_numpy(dtype=object), **columns})
 
 
 def _by_water_band(absorption: Absorption, band: WaterBand, readings: pd.DataFrame) -> dict[str, float]:

@@ -1,29 +1,38 @@
-"""Fit every series of a batch, with the clear wells and beside it with all that are not void.
+"""Fit every series and grid of a batch, hold the fits against the gates, and give all rows that are stored.
 
-The fits are in models.kinetics, the gates on them in `checks`; this stage gives ids and puts the rows that
-are stored in order.
+Three ways beside each other: rates of the clear wells, rates of all wells that are not void, and whole
+progress curves. The fits are in models.kinetics, the gates in `checks`; this stage knows the order only.
 """
 
 from __future__ import annotations
 
-import numpy as np
+from dataclasses import dataclass
+
 import pandas as pd
 
 from checks.assess import Assessment, assess
-from checks.verdicts import plate_read_standing, series_standings, without_consequences
-from flows.frames import rows
-from flows.stages.constants import stored_constants
+from checks.gates.gate import Phase
+from checks.verdicts import (
+    plate_read_standing,
+    series_standings,
+    well_standings,
+    without_consequences,
+    worst_standing,
+)
 from flows.stages.gate import gate_input, limits_by_recipe
-from flows.stages.work import FittedBatch, GatedBatch, RatedBatch
-from models.identity import result_id
-from models.kinetics.fitting import FitResult, fit_rates
-from models.tables import ANALYSES, ESTIMATES, FINDINGS, FITS, RATES, SERIES, WELLS
+from flows.stages.grids import fit_grids_of
+from flows.stages.stored_fits import StoredFits, joined, law_chosen, stored_fits
+from flows.stages.whole_curves import WholeCurves, fit_whole_curves
+from flows.stages.work import FittedBatch, GatedBatch
+from models.kinetics.fitting import FitResult, FitSettings, fit_rates
+from models.tables import ANALYSES, COMPARISONS, FINDINGS, GRIDS, RATES, SERIES, SHIFTS, WELLS
 
-CLEAR, ALL = "clear", "all"
+CLEAR, ALL, CURVES = "clear", "all", "curves"
+STANDINGS_FITTED = {CLEAR: ("clear",), ALL: ("clear", "held")}
 
 
 def fit_batch(gated: GatedBatch) -> FittedBatch:
-    """Fit a batch both ways, assess its series, and return all rows that are to be stored.
+    """Fit a batch, assess its series, and return all rows that are to be stored.
 
     Parameters
     ----------
@@ -33,27 +42,24 @@ def fit_batch(gated: GatedBatch) -> FittedBatch:
     Returns
     -------
     FittedBatch
-        Rows of analyses (ids and standing only), wells, rates, findings, series, fits and estimates.
+        Rows of analyses (ids and standing only) and of every table that hangs on them.
     """
     rated = gated.rated
-    fits, estimates, refusals = [], [], pd.Series(dtype=object)
-    for name, standings in ((CLEAR, ("clear",)), (ALL, ("clear", "held"))):
-        used = gated.wells["standing"].isin(standings)
-        result = fit_rates(_rates_to_fit(gated, used), _laws(rated))
-        some_fits, some_estimates = _stored(rated, result, name)
-        fits.append(some_fits)
-        estimates.append(some_estimates)
-        if name == CLEAR:
-            refusals = result.refusals.set_index("series")["reason"]
-    all_fits = pd.concat(fits, ignore_index=True)
-    all_estimates = pd.concat(estimates, ignore_index=True)
+    fitted = _fit(gated, CLEAR)
+    by_fit = _assess("fit", gated, _series_rows(gated, fitted), fitted.stored)
+    gated, changed = _held_further(gated, by_fit)
+    if changed:
+        fitted = _fit(gated, CLEAR)
+    curves = fit_whole_curves(gated, fitted.result, CURVES)
+    stored = joined([fitted.stored, _fit(gated, ALL).stored, curves.stored])
 
-    series = _series_rows(gated, all_fits, refusals)
-    assessment = _assess_series(rated, series, all_estimates)
-    series_findings = without_consequences(assessment.findings)
-    findings = pd.concat([gated.findings, series_findings], ignore_index=True)
+    series = _series_rows(gated, fitted)
+    by_series = _assess("series", gated, series, stored, curves)
+    findings = _together(gated.findings, without_consequences(by_series.findings))
     series["standing"] = series_standings(series, findings, gated.wells).to_numpy()
-    standing = plate_read_standing(gated.wells, series, findings)
+    grids = fit_grids_of(gated, fitted.stored.estimates, findings, STANDINGS_FITTED)
+    stored = joined([stored, *grids.stored])
+    standing = plate_read_standing(gated.wells, pd.concat([series, grids.rows]), findings)
     analyses = pd.DataFrame(
         {
             "analysis_id": [work.analysis_id for work in rated.plates],
@@ -70,52 +76,55 @@ def fit_batch(gated: GatedBatch) -> FittedBatch:
         RATES.name: rated.rates,
         FINDINGS.name: findings[FINDINGS.column_names],
         SERIES.name: series[SERIES.column_names],
-        FITS.name: all_fits[FITS.column_names],
-        ESTIMATES.name: all_estimates[ESTIMATES.column_names],
+        GRIDS.name: grids.rows[GRIDS.column_names],
+        **stored.tables(),
+        COMPARISONS.name: curves.comparisons[COMPARISONS.column_names],
+        SHIFTS.name: grids.shifts[SHIFTS.column_names],
     }
-    return FittedBatch(rated.plates, tables, (*gated.runs, *assessment.runs))
+    return FittedBatch(rated.plates, tables, (*gated.runs, *by_series.runs))
 
 
-def _laws(rated: RatedBatch) -> list[tuple[str, ...]]:
-    return [rated.plates[plate].recipe.assay.laws for plate in rated.series["plate"]]
+@dataclass(frozen=True)
+class _Fitted:
+    """Series fitted to the rates of some wells, as they came and as they are stored."""
+
+    result: FitResult
+    stored: StoredFits
 
 
-def _rates_to_fit(gated: GatedBatch, used: pd.Series) -> pd.DataFrame:
-    """Rates of the wells of series that may be fitted, each with the mean substrate over its window."""
+def _fit(gated: GatedBatch, wells_fitted: str) -> _Fitted:
+    rated = gated.rated
+    used = gated.wells["standing"].isin(STANDINGS_FITTED[wells_fitted])
+    assays = [rated.plates[plate].recipe.assay for plate in rated.series["plate"]]
+    settings = FitSettings([assay.loss for assay in assays])
+    result = fit_rates(series_rates(gated, used), [assay.laws for assay in assays], settings)
+    subjects = rated.series.set_index("series")
+    return _Fitted(result, stored_fits(rated.plates, subjects, "series", result, wells_fitted))
+
+
+def series_rates(gated: GatedBatch, used: pd.Series) -> pd.DataFrame:
+    """Known rates of the wells used that belong to a series, by (analysis_id, well), as `fit_rates` takes
+    them: each with the mean substrate over its window.
+    """
     wells = gated.wells.loc[
         used & (gated.wells["series"] >= 0), ["analysis_id", "well", "series", "plate", "substrate_um"]
     ]
-    joined = wells.merge(gated.rated.rates, on=["analysis_id", "well"], how="inner", validate="1:1")
+    joined_rates = wells.merge(gated.rated.rates, on=["analysis_id", "well"], how="inner", validate="1:1")
     frame = pd.DataFrame(
         {
-            "series": joined["series"],
-            "plate": joined["plate"],
-            "substrate_um": joined["mean_substrate_um"],
-            "nominal_substrate_um": joined["substrate_um"],
-            "v_um_per_s": joined["v0_um_per_s"],
-            "v_se_um_per_s": joined["v0_se_um_per_s"],
+            "series": joined_rates["series"],
+            "plate": joined_rates["plate"],
+            "substrate_um": joined_rates["mean_substrate_um"],
+            "nominal_substrate_um": joined_rates["substrate_um"],
+            "v_um_per_s": joined_rates["v0_um_per_s"],
+            "v_se_um_per_s": joined_rates["v0_se_um_per_s"],
         }
     )
-    return frame[frame["v_um_per_s"].notna()].reset_index(drop=True)
+    frame.index = pd.MultiIndex.from_frame(joined_rates[["analysis_id", "well"]])
+    return frame[frame["v_um_per_s"].notna()]
 
 
-def _stored(rated: RatedBatch, result: FitResult, wells_fitted: str) -> tuple[pd.DataFrame, pd.DataFrame]:
-    """Fits and estimates of one way of fitting, with the ids and names of their series."""
-    of_series = rated.series.set_index("series")
-    fits = result.fits.join(of_series[["series_id", "analysis_id"]], on="series")
-    fits = fits.assign(wells=wells_fitted, grid_id=None, lack_of_fit_p=np.nan, runs_p=np.nan)
-    fits["fit_id"] = [result_id("fit", row.series_id, row.law, wells_fitted) for row in rows(fits)]
-    constants = stored_constants(rated, result)
-    constants = constants.join(of_series[["series_id", "analysis_id", "assay", "lot"]], on="series")
-    constants = constants.merge(
-        fits[["series_id", "law", "fit_id"]], on=["series_id", "law"], how="left", validate="m:1"
-    )
-    constants = constants.assign(wells=wells_fitted, grid_id=None)
-    constants["estimate_id"] = [result_id("estimate", row.fit_id, row.constant) for row in rows(constants)]
-    return fits, constants
-
-
-def _series_rows(gated: GatedBatch, fits: pd.DataFrame, refusals: pd.Series) -> pd.DataFrame:
+def _series_rows(gated: GatedBatch, fitted: _Fitted) -> pd.DataFrame:
     """Series with counts of their wells, the law chosen for the clear wells, or why there is none."""
     series = gated.rated.series.set_index("series")
     wells = gated.wells[gated.wells["series"] >= 0]
@@ -125,13 +134,41 @@ def _series_rows(gated: GatedBatch, fits: pd.DataFrame, refusals: pd.Series) -> 
     series["level_count"] = clear.nunique().reindex(series.index, fill_value=0)
     series["lowest_substrate_um"] = clear.min().reindex(series.index)
     series["highest_substrate_um"] = clear.max().reindex(series.index)
-    chosen = fits[fits["chosen"] & (fits["wells"] == CLEAR)].set_index("series")["law"]
-    series["law"] = chosen.reindex(series.index).astype(object)
+    series["law"] = law_chosen(fitted.result).reindex(series.index)
+    refusals = fitted.result.refusals.set_index("series")["reason"]
     series["refusal"] = refusals.reindex(series.index).astype(object)
     return series.reset_index()
 
 
-def _assess_series(rated: RatedBatch, series: pd.DataFrame, estimates: pd.DataFrame) -> Assessment:
-    of_clear_wells = estimates[(estimates["wells"] == CLEAR) & estimates["chosen"]]
-    data = gate_input(rated, series.drop(columns="series"), of_clear_wells[ESTIMATES.column_names])
-    return assess("series", data, limits_by_recipe(rated.plates))
+def _assess(
+    phase: Phase,
+    gated: GatedBatch,
+    series: pd.DataFrame,
+    stored: StoredFits,
+    curves: WholeCurves | None = None,
+) -> Assessment:
+    data = gate_input(
+        gated.rated,
+        series=series.drop(columns="series"),
+        estimates=stored.estimates,
+        fits=stored.fits,
+        points=stored.points,
+        comparisons=None if curves is None else curves.comparisons,
+    )
+    return assess(phase, data, limits_by_recipe(gated.rated.plates))
+
+
+def _held_further(gated: GatedBatch, by_fit: Assessment) -> tuple[GatedBatch, bool]:
+    """The batch with what a first fit says of its wells, and whether any well's standing changed by it."""
+    further = without_consequences(by_fit.findings)
+    standing = worst_standing(gated.wells["standing"], well_standings(gated.wells, further))
+    changed = not standing.equals(gated.wells["standing"])
+    wells = gated.wells.assign(standing=standing)
+    findings = _together(gated.findings, further)
+    return GatedBatch(gated.rated, wells, findings, (*gated.runs, *by_fit.runs)), changed
+
+
+def _together(first: pd.DataFrame, second: pd.DataFrame) -> pd.DataFrame:
+    """Findings of two phases in one frame."""
+    parts = [part for part in (first, second) if len(part)]
+    return pd.concat(parts, ignore_index=True) if parts else FINDINGS.empty()

@@ -7,10 +7,11 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
+import numpy as np
 import pandas as pd
 
 from checks.assess import assess
-from checks.gates.gate import GateInput
+from checks.gates.gate import STANDARD_COLUMNS, GateInput, no_standards
 from checks.verdicts import well_standings, without_consequences
 from flows.stages.work import GatedBatch, PlateWork, RatedBatch
 
@@ -34,10 +35,8 @@ def gate_batch(rated: RatedBatch) -> GatedBatch:
     return GatedBatch(rated, wells, findings, assessment.runs)
 
 
-def gate_input(
-    rated: RatedBatch, series: pd.DataFrame | None = None, estimates: pd.DataFrame | None = None
-) -> GateInput:
-    """Frames of a batch as the gates want them, series and estimates only once there are any."""
+def gate_input(rated: RatedBatch, **fitted: pd.DataFrame | None) -> GateInput:
+    """Frames of a batch as the gates want them; those of what is fitted only once there are any."""
     analyses = pd.DataFrame(
         {
             "analysis_id": [work.analysis_id for work in rated.plates],
@@ -50,10 +49,27 @@ def gate_input(
         wells=rated.wells,
         readings=rated.reads,
         rates=rated.rates,
-        series=series,
-        estimates=estimates,
+        plate_reads=pd.DataFrame([_plate_read(work) for work in rated.plates]),
+        standards=_standards(rated.plates),
         assays={work.recipe.recipe_id: work.recipe.assay for work in rated.plates},
+        **fitted,
     )
+
+
+def _plate_read(work: PlateWork) -> dict[str, object]:
+    temperature_c = work.readings["temperature_c"].to_numpy(dtype=float)
+    reported = temperature_c[np.isfinite(temperature_c)]
+    return {
+        "analysis_id": work.analysis_id,
+        "temperature_low_c": reported.min(initial=np.inf) if reported.size else np.nan,
+        "temperature_high_c": reported.max(initial=-np.inf) if reported.size else np.nan,
+    }
+
+
+def _standards(plates: Sequence[PlateWork]) -> pd.DataFrame:
+    parts = [work.conversion.standards.assign(analysis_id=work.analysis_id) for work in plates]
+    stated = [part for part in parts if len(part)]
+    return pd.concat(stated, ignore_index=True)[list(STANDARD_COLUMNS)] if stated else no_standards()
 
 
 def limits_by_recipe(plates: Sequence[PlateWork]) -> dict[str, dict[str, dict[str, bool | int | float]]]:

@@ -1,7 +1,8 @@
 """What each lot comes to over its plate reads, after a batch has been loaded.
 
 The arithmetic is in models.statistics.lots; this stage chooses which estimates a lot's value rests on:
-those of clear series without a modulator, of the law that fits the lot best over all its plate reads.
+those of clear series without a modulator, of the law that fits the lot best over all its plate reads, and
+what clear grids say of the modulator. Whole curves count where a series has no usable initial rates.
 Where no series of a lot is clear, the held ones give a value that is marked held.
 """
 
@@ -15,14 +16,22 @@ import pandas as pd
 from flows.site.layout import Site
 from flows.warehouse.writer import loader
 from models.calibration.shared_error import add_shared_error, without_shared_error
-from models.identity import result_id
-from models.kinetics.laws import law
+from models.identity import known_text, result_id
+from models.kinetics.laws import LAWS, law
+from models.kinetics.progress.fitting import LAW as INTEGRATED_LAW
 from models.statistics.lots import LotValue, combine_plate_reads
 from models.tables import LOT_VALUE_SOURCES, LOT_VALUES
 
 # Vmax belongs to an enzyme level, not to a lot; where the enzyme's amount is known, a turnover stands for it.
 LEVEL_BOUND = "vmax"
 PER_ENZYME = ("kcat", "specific_activity")
+# The integrated law has the constants of the law that it integrates.
+SAME_CONSTANTS = {INTEGRATED_LAW: "michaelis_menten"}
+# What a grid says that no series can: the constants of its modulator.
+OF_MODULATOR = {"ki"} | (
+    {each.name for one in LAWS if one.fewest_modulator_levels for each in one.shape_constants}
+    - {each.name for one in LAWS if not one.fewest_modulator_levels for each in one.constants}
+)
 
 
 def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.DataFrame]:
@@ -31,9 +40,10 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
     Parameters
     ----------
     current
-        A row an estimate of the clear wells of an unmodulated series that is not superseded: columns
-        estimate_id, series_id, plate_read_id, assay, lot, role, law, chosen, constant, value, standard_error,
-        low, high, unit, assay_relative_error, series_standing, measured_at.
+        A row an estimate, not superseded, of the clear wells of a series without modulator or of a grid, or
+        of the whole curves of a series that has no other: columns estimate_id, series_id (or the grid's id),
+        modulator (None for a series), plate_read_id, assay, lot, role, law, chosen, constant, value,
+        standard_error, low, high, unit, assay_relative_error, series_standing, measured_at.
     pass_id
         The pass that these values are written by.
 
@@ -44,8 +54,12 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
     """
     values: list[dict[str, object]] = []
     sources: list[dict[str, str]] = []
-    for key, of_lot in current.groupby(["assay", "lot", "role"], sort=True):
-        assay, lot, role = (str(part) for part in key)
+    current = current.assign(law=current["law"].replace(SAME_CONSTANTS))
+    told = current[current["modulator"].isna() | current["constant"].isin(OF_MODULATOR)]
+    for _, of_lot in told.groupby(["assay", "lot", "role", "modulator"], dropna=False):
+        assay, lot, role, modulator = (
+            known_text(of_lot[name].iloc[0]) for name in ("assay", "lot", "role", "modulator")
+        )
         held = of_lot["series_standing"] != "clear"
         rest = of_lot[~held] if (~held).any() else of_lot
         fitted = rest[rest["law"] == _law_of_lot(rest)]
@@ -57,7 +71,9 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
             value = _combined(rows)
             estimate_ids = sorted(rows["estimate_id"])
             held_count = of_lot.loc[held, "series_id"].nunique()
-            lot_value_id = result_id("lot_value", assay, lot, role, constant, estimate_ids, held_count)
+            lot_value_id = result_id(
+                "lot_value", assay, lot, role, modulator, constant, estimate_ids, held_count
+            )
             values.append(
                 {
                     "lot_value_id": lot_value_id,
@@ -65,6 +81,7 @@ def lot_values(current: pd.DataFrame, pass_id: str) -> tuple[pd.DataFrame, pd.Da
                     "assay": assay,
                     "lot": lot,
                     "role": role,
+                    "modulator": modulator,
                     "constant": constant,
                     "value": value.value,
                     "standard_error": value.standard_error,
@@ -125,15 +142,17 @@ def _law_of_lot(rows: pd.DataFrame) -> str:
 
 
 _ESTIMATES_OF_LOTS = """
-    SELECT e.estimate_id, e.series_id, c.plate_read_id, e.assay, e.lot, s.role, e.law, e.constant,
+    SELECT e.estimate_id, coalesce(e.series_id, e.grid_id) AS series_id, g.modulator, c.plate_read_id,
+           e.assay, e.lot, coalesce(s.role, g.role) AS role, e.law, e.constant,
            e.chosen, e.value, e.standard_error, e.low, e.high, e.unit, e.assay_relative_error,
-           s.standing AS series_standing, c.measured_at
+           coalesce(s.standing, g.standing) AS series_standing, c.measured_at
     FROM estimates e
-    JOIN fits t USING (fit_id)
-    JOIN series s ON s.series_id = e.series_id
+    LEFT JOIN series s ON s.series_id = e.series_id
+    LEFT JOIN grids g ON g.grid_id = e.grid_id
     JOIN current_analyses c ON c.analysis_id = e.analysis_id
     SEMI JOIN wanted w ON w.assay = e.assay AND w.lot = e.lot
-    WHERE e.wells = 'clear' AND (s.modulator IS NULL OR coalesce(s.modulator_um, 0) = 0)
+    WHERE (e.wells = 'clear' OR (e.wells = 'curves' AND e.chosen))
+      AND (s.modulator IS NULL OR coalesce(s.modulator_um, 0) = 0)
     ORDER BY e.estimate_id
 """
 

@@ -12,7 +12,7 @@ import pandas as pd
 
 from flows.frames import rows
 from flows.stages.work import PlateWork, RatedBatch
-from models.identity import known, result_id
+from models.identity import known, known_text, result_id
 from models.kinetics.curves import CurveBatch
 from models.kinetics.rates import RateSettings, measure_rates
 from models.plates import well_position
@@ -40,11 +40,11 @@ def rate_batch(plates: Sequence[PlateWork]) -> RatedBatch:
     wells, series = _number_series(wells, plates)
     reads = pd.concat([_reads_of(work) for work in plates], ignore_index=True)
     rated = wells[wells["role"].isin(RATED_ROLES)].reset_index(drop=True)
-    batch, counts = _curves(rated, reads, plates)
+    batch, reads, counts = _curves(rated, reads, plates)
     laws = [plates[plate].recipe.assay.laws for plate in series["plate"]]
     measured = measure_rates(batch, laws, _rate_settings(rated, plates))
     rates = pd.concat([rated[["analysis_id", "well"]], measured.reset_index(drop=True), counts], axis=1)
-    return RatedBatch(tuple(plates), wells, reads, rates[RATES.column_names], series)
+    return RatedBatch(tuple(plates), wells, reads, rates[RATES.column_names], series, batch)
 
 
 def _wells_of(plate_number: int, work: PlateWork) -> pd.DataFrame:
@@ -81,7 +81,7 @@ def _number_series(wells: pd.DataFrame, plates: Sequence[PlateWork]) -> tuple[pd
             row.lot,
             known(row.enzyme_nm),
             known(row.enzyme_ng_per_ml),
-            row.modulator if isinstance(row.modulator, str) else None,
+            known_text(row.modulator),
             known(row.modulator_um),
         )
         for row in rows(series)
@@ -106,8 +106,8 @@ def _reads_of(work: PlateWork) -> pd.DataFrame:
 
 def _curves(
     rated: pd.DataFrame, reads: pd.DataFrame, plates: Sequence[PlateWork]
-) -> tuple[CurveBatch, pd.DataFrame]:
-    """Lay the reads out as one row a well, product where the read is usable."""
+) -> tuple[CurveBatch, pd.DataFrame, pd.DataFrame]:
+    """Lay the reads out as one row a well, product where the read is usable; the reads get it too."""
     row_of = pd.Series(np.arange(len(rated)), index=pd.MultiIndex.from_frame(rated[["analysis_id", "well"]]))
     row = row_of.reindex(pd.MultiIndex.from_frame(reads[["analysis_id", "well"]])).to_numpy()
     kept = ~np.isnan(row)
@@ -126,6 +126,8 @@ def _curves(
     for number, work in enumerate(plates):
         of_plate = plate == number
         turnover_um[of_plate] = work.conversion.turnover_um(list(rated["well"][of_plate]), signal[of_plate])
+    product_um = np.full(len(reads), np.nan)
+    product_um[kept] = turnover_um[row, column]
     substrate_um = rated["substrate_um"].to_numpy(dtype=float)
     consumable_um = np.array(
         [assays[p].consumable_um(s) if s > 0 else np.nan for p, s in zip(plate, substrate_um, strict=True)]
@@ -149,7 +151,7 @@ def _curves(
             "missing_count": np.bincount(row[state == "missing"], minlength=len(rated)),
         }
     )
-    return batch, counts
+    return batch, reads.assign(product_um=product_um), counts
 
 
 def _rate_settings(rated: pd.DataFrame, plates: Sequence[PlateWork]) -> RateSettings:

@@ -14,6 +14,7 @@ from checks.assess import GateRun
 from flows.site.recipes import Recipe
 from flows.stages.conversion import Conversion
 from models.identity import result_id
+from models.kinetics.curves import CurveBatch
 
 
 @dataclass(frozen=True)
@@ -53,11 +54,14 @@ class RatedBatch:
     wells
         Columns of the `wells` table without `standing`, and `plate` and `series` as numbers within the batch.
     reads
-        analysis_id, well, read_number, time_s, signal, state: every read, past the linear limit said so.
+        analysis_id, well, read_number, time_s, signal, state, product_um: every read, past the linear limit
+        said so; product_um is substrate turned over up to a constant, where the read is usable.
     rates
         Columns of the `rates` table, row for row with `wells` of a role that has a rate.
     series
         series_id, analysis_id, assay, lot, role, enzyme and modulator levels, `series` and `plate` numbers.
+    curves
+        Progress curves of the wells in `rates`, row for row.
     """
 
     plates: Sequence[PlateWork]
@@ -65,6 +69,7 @@ class RatedBatch:
     reads: pd.DataFrame
     rates: pd.DataFrame
     series: pd.DataFrame
+    curves: CurveBatch
 
 
 @dataclass(frozen=True)

@@ -5,6 +5,7 @@ Meanings of columns come from the tables they are taken from; what a view adds i
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 from flows.warehouse.view import View, columns, quoted, renamed, taken
@@ -26,7 +27,11 @@ from models.tables import (
 _MEASURED_AT = Column(
     "measured_at", "timestamp", "Start of the plate read, UTC; receipt of its export where unknown"
 )
-_SERIES_STANDING = renamed(taken(SERIES, "standing")[0], "series_standing")
+_SERIES_STANDING = replace(
+    taken(SERIES, "standing")[0],
+    name="series_standing",
+    meaning="Standing of the series or grid: clear, held (waits for a person) or void (cannot be used)",
+)
 
 CURRENT_ANALYSES = View(
     "current_analyses",
@@ -52,26 +57,31 @@ CURRENT_ANALYSES = View(
 
 CURRENT_ESTIMATES = View(
     "current_estimates",
-    "Every constant of the chosen rate laws in current results, with the clear wells and with all wells",
+    "Every constant of the chosen laws in current results, of series and of grids, by what they rest on",
     columns(
         taken(ESTIMATES, "assay", "lot", "constant", "value", "standard_error", "low", "high", "unit"),
         taken(ESTIMATES, "law", "wells"),
-        taken(SERIES, "role", "enzyme_nm", "enzyme_ng_per_ml", "modulator", "modulator_um"),
+        taken(SERIES, "role", "enzyme_nm", "enzyme_ng_per_ml", "modulator"),
+        taken(SERIES, "modulator_um")[0].optional("Modulator concentration; NULL for none or a whole grid"),
         _SERIES_STANDING,
         taken(FITS, "trusted"),
         taken(CURRENT_ANALYSES, "plate_id", "measured_at", "plate_read_id"),
-        taken(ESTIMATES, "analysis_id", "series_id", "fit_id", "estimate_id"),
+        taken(ESTIMATES, "analysis_id", "series_id", "grid_id", "fit_id", "estimate_id"),
     ),
     """
     SELECT e.assay, e.lot, e.constant, e.value, e.standard_error, e.low, e.high, e.unit,
            e.law, e.wells,
-           s.role, s.enzyme_nm, s.enzyme_ng_per_ml, s.modulator, s.modulator_um,
-           s.standing AS series_standing, t.trusted,
+           coalesce(s.role, g.role) AS role,
+           coalesce(s.enzyme_nm, g.enzyme_nm) AS enzyme_nm,
+           coalesce(s.enzyme_ng_per_ml, g.enzyme_ng_per_ml) AS enzyme_ng_per_ml,
+           coalesce(s.modulator, g.modulator) AS modulator, s.modulator_um,
+           coalesce(s.standing, g.standing) AS series_standing, t.trusted,
            c.plate_id, c.measured_at, c.plate_read_id,
-           e.analysis_id, e.series_id, e.fit_id, e.estimate_id
+           e.analysis_id, e.series_id, e.grid_id, e.fit_id, e.estimate_id
     FROM estimates e
     JOIN current_analyses c USING (analysis_id)
-    JOIN series s USING (series_id)
+    LEFT JOIN series s USING (series_id)
+    LEFT JOIN grids g USING (grid_id)
     JOIN fits t USING (fit_id)
     WHERE e.chosen
     """,
@@ -143,14 +153,15 @@ LOT_LATEST = View(
     "lot_latest",
     "Each lot's constants as they stand after the latest pass that saw the lot",
     columns(
-        taken(LOT_VALUES, "lot", "assay", "role", "constant", "value", "standard_error", "low", "high"),
+        taken(LOT_VALUES, "lot", "assay", "role", "modulator", "constant"),
+        taken(LOT_VALUES, "value", "standard_error", "low", "high"),
         taken(LOT_VALUES, "unit", "between_plate_sd", "plate_read_count", "series_count"),
         taken(
             LOT_VALUES, "held_series_count", "measured_at", "standing", "reason", "lot_value_id", "pass_id"
         ),
     ),
     f"""
-    SELECT lot, assay, role, constant, value, standard_error, low, high,
+    SELECT lot, assay, role, modulator, constant, value, standard_error, low, high,
            unit, between_plate_sd, plate_read_count, series_count,
            held_series_count, measured_at, standing, reason, lot_value_id, pass_id
     FROM ({_CURRENT_LOT_VALUES})
@@ -168,13 +179,13 @@ LOT_HISTORY = View(
         renamed(taken(LOT_VALUES, "value")[0], "estimate"),
         taken(LOT_VALUES, "low", "high", "unit"),
         renamed(taken(LOT_VALUES, "plate_read_count")[0], "plate_reads"),
-        taken(LOT_VALUES, "standing"),
+        taken(LOT_VALUES, "standing", "modulator"),
     ),
     f"""
     SELECT lot, assay, measured_at AS date, constant,
-           value AS estimate, low, high, unit, plate_read_count AS plate_reads, standing
+           value AS estimate, low, high, unit, plate_read_count AS plate_reads, standing, modulator
     FROM ({_CURRENT_LOT_VALUES})
-    ORDER BY lot, assay, constant, measured_at, passed_at
+    ORDER BY lot, assay, modulator NULLS FIRST, constant, measured_at, passed_at
     """,
 )
 
@@ -201,7 +212,7 @@ REFERENCE_CHART = View(
            abs(value - lag(value) OVER in_order) AS moving_range,
            series_standing, law, plate_read_id, estimate_id
     FROM current_estimates
-    WHERE role = 'reference' AND wells = 'clear'
+    WHERE role = 'reference' AND wells = 'clear' AND series_id IS NOT NULL
     WINDOW in_order AS (
       PARTITION BY assay, lot, constant, unit, enzyme_nm, enzyme_ng_per_ml, modulator, modulator_um
       ORDER BY measured_at, plate_read_id, series_id
@@ -214,7 +225,7 @@ ESTIMATE_LINEAGE = View(
     "Every current estimate with the ids of all it came from, down to the export's bytes",
     columns(
         taken(ESTIMATES, "estimate_id", "assay", "lot", "constant", "value", "unit"),
-        taken(ESTIMATES, "fit_id", "law", "wells", "series_id", "analysis_id"),
+        taken(ESTIMATES, "fit_id", "law", "wells", "series_id", "grid_id", "analysis_id"),
         taken(ANALYSES, "revision", "recipe_id"),
         taken(RECIPES, "code_version", "profile"),
         taken(ANALYSES, "map_id"),
@@ -226,7 +237,7 @@ ESTIMATE_LINEAGE = View(
     ),
     """
     SELECT e.estimate_id, e.assay, e.lot, e.constant, e.value, e.unit,
-           e.fit_id, e.law, e.wells, e.series_id, e.analysis_id,
+           e.fit_id, e.law, e.wells, e.series_id, e.grid_id, e.analysis_id,
            c.revision, c.recipe_id, r.code_version, r.profile, c.map_id,
            c.plate_read_id, c.plate_id, c.place_in_export, c.export_id,
            f.file_name AS export_file_name, f.byte_count AS export_byte_count,

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
+from itertools import product
 
 import numpy as np
 import pandas as pd
@@ -29,7 +30,7 @@ from models.kinetics.replicate_weights import (
     fit_with_weights,
     plate_scatter,
 )
-from models.kinetics.robust import Loss
+from models.kinetics.robust import LOSSES, Loss
 from models.kinetics.selection import aicc, choose_law, evidence_weights
 from models.statistics.sums import sum_rows
 
@@ -83,10 +84,17 @@ class FitSettings:
     Attributes
     ----------
     loss
-        `none` for weighted least squares, `huber` or `tukey` to give rates far from the fit less weight.
+        `none` for weighted least squares, `huber` or `tukey` to give rates far from the fit less weight; for
+        all series, or one a series, by number.
     """
 
-    loss: Loss = "none"
+    loss: Loss | Sequence[Loss] = "none"
+
+    def loss_of(self, series: Integers) -> NDArray[np.object_]:
+        """Loss of some series, by number."""
+        if isinstance(self.loss, str):
+            return np.full(series.size, self.loss, dtype=object)
+        return np.array(self.loss, dtype=object)[series]
 
 
 @dataclass(frozen=True)
@@ -177,14 +185,15 @@ def fit_rates(
                 reasons.setdefault(number, {})[name] = refusal
     scatter = _scatter_by_plate(rows, eligible)
     candidates: dict[int, dict[str, _Candidate]] = {}
-    points: dict[str, tuple[Packed, FitPoints]] = {}
-    for name in names:
+    points: list[tuple[str, Packed, FitPoints]] = []
+    for name, loss in product(names, LOSSES):
         series = np.array(eligible[name], dtype=np.intp)
+        series = series[settings.loss_of(series) == loss]
         if series.size == 0:
             continue
         packed = rows.packed(series)
-        fitted, failed, points_of = _fit_candidates(law(name), packed, rows, scatter, settings)
-        points[name] = packed, points_of
+        fitted, failed, points_of = _fit_candidates(law(name), packed, rows, scatter, loss)
+        points.append((name, packed, points_of))
         for number, candidate in fitted.items():
             candidates.setdefault(number, {})[name] = candidate
         for number, refusal in failed.items():
@@ -218,10 +227,10 @@ def _scatter_by_plate(rows: RateRows, eligible: Mapping[str, list[int]]) -> Scat
 
 
 def _fit_candidates(
-    each: RateLaw, packed: Packed, rows: RateRows, scatter: Scatter, settings: FitSettings
+    each: RateLaw, packed: Packed, rows: RateRows, scatter: Scatter, loss: Loss
 ) -> tuple[dict[int, _Candidate], dict[int, Refusal], FitPoints]:
     of_plate = scatter.select(rows.plate_of(packed.series))
-    weighted = fit_with_weights(each, packed, of_plate, loss=settings.loss)
+    weighted = fit_with_weights(each, packed, of_plate, loss=loss)
     fit = weighted.fit
     low, high = profile_intervals(fit, packed.conditions, packed.rate, weighted.weights)
     criterion = _aicc(packed, weighted)
@@ -307,12 +316,12 @@ class _Points:
 
     index: pd.Index
     rows: RateRows
-    by_law: Mapping[str, tuple[Packed, FitPoints]]
+    of_fits: Sequence[tuple[str, Packed, FitPoints]]
 
     def of_chosen(self, chosen: Mapping[int, str]) -> pd.DataFrame:
         """Points of the law chosen for each series, in the order of the frame."""
         parts = []
-        for name, (packed, points) in self.by_law.items():
+        for name, packed, points in self.of_fits:
             mine = np.array([chosen.get(int(number)) == name for number in packed.series], dtype=bool)
             place, column = np.nonzero(packed.present & mine)
             row = packed.row[place, column]

@@ -23,6 +23,8 @@ INHIBITION_LAWS = (
     "mixed_inhibition",
 )
 ACTIVATION_LAWS = ("essential_activation", "partial_activation")
+WITHOUT_EFFECT = "michaelis_menten"
+"""A candidate beside the laws over a modulator: that it does nothing."""
 Mode = Literal["competitive", "uncompetitive", "noncompetitive"]
 
 

@@ -18,6 +18,7 @@ from models.calibration.path_length import (
     WATER_PER_CM_RELATIVE_ERROR,
     path_from_volume_cm,
 )
+from models.kinetics.robust import Loss
 from models.records.record import Record
 
 if TYPE_CHECKING:
@@ -255,6 +256,40 @@ class Conditions(Record):
     """Further components, such as a coupling enzyme with its activity."""
 
 
+class WholeCurves(Record):
+    """The integrated rate law fitted to whole progress curves, beside the initial rates."""
+
+    fit: bool = True
+    """Whether it is fitted."""
+    product_inhibition: bool = False
+    """Whether the product inhibits competitively, with a constant that is fitted."""
+    enzyme_loss: bool = False
+    """Whether the enzyme loses activity first-order, with a rate constant that is fitted."""
+    dead_time_s: float = Field(default=0.0, ge=0)
+    """Time from the start of the reaction to the first read, s, where it is known."""
+
+
+class Inhibition(Record):
+    """What turns the IC50 or the apparent Ki of a dose response into Ki (Cheng and Prusoff 1973)."""
+
+    mode: Literal["competitive", "uncompetitive", "noncompetitive"]
+    """How the inhibitor binds."""
+    km_um: float | None = Field(default=None, gt=0)
+    """Michaelis constant, umol/L; left out, that of the same lot on the same plate is used."""
+    km_standard_error_um: float | None = Field(default=None, gt=0)
+    """Its standard error, umol/L."""
+    km_source: str | None = Field(default=None, min_length=3)
+    """Where it comes from; needed with it."""
+
+    @model_validator(mode="after")
+    def _value_with_source(self) -> Inhibition:
+        if (self.km_um is None) != (self.km_source is None):
+            raise ValueError("km_um and km_source go together")
+        if self.km_standard_error_um is not None and self.km_um is None:
+            raise ValueError("km_standard_error_um needs km_um")
+        return self
+
+
 class ChartBase(Record):
     """Where a constant of a reference lot has always lain: the centre and width of its control chart."""
 
@@ -284,7 +319,15 @@ class Assay(Record):
     plates: tuple[str, ...] = ()
     """Patterns of plate ids that belong to this assay, with * and ?; a plate map may name it instead."""
     laws: tuple[str, ...] = ("michaelis_menten",)
-    """Candidate rate laws, the simplest first."""
+    """Candidate rate laws of a series, the simplest first."""
+    modulator_laws: tuple[str, ...] = ()
+    """Candidate laws of a lot's wells with all levels of an inhibitor or activator together."""
+    loss: Loss = "none"
+    """Weight of rates far from a fit: none for least squares as they are, huber or tukey for less."""
+    whole_curves: WholeCurves = WholeCurves()
+    """How whole progress curves are fitted beside the initial rates."""
+    inhibition: Inhibition | None = None
+    """What turns the IC50 of a dose response into Ki."""
     molar_mass_g_per_mol: float | None = Field(default=None, gt=0)
     """Molar mass of the enzyme (per active site), g/mol: gives kcat where enzyme is given by mass."""
     product_per_substrate: float = Field(default=1.0, gt=0)

@@ -13,6 +13,7 @@ LOT_VALUES = Table(
         keys.ASSAY,
         keys.LOT,
         Column("role", "text", "sample or reference"),
+        keys.MODULATOR.optional("The modulator that the constant is about; NULL for one without"),
         keys.CONSTANT,
         keys.VALUE.optional("The constant, in the unit of its row; NULL where nothing clear could be fitted"),
         keys.STANDARD_ERROR,

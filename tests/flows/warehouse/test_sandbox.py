@@ -174,7 +174,7 @@ def test_the_warehouse_is_unharmed_after_all_that(site):
         ("WITH a AS (SELECT 1 AS x) SELECT * FROM a;", 1),
         ("-- a note\nSELECT count(*) FROM reading", 1),
         ("VALUES (1), (2)", 2),
-        ("DESCRIBE lot_latest", 18),
+        ("DESCRIBE lot_latest", 19),
         ("SELECT * FROM lot_latest WHERE false", 0),
         ("SELECT lot, median(value) FROM current_estimates GROUP BY ALL", 2),
     ],

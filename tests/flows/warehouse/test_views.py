@@ -84,7 +84,7 @@ def test_views_answer_over_an_empty_warehouse(tmp_path):
 def test_lot_history_has_the_columns_that_were_agreed(made):
     view = next(each for each in all_views(made.site) if each.name == "lot_history")
     names = ["lot", "assay", "date", "constant", "estimate", "low", "high", "unit", "plate_reads", "standing"]
-    assert [column.name for column in view.columns] == names
+    assert [column.name for column in view.columns] == [*names, "modulator"]
 
 
 def test_held_wells_say_what_holds_them(connection):
