@@ -56,7 +56,7 @@ FEWEST_LEVELS = 3
 
 
 def metrics(data: GateInput) -> pd.DataFrame:
-    """Worst error of a level, and bend, of the standards of every plate read with enzyme and a curve of its own."""
+    """Worst error of a level, and bend, of standards of plate reads with enzyme and a curve of their own."""
     own = {
         recipe
         for recipe, assay in data.assays.items()
