@@ -6,6 +6,7 @@ Knows neither wells nor laws: it is given curves at one substrate level, and how
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -14,14 +15,18 @@ from scipy.stats import norm
 from scipy.stats import t as t_distribution
 
 Floats = NDArray[np.float64]
-Integers = NDArray[np.int_]
+Integers = NDArray[np.integer[Any]]
 
 FEWEST_READS = 5
 """Reads of a curve within the common range below which its bend says nothing."""
 
 _DEGREE = 3
 _ROUNDS = 25
-_SETTLED = 1e-10
+_HALVINGS = 12
+_SETTLED = 1e-8
+_STEP = 1e-4
+_WORST_CONDITION = 1e13
+_FEWEST_CLUSTERS = 3
 _LARGEST_LOSS = 20.0
 """Largest loss tried: exp(-20) is nothing left at the last read."""
 _TELLING_SLOPE = 5.0
@@ -176,7 +181,7 @@ def _slopes(curve: Integers, time_s: Floats, product_um: Floats, count: int) -> 
 
 
 def _fit(curve: Integers, time_s: Floats, product_um: Floats, slope: Floats) -> Inactivation | None:
-    """Gauss-Newton in initial rates, shape of F and loss; starts of curves are linear and fitted along."""
+    """Gauss-Newton in initial rates, shape of F and loss; the start of each curve is taken out."""
     count = slope.size
     longest, highest = float(time_s.max()), float(np.max(slope[curve] * time_s))
     one_hot = np.equal(curve[:, None], np.arange(count)).astype(float)
@@ -186,65 +191,56 @@ def _fit(curve: Integers, time_s: Floats, product_um: Floats, slope: Floats) -> 
     powers = np.arange(2, _DEGREE + 1)
     if curve.size <= 2 * count + _DEGREE + 1:
         return None
+    members = np.bincount(curve).astype(np.float64)
 
-    def model(rate: Floats, shape: Floats, loss: float) -> tuple[Floats, Floats]:
-        """Product less start, and its derivatives by rates, shape, loss and starts."""
+    def centred(values: Floats) -> Floats:
+        """Less the mean of each curve: its start is its own."""
+        less: Floats = values - ((one_hot.T @ values).T / members).T[curve]
+        return less
+
+    def residuals(rate: Floats, shape: Floats, loss: float) -> Floats:
+        y = rate[curve] * t * exprel(-loss * t)
+        return centred(p - y - (shape * y[:, None] ** powers).sum(axis=1))
+
+    def derivatives(rate: Floats, shape: Floats, loss: float) -> Floats:
+        """Of the product by initial rates, shape and loss."""
         effective = t * exprel(-loss * t)
         y = rate[curve] * effective
         of_y = 1.0 + (powers * shape * y[:, None] ** (powers - 1)).sum(axis=1)
-        value = y + (shape * y[:, None] ** powers).sum(axis=1)
-        step = 1e-4
-        by_loss = t * (exprel(-(loss + step) * t) - exprel(-(loss - step) * t)) / (2 * step)
-        return value, np.column_stack(
-            [
-                one_hot * (of_y * effective)[:, None],
-                y[:, None] ** powers,
-                of_y * rate[curve] * by_loss,
-                one_hot,
-            ]
-        )
+        by_loss = t * (exprel(-(loss + _STEP) * t) - exprel(-(loss - _STEP) * t)) / (2.0 * _STEP)
+        columns = (one_hot * (of_y * effective)[:, None], y[:, None] ** powers, of_y * rate[curve] * by_loss)
+        return centred(np.column_stack(columns))
 
-    def residuals(rate: Floats, shape: Floats, loss: float) -> Floats:
-        value, _ = model(rate, shape, loss)
-        left = p - value
-        centred: Floats = left - (left @ one_hot / np.bincount(curve))[curve]
-        return centred
-
-    best = float(np.sum(residuals(rate, shape, loss) ** 2))
+    left = residuals(rate, shape, loss)
+    best = float(left @ left)
     for _ in range(_ROUNDS):
-        _, slopes = model(rate, shape, loss)
-        step = np.linalg.lstsq(slopes, residuals(rate, shape, loss), rcond=1e-12)[0]
-        for halving in range(12):
+        slopes = derivatives(rate, shape, loss)
+        step = _solved(slopes.T @ slopes, slopes.T @ left)
+        if step is None:
+            return None
+        for halving in range(_HALVINGS):
             part = step * 0.5**halving
-            moved = (rate + part[:count], shape + part[count : count + powers.size], loss + part[-count - 1])
-            if abs(moved[2]) > _LARGEST_LOSS:
-                continue
-            total = float(np.sum(residuals(*moved) ** 2))
-            if total <= best:
+            moved = (rate + part[:count], shape + part[count:-1], loss + float(part[-1]))
+            if abs(moved[2]) <= _LARGEST_LOSS and float(np.sum(residuals(*moved) ** 2)) <= best:
                 break
         else:
             break
-        gained, best = best - total, total
-        rate, shape, loss = moved[0], moved[1], float(moved[2])
-        if gained <= _SETTLED * best:
+        rate, shape, loss = moved
+        left, before = residuals(*moved), best
+        best = float(left @ left)
+        if before - best <= _SETTLED * before:
             break
-    _, slopes = model(rate, shape, loss)
-    left = residuals(rate, shape, loss)
-    degrees = float(curve.size - slopes.shape[1])
-    information = slopes.T @ slopes
-    place = count + powers.size
-    if np.linalg.matrix_rank(slopes) < slopes.shape[1]:
+    slopes = derivatives(rate, shape, loss)
+    degrees = float(curve.size - count - slopes.shape[1])
+    of_loss = _solved(slopes.T @ slopes, np.eye(slopes.shape[1])[-1])
+    if of_loss is None or best <= 0.0:
         return None
-    inverse = np.linalg.inv(information)
-    error = float(np.sqrt(best / degrees * inverse[place, place]))
-    if count > 3:
-        scores = (slopes @ inverse[:, place]) * left
-        by_curve = np.bincount(curve, scores)
+    error = float(np.sqrt(best / degrees * of_loss[-1]))
+    if count > _FEWEST_CLUSTERS:
+        by_curve = np.bincount(curve, (slopes @ of_loss) * left)
         clustered = float(np.sqrt(np.sum(by_curve**2) * count / (count - 1.0)))
         if clustered > error:
             error, degrees = clustered, count - 2.0
-    if error <= 0.0:
-        return None
     return Inactivation(
         loss / longest,
         error / longest,
@@ -253,3 +249,15 @@ def _fit(curve: Integers, time_s: Floats, product_um: Floats, slope: Floats) -> 
         count,
         curve.size,
     )
+
+
+def _solved(matrix: Floats, right: Floats) -> Floats | None:
+    """Solution of a symmetric system, None where it has none to speak of."""
+    scale = np.sqrt(np.diag(matrix))
+    if np.any(scale <= 0.0) or not np.all(np.isfinite(matrix)):
+        return None
+    scaled = matrix / np.outer(scale, scale)
+    if np.linalg.cond(scaled) > _WORST_CONDITION:
+        return None
+    solution: Floats = np.linalg.solve(scaled, right / scale) / scale
+    return solution
