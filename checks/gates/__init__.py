@@ -4,12 +4,25 @@ A new gate is a new module and one line here. Importing this package does not im
 """
 
 from checks.gates import (
+    below_detection,
     blank_drift,
+    control_window,
     detector_range,
+    enzyme_linearity,
+    fit_misfit,
     initial_slope_nonlinear,
+    initial_vs_full_curve,
+    low_end_not_covered,
+    outlier_in_series,
+    plate_position,
     read_schedule,
+    reference_off_chart,
+    replicate_scatter,
     saturation_not_reached,
+    standard_curve,
+    steady_state_valid,
     substrate_depletion,
+    temperature_band,
 )
 from checks.gates.gate import Gate, GateInput, Limits, Measure, Setting
 from checks.gates.limits import resolve
@@ -19,10 +32,23 @@ GATES: dict[str, Gate] = {
     for module in (
         detector_range,
         read_schedule,
+        temperature_band,
+        standard_curve,
         substrate_depletion,
         initial_slope_nonlinear,
         blank_drift,
+        below_detection,
+        control_window,
+        outlier_in_series,
         saturation_not_reached,
+        low_end_not_covered,
+        replicate_scatter,
+        fit_misfit,
+        initial_vs_full_curve,
+        steady_state_valid,
+        enzyme_linearity,
+        plate_position,
+        reference_off_chart,
     )
 }
 
