@@ -5,13 +5,14 @@ from __future__ import annotations
 import sys
 
 from tests.published.calibration_values import calibration_agreements
+from tests.published.progress_curves import progress_agreements
 from tests.published.published_laws import law_agreements
 from tests.published.published_values import agreements
 
 
 def main() -> int:
     """Print the table; 0 where all values agree on the digits that they carry."""
-    rows = [*agreements(), *law_agreements(), *calibration_agreements()]
+    rows = [*agreements(), *law_agreements(), *progress_agreements(), *calibration_agreements()]
     print(f"{'data':<27}{'quantity':<28}{'published':>14}{'found here':>14}{'digits':>8}{'needed':>8}")
     source = ""
     for row in rows:

@@ -86,8 +86,8 @@ def _direct(
 ) -> Floats:
     """Logarithm of one end by steps that keep all else at its best, NaN where they do not get there, (K,).
 
-    On linearised curves the least sum of squares for a step a of the constant is q + (a - s)^2 / C, with C its
-    variance, s its unrestricted step and q the least of all; the step aims where that is the height sought.
+    On linearised curves the least sum of squares for a step a of the constant is q + (a - s)^2 / C, with C
+    its variance, s its unrestricted step and q the least of all; the step aims where that is what is sought.
     """
     end = np.full(target.shape, np.nan)
     state = State(found.state.log_constants.copy(), found.state.dispensed.copy(), found.state.drift.copy())
