@@ -77,6 +77,18 @@ CONSEQUENCES: tuple[Consequence, ...] = (
     ),
     Consequence("substrate_depletion", "none", "blank_drift", "not_assessed", "no rate is told once"),
     Consequence("initial_slope_nonlinear", "none", "blank_drift", "not_assessed", "no rate is told once"),
+    Consequence("substrate_depletion", "none", "below_detection", "not_assessed", "no rate is told once"),
+    Consequence("blank_drift", "none", "below_detection", "not_assessed", "no blank is told once"),
+    *(
+        Consequence("saturation_not_reached", "none", gate, "not_assessed", "no fit is told once")
+        for gate in (
+            "low_end_not_covered",
+            "replicate_scatter",
+            "fit_misfit",
+            "initial_vs_full_curve",
+            "steady_state_valid",
+        )
+    ),
 )
 """In order: a finding that is itself a consequence is not taken for a cause."""
 

@@ -147,7 +147,7 @@ class Reads:
         return found.to_numpy(dtype=float, na_value=absent)
 
 
-PLATE_READ_COLUMNS = ("analysis_id", "temperature_low_c", "temperature_high_c")
+PLATE_READ_COLUMNS = ("analysis_id", "plate_format", "temperature_low_c", "temperature_high_c")
 STANDARD_COLUMNS = ("analysis_id", "well", "product_um", "signal", "back_calculated_um")
 
 
@@ -183,7 +183,7 @@ class GateInput:
     comparisons
         COMPARISONS; None before the final fit.
     plate_reads
-        analysis_id, temperature_low_c, temperature_high_c (NaN where not reported).
+        analysis_id, plate_format, temperature_low_c, temperature_high_c (NaN where not reported).
     standards
         analysis_id, well, product_um (known), signal (mean over the reads) and back_calculated_um of each
         standard that made a plate's own standard curve; no row for other plates.

@@ -135,8 +135,12 @@ def _curve(
             f"its standard curve cannot be used: {curve.reason}",
             remedy="mend the standards in the plate map, or the assay's [standard_curve]",
         )
-    columns = {"product_um": product_um, "signal": signal, "back_calculated_um": curve.to_product(signal)[0]}
-    return curve, pd.DataFrame({"well": used["well"].to_numpy(dtype=object), **columns})
+    # The curve keeps its standards in this order.
+    order = np.lexsort((signal, product_um))
+    columns = {"product_um": product_um[order], "signal": signal[order]}
+    back_um = curve.back_calculated_um() if stated.points_from == "plate" else np.empty(0)
+    well = used["well"].to_numpy(dtype=object)[order]
+    return curve, pd.DataFrame({"well": well, **columns, "back_calculated_um": back_um})
 
 
 def _by_water_band(absorption: Absorption, band: WaterBand, readings: pd.DataFrame) -> dict[str, float]:

@@ -14,6 +14,7 @@ from checks.assess import assess
 from checks.gates.gate import STANDARD_COLUMNS, GateInput, no_standards
 from checks.verdicts import well_standings, without_consequences
 from flows.stages.work import GatedBatch, PlateWork, RatedBatch
+from models.plates import smallest_format, well_position
 
 
 def gate_batch(rated: RatedBatch) -> GatedBatch:
@@ -59,8 +60,10 @@ def gate_input(rated: RatedBatch, **fitted: pd.DataFrame | None) -> GateInput:
 def _plate_read(work: PlateWork) -> dict[str, object]:
     temperature_c = work.readings["temperature_c"].to_numpy(dtype=float)
     reported = temperature_c[np.isfinite(temperature_c)]
+    positions = [well_position(well) for well in {*work.readings["well"], *work.wells["well"]}]
     return {
         "analysis_id": work.analysis_id,
+        "plate_format": smallest_format(positions).well_count,
         "temperature_low_c": reported.min(initial=np.inf) if reported.size else np.nan,
         "temperature_high_c": reported.max(initial=-np.inf) if reported.size else np.nan,
     }

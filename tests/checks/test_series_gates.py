@@ -10,6 +10,7 @@ import pytest
 
 from checks.assess import assess
 from checks.gates import GateInput, resolve_limits
+from checks.gates.saturation_not_reached import GATE
 from tests.checks.batches import clean_batch, clean_series, with_estimate
 
 NAN = float("nan")
@@ -17,7 +18,7 @@ NAN = float("nan")
 
 def findings_of(data: GateInput, **settings: bool | float) -> pd.DataFrame:
     limits = resolve_limits({"saturation_not_reached": settings}, {})
-    return assess("series", data, {"recipe-1": limits}).findings
+    return assess("series", data, {"recipe-1": limits}, {GATE.name: GATE}).findings
 
 
 @pytest.mark.parametrize(
