@@ -12,14 +12,14 @@ weight. Held where the one-sided p value of k > 0 is at most limit and at least 
 lost by the last read. Curves are product less the matching blank's slope, up to 40 % conversion.
 
 What it leaves alone, and why: a lot with one enzyme level (whatever bends its curves, one level cannot tell
-dying from running dry) is not assessed. A lag makes k negative and is no loss. Without much difference
-between the levels the error of k is large and nothing is held.
+dying from running dry) is not assessed. A lag or burst common to all curves is fitted beside the loss where
+the curves show one. Without much difference between the levels the error of k is large and nothing is held.
 
 Source: Selwyn 1965, Biochim. Biophys. Acta 105, 193-195 (doi:10.1016/S0926-6593(65)80190-4, the DOI from
 memory).
 
-Default: p 0.01 (common practice, no source); a loss below 5 % of the activity over the whole read moves
-rates from its first part by less than their usual error.
+Default: p 0.01 (common practice, no source); a loss below 10 % of the activity over the whole read moves
+rates from its first half by less than 5 %.
 """
 
 from __future__ import annotations
@@ -161,10 +161,10 @@ GATE = Gate(
         ),
         Setting(
             "least_loss",
-            0.05,
+            0.10,
             "1",
             "Share of the activity lost by the last read below which a loss is left alone",
-            "moves rates from the first part of the read by less than their usual error, no source",
+            "moves rates from the first half of the read by less than 5 %, no source",
             low=0.0,
             high=1.0,
         ),

@@ -27,6 +27,15 @@ _SETTLED = 1e-8
 _STEP = 1e-4
 _WORST_CONDITION = 1e13
 _FEWEST_CLUSTERS = 3
+_POWERS = np.arange(2, _DEGREE + 1)
+_SPEEDS = (4.0, 10.0, 25.0, 60.0)
+"""Rate constants of a lag or burst to start from, over the longest time."""
+_SLOWEST, _FASTEST = 3.0, 200.0
+"""A slower transient is a loss or a gain, a faster one is over before the second read."""
+_LAG, _BURST = -0.9, 0.5
+"""Sizes of a transient to start from: nearly no activity at first, or half as much again."""
+_PLAIN_TRANSIENT = 20.0
+"""F of a transient, with one degree of freedom, below which there is none: p of about 1e-5."""
 _LARGEST_LOSS = 20.0
 """Largest loss tried: exp(-20) is nothing left at the last read."""
 _TELLING_SLOPE = 5.0
@@ -74,6 +83,10 @@ def selwyn_test(
     tested is whether they bend alike at equal E t, not whether rates are in proportion to enzyme. k = 0 is
     Selwyn's superposition. Reads past the E t that two enzyme levels reach, or past `most_product_um`, say
     nothing about it and are left out.
+
+    A lag of a coupling enzyme, or a burst, also parts curves at equal E t: where the residuals plainly ask
+    for it, an activity 1 + A exp(-q t) common to all curves is fitted beside the loss. Transients slower than
+    a third of the read cannot be told from a loss or a gain.
 
     The standard error is the larger of two: from the noise of the reads, and, with more than three curves,
     from how the curves differ among themselves (clustered, as Liang and Zeger 1986,
@@ -181,73 +194,158 @@ def _slopes(curve: Integers, time_s: Floats, product_um: Floats, count: int) -> 
 
 
 def _fit(curve: Integers, time_s: Floats, product_um: Floats, slope: Floats) -> Inactivation | None:
-    """Gauss-Newton in initial rates, shape of F and loss; the start of each curve is taken out."""
-    count = slope.size
+    """Fit all curves without a transient, and again with one where the residuals ask for it."""
     longest, highest = float(time_s.max()), float(np.max(slope[curve] * time_s))
-    one_hot = np.equal(curve[:, None], np.arange(count)).astype(float)
-    t, p = time_s / longest, product_um / highest
-    rate = slope * longest / highest
-    shape, loss = np.zeros(_DEGREE - 1), 0.0
-    powers = np.arange(2, _DEGREE + 1)
-    if curve.size <= 2 * count + _DEGREE + 1:
+    curves = _Curves(
+        curve,
+        np.equal(curve[:, None], np.arange(slope.size)).astype(float),
+        np.bincount(curve).astype(np.float64),
+        time_s / longest,
+        product_um / highest,
+    )
+    if curve.size <= 2 * slope.size + _DEGREE + 3:
         return None
-    members = np.bincount(curve).astype(np.float64)
+    start = np.concatenate([slope * longest / highest, np.zeros(_DEGREE - 1), [0.0]])
+    fitted = _least_squares(curves, start)
+    if fitted is None:
+        return None
+    if _asks_for_transient(curves, fitted):
+        fits = [
+            each
+            for speed in _SPEEDS
+            for size in (_LAG, _BURST)
+            if (each := _least_squares(curves, np.append(fitted, [size, np.log(speed)]))) is not None
+        ]
+        fitted = min([fitted, *fits], key=lambda each: float(np.sum(curves.residuals(each) ** 2)))
+    return _result(curves, fitted, longest)
 
-    def centred(values: Floats) -> Floats:
+
+@dataclass(frozen=True, eq=False)
+class _Curves:
+    """Reads of all curves, time and product over their largest values; `one_hot` is (reads, curves)."""
+
+    curve: Integers
+    one_hot: Floats
+    members: Floats
+    time: Floats
+    product: Floats
+
+    @property
+    def count(self) -> int:
+        return self.members.size
+
+    def centred(self, values: Floats) -> Floats:
         """Less the mean of each curve: its start is its own."""
-        less: Floats = values - ((one_hot.T @ values).T / members).T[curve]
+        less: Floats = values - ((self.one_hot.T @ values).T / self.members).T[self.curve]
         return less
 
-    def residuals(rate: Floats, shape: Floats, loss: float) -> Floats:
-        y = rate[curve] * t * exprel(-loss * t)
-        return centred(p - y - (shape * y[:, None] ** powers).sum(axis=1))
+    def parts(self, constants: Floats) -> tuple[Floats, Floats, float]:
+        """Initial rates, shape of F, and loss; a transient's size and log speed may follow."""
+        place = self.count + _DEGREE - 1
+        return constants[: self.count], constants[self.count : place], float(constants[place])
 
-    def derivatives(rate: Floats, shape: Floats, loss: float) -> Floats:
-        """Of the product by initial rates, shape and loss."""
-        effective = t * exprel(-loss * t)
-        y = rate[curve] * effective
-        of_y = 1.0 + (powers * shape * y[:, None] ** (powers - 1)).sum(axis=1)
-        by_loss = t * (exprel(-(loss + _STEP) * t) - exprel(-(loss - _STEP) * t)) / (2.0 * _STEP)
-        columns = (one_hot * (of_y * effective)[:, None], y[:, None] ** powers, of_y * rate[curve] * by_loss)
-        return centred(np.column_stack(columns))
+    def residuals(self, constants: Floats) -> Floats:
+        """What the constants leave of the product, less each curve's start."""
+        rate, shape, _ = self.parts(constants)
+        y = rate[self.curve] * self.effective(constants)
+        return self.centred(self.product - y - (shape * y[:, None] ** _POWERS).sum(axis=1))
 
-    left = residuals(rate, shape, loss)
+    def derivatives(self, constants: Floats) -> Floats:
+        """Of the product by all constants, shape (reads, constants)."""
+        rate, shape, _ = self.parts(constants)
+        effective = self.effective(constants)
+        y = rate[self.curve] * effective
+        by_y = 1.0 + (_POWERS * shape * y[:, None] ** (_POWERS - 1)).sum(axis=1)
+        columns = [self.one_hot * (by_y * effective)[:, None], y[:, None] ** _POWERS]
+        for place in range(self.count + _DEGREE - 1, constants.size):
+            step = np.zeros(constants.size)
+            step[place] = _STEP
+            slope = (self.effective(constants + step) - self.effective(constants - step)) / (2.0 * _STEP)
+            columns.append((by_y * rate[self.curve] * slope)[:, None])
+        return self.centred(np.hstack(columns))
+
+    def effective(self, constants: Floats) -> Floats:
+        """Integral of the activity exp(-k t) (1 + A exp(-q t)), time over the longest."""
+        _, _, loss = self.parts(constants)
+        steady: Floats = self.time * exprel(-loss * self.time)
+        if constants.size == self.count + _DEGREE:
+            return steady
+        size, log_speed = constants[-2:]
+        with_transient: Floats = steady + size * self.time * exprel(-(loss + np.exp(log_speed)) * self.time)
+        return with_transient
+
+    def allowed(self, constants: Floats) -> bool:
+        """Whether the loss, and the speed of a transient, are within their limits."""
+        fine = abs(self.parts(constants)[2]) <= _LARGEST_LOSS
+        if constants.size > self.count + _DEGREE:
+            fine = fine and np.log(_SLOWEST) <= constants[-1] <= np.log(_FASTEST)
+        return bool(fine)
+
+
+def _least_squares(curves: _Curves, start: Floats) -> Floats | None:
+    """Gauss-Newton with halved steps; None where the curves do not tell the constants apart."""
+    constants, left = start, curves.residuals(start)
     best = float(left @ left)
     for _ in range(_ROUNDS):
-        slopes = derivatives(rate, shape, loss)
+        slopes = curves.derivatives(constants)
         step = _solved(slopes.T @ slopes, slopes.T @ left)
         if step is None:
             return None
         for halving in range(_HALVINGS):
-            part = step * 0.5**halving
-            moved = (rate + part[:count], shape + part[count:-1], loss + float(part[-1]))
-            if abs(moved[2]) <= _LARGEST_LOSS and float(np.sum(residuals(*moved) ** 2)) <= best:
-                break
+            moved = constants + step * 0.5**halving
+            if curves.allowed(moved):
+                moved_left = curves.residuals(moved)
+                if float(moved_left @ moved_left) <= best:
+                    break
         else:
             break
-        rate, shape, loss = moved
-        left, before = residuals(*moved), best
+        constants, left, before = moved, moved_left, best
         best = float(left @ left)
         if before - best <= _SETTLED * before:
             break
-    slopes = derivatives(rate, shape, loss)
-    degrees = float(curve.size - count - slopes.shape[1])
-    of_loss = _solved(slopes.T @ slopes, np.eye(slopes.shape[1])[-1])
-    if of_loss is None or best <= 0.0:
+    return constants
+
+
+def _asks_for_transient(curves: _Curves, constants: Floats) -> bool:
+    """Whether a transient of some speed would plainly explain what is left, by the score test."""
+    slopes, left = curves.derivatives(constants), curves.residuals(constants)
+    total = float(left @ left)
+    for speed in _SPEEDS:
+        column = curves.derivatives(np.append(constants, [0.0, np.log(speed)]))[:, -2]
+        explained = _solved(slopes.T @ slopes, slopes.T @ column)
+        if explained is None:
+            return False
+        own = column - slopes @ explained
+        length = float(own @ own)
+        if length <= 1e-12 * float(column @ column):
+            continue
+        gained = float(own @ left) ** 2 / length
+        if gained * (left.size - curves.count - constants.size - 1) > _PLAIN_TRANSIENT * (total - gained):
+            return True
+    return False
+
+
+def _result(curves: _Curves, constants: Floats, longest: float) -> Inactivation | None:
+    slopes, left = curves.derivatives(constants), curves.residuals(constants)
+    place = curves.count + _DEGREE - 1
+    degrees = float(left.size - curves.count - constants.size)
+    of_loss = _solved(slopes.T @ slopes, np.eye(constants.size)[place])
+    total = float(left @ left)
+    if of_loss is None or total <= 0.0:
         return None
-    error = float(np.sqrt(best / degrees * of_loss[-1]))
-    if count > _FEWEST_CLUSTERS:
-        by_curve = np.bincount(curve, (slopes @ of_loss) * left)
-        clustered = float(np.sqrt(np.sum(by_curve**2) * count / (count - 1.0)))
+    loss, error = float(constants[place]), float(np.sqrt(total / degrees * of_loss[place]))
+    if curves.count > _FEWEST_CLUSTERS:
+        by_curve = np.bincount(curves.curve, (slopes @ of_loss) * left)
+        clustered = float(np.sqrt(np.sum(by_curve**2) * curves.count / (curves.count - 1.0)))
         if clustered > error:
-            error, degrees = clustered, count - 2.0
+            error, degrees = clustered, curves.count - 2.0
     return Inactivation(
         loss / longest,
         error / longest,
         degrees,
         float(t_distribution.sf(loss / error, degrees)),
-        count,
-        curve.size,
+        curves.count,
+        left.size,
     )
 
 
