@@ -318,6 +318,8 @@ def _distrust(fits: SeriesFits, k: int, constants: Constants) -> str | None:
         return ", ".join(is_open)
     if fits.correlation_z[k] > _CORRELATED:
         return "the residuals follow each other: the law does not describe these curves"
+    if fits.scatter_at_limit[k]:
+        return "only wells dispensed far more unevenly than any are would fit: the law does not describe them"
     return None
 
 

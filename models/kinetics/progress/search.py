@@ -30,6 +30,7 @@ _SETTLED = 1e-12
 """What the next step would still gain, in units where the interval's threshold is about 4."""
 _ROUNDING = 1e-8
 _HARDLY_DAMPED = 1e-3
+_SHORTENED = 100.0
 _LARGEST_STEP = 1.5
 _LARGEST_DAMPING = 1e12
 
@@ -101,7 +102,13 @@ def minimise(
         reduced = reduce(part, constants, gram[:, :, at_wells], scatter, here)
         step, gain = _step(reduced, here, limits.select(active), damping[active], held)
         dispensed, drift = reduced.step(step)
-        trial = State(here.log_constants + step, here.dispensed + dispensed, here.drift + drift)
+        # Damping holds the shared constants alone; where the wells' own errors overshoot, all goes less far.
+        share = 1.0 / (1.0 + _SHORTENED * damping[active])
+        trial = State(
+            here.log_constants + share * step,
+            here.dispensed + share[part.series] * dispensed,
+            here.drift + share[part.drift_series] * drift,
+        )
         tried = linearise(part, constants, trial, scatter)
         better = tried.objective <= objective[active]
         undamped = damping[active] <= _HARDLY_DAMPED

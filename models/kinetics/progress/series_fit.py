@@ -20,7 +20,7 @@ from models.kinetics.progress.normal_equations import (
     residuals,
     restored,
 )
-from models.kinetics.progress.scatter import dispensing_cv, read_noise
+from models.kinetics.progress.scatter import LARGEST_CV, dispensing_cv, read_noise
 from models.kinetics.progress.search import Found, Limits, minimise
 from models.kinetics.progress.wells import Wells
 
@@ -28,8 +28,10 @@ Floats = NDArray[np.float64]
 Integers = NDArray[np.int_]
 Flags = NDArray[np.bool_]
 
-_SCATTER_STEPS = (20, 2, 2, 2)
+_SCATTER_STEPS = (20, 4, 4, 4)
 """Most steps towards the optimum before each estimate of the scatter: the optimum hardly moves with it."""
+_LAST_STEPS = 240
+"""Where the law does not hold, the way to the optimum is long; elsewhere a few steps do."""
 _FEWEST_SPARE_WELLS = 3
 """Wells beyond the constants from which dispensing errors can be estimated."""
 _GUESSED_CV = 0.02
@@ -58,6 +60,8 @@ class SeriesFits:
         Whether km lies above the middle of its limits.
     scatter_known
         Whether the dispensing errors were estimated or given.
+    scatter_at_limit
+        Whether an estimated dispensing error lies at its upper limit.
     noise
         Scatter in force.
     objective
@@ -86,6 +90,7 @@ class SeriesFits:
     at_limit: Flags
     km_is_high: Flags
     scatter_known: Flags
+    scatter_at_limit: Flags
     noise: Noise
     objective: Floats
     degrees: Floats
@@ -129,7 +134,7 @@ def fit_series(wells: Wells, constants: Constants, given_cv: tuple[float, float]
         found = minimise(wells, constants, state, noise, limits, rounds=steps)
         state = found.state
         noise = _scatter(wells, constants, found, noise, estimated, floor, first=number == 0)
-    found = minimise(wells, constants, state, noise, limits)
+    found = minimise(wells, constants, state, noise, limits, rounds=_LAST_STEPS)
     state = found.state
     reduced = reduce(wells, constants, found.linear.gram, noise, state)
     residual, conversion = residuals(wells, constants, state)
@@ -149,6 +154,7 @@ def fit_series(wells: Wells, constants: Constants, given_cv: tuple[float, float]
         | (state.log_constants >= limits.upper - margin),
         km_is_high=state.log_constants[1] > 0.5 * (limits.lower[1] + limits.upper[1]),
         scatter_known=estimated | (given_cv is not None),
+        scatter_at_limit=estimated & np.any(noise.cv >= 0.999 * LARGEST_CV, axis=0),
         noise=noise,
         objective=found.linear.objective,
         degrees=degrees,

