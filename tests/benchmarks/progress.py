@@ -28,7 +28,7 @@ from tests.models.kinetics.kinetic_plates import curve_batch
 PLATES, SEED = 250, 20260103
 PLATES_AT_ONCE = 50
 KM_UM = TRIPLICATE_TRUTH.k_um
-HALF_USED = 1494.0
+KCAT_TO_80_PERCENT = 1494.0
 """kcat [1/s] at which the highest level is 80 % converted after 10 min, and all others further."""
 
 
@@ -68,7 +68,7 @@ class Truth:
         }
 
 
-DEPLETED = Truth(HALF_USED, reads=31, interval_s=20.0)
+DEPLETED = Truth(KCAT_TO_80_PERCENT, reads=31, interval_s=20.0)
 RECOVERED = {
     "Michaelis-Menten": (DEPLETED, ProgressOptions()),
     "product inhibits, Kp 300 umol/L": (
@@ -258,7 +258,7 @@ def report(cases: Sequence[Case], compared: Sequence[Compared], count: int, seed
     lines = [
         f"{count} simulated plates a case, seed {seed}; 8 levels in triplicate, Km 80 umol/L",
         "",
-        "Constants from whole curves; highest level 80 % converted or near, no initial rate",
+        "Constants from whole curves; highest level 80 % converted, no initial rate left",
         f"{'case':<33}{'':<6}{'true':>9}{'bias %':>15}{'sd %':>8}{'cover %':>9}",
     ]
     for case in cases:

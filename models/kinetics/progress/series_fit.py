@@ -28,7 +28,7 @@ Floats = NDArray[np.float64]
 Integers = NDArray[np.int_]
 Flags = NDArray[np.bool_]
 
-_SCATTER_STEPS = (20, 4, 4, 4)
+_SCATTER_STEPS = (240, 20, 20, 20)
 """Most steps towards the optimum before each estimate of the scatter: the optimum hardly moves with it."""
 _LAST_STEPS = 240
 """Where the law does not hold, the way to the optimum is long; elsewhere a few steps do."""
