@@ -234,11 +234,9 @@ def permutation_test(block: Integers, effects: Floats, scores: Floats) -> tuple[
         return statistic, p_value
     unit = within[tested] / length[tested, None]
     seen = unit @ left / np.sqrt(total)
-    # Small blocks lose more of their scatter to their mean: back to one spread before they are exchanged.
-    exchanged = left * np.sqrt(members / (members - 1.0))[block]
     drawn, exceeded = 0, np.zeros(seen.size)
     for portion in range(len(_PORTIONS)):
-        shuffled = exchanged[_shuffles(block.size, portion)]
+        shuffled = left[_shuffles(block.size, portion)]
         remainder = np.sum(shuffled**2, axis=0) - members @ ((one_hot.T @ shuffled) / members[:, None]) ** 2
         largest = np.max(np.abs(unit @ shuffled), axis=0) / np.sqrt(remainder)
         exceeded += np.sum(largest[None, :] >= np.abs(seen)[:, None] * _ALIKE, axis=1)

@@ -112,6 +112,17 @@ def test_chance_exceeds_the_limit_as_often_as_said() -> None:
     assert np.mean(np.array(smallest) <= 0.2) > 0.1
 
 
+def test_blocks_of_different_size_keep_to_the_level() -> None:
+    block = np.concatenate([np.repeat(np.arange(40), 2), np.full(16, 40)])
+    first = np.arange(96) % 2 == 0
+    sets = np.stack([first & (block < 40), first & (block == 40)]) * 1.0
+    rng = np.random.default_rng(19)
+    found = [permutation_test(block, each[None], rng.standard_normal(96))[1][0] for each in [*sets] * 600]
+    share = np.mean(np.array(found).reshape(-1, 2) <= 0.1, axis=0)
+    # 4 standard errors of a share of 600 plates.
+    assert share == pytest.approx([0.1, 0.1], abs=4 * np.sqrt(0.1 * 0.9 / 600))
+
+
 def test_an_effect_stands_out_and_its_p_value_does_not_depend_on_what_blocks_share() -> None:
     rng = np.random.default_rng(2)
     scores = rng.standard_normal(96) + 3.5 * (COLUMN == 5)

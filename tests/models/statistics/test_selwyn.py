@@ -79,6 +79,34 @@ def test_a_lag_is_no_loss(lag_s: float, loss_per_s: float) -> None:
     assert found.standard_error < 0.5 * QUARTER_LOST_PER_S
 
 
+def test_wandering_baselines_are_not_taken_for_noise_of_reads() -> None:
+    rng = np.random.default_rng(37)
+    levels = np.repeat([1.0, 2.0, 4.0], 3)
+    curve, time_s = np.repeat(np.arange(9), TIME_S.size), np.tile(TIME_S, 9)
+    p_value = []
+    for _ in range(150):
+        product = np.array([product_formed(960.0, 0.025 * e, KM_UM, TIME_S) for e in levels])
+        product += 1.5 * rng.standard_normal((9, 1)) * (TIME_S / 600) ** 2
+        product += NOISE_UM * rng.standard_normal(product.shape)
+        found = selwyn_test(curve, time_s, product.ravel(), levels, 384.0)
+        assert found is not None
+        p_value.append(found.p_value)
+    # By the reads' noise alone a fifth of such lots would be found to lose activity.
+    assert np.mean(np.array(p_value) <= 0.01) < 0.01 + 4 * np.sqrt(0.01 / 150)
+
+
+def test_what_one_level_alone_reaches_does_not_count() -> None:
+    levels = np.array([1.0, 2.0, 8.0])
+    rng = np.random.default_rng(38)
+    product = np.array([product_formed(960.0, 0.025 * e, KM_UM, TIME_S) for e in levels])
+    product += 0.1 * rng.standard_normal(product.shape)
+    curve, time_s = np.repeat(np.arange(3), TIME_S.size), np.tile(TIME_S, 3)
+    odd = product.copy()
+    odd[2, 16:] = odd[2, 15]
+    plain, other = (selwyn_test(curve, time_s, each.ravel(), levels, 384.0) for each in (product, odd))
+    assert other == plain
+
+
 def test_order_of_reads_and_units_of_enzyme_do_not_matter() -> None:
     levels = np.array([1.0, 2.0, 4.0])
     rng = np.random.default_rng(35)
