@@ -14,6 +14,8 @@ import pandas as pd
 from flows.stages.stored_fits import StoredFits, joined, law_chosen, stored_fits
 from flows.stages.work import GatedBatch
 from models.kinetics.fitting import FIT_COLUMNS, FitResult
+from models.kinetics.influence import rate_influence
+from models.kinetics.progress.comparison import compare_with_rates
 from models.kinetics.progress.fitting import LAW, ProgressOptions, ProgressResult, fit_progress
 from models.records.assay import Assay
 from models.records.assay import WholeCurves as Stated
@@ -48,7 +50,7 @@ def fit_whole_curves(gated: GatedBatch, initial: FitResult, wells_fitted: str) -
     rated = gated.rated
     assays = [rated.plates[plate].recipe.assay for plate in rated.series["plate"]]
     batch = rated.curves
-    usable = _usable_wells(gated)
+    usable = _usable_wells(gated, initial)
     stored, comparisons = [], []
     for stated in dict.fromkeys(assay.whole_curves for assay in assays if _integrable(assay)):
         of_stated = np.array([_integrable(each) and each.whole_curves == stated for each in assays])
@@ -58,7 +60,7 @@ def fit_whole_curves(gated: GatedBatch, initial: FitResult, wells_fitted: str) -
         result = _as_fits(progress, initial)
         subjects = rated.series.set_index("series")
         stored.append(stored_fits(rated.plates, subjects, "series", result, wells_fitted, stored_as=LAW))
-        comparisons.append(COMPARISONS.empty())
+        comparisons.append(_compared(gated, progress, initial))
     if not stored:
         none = _as_fits(fit_progress(batch, 0), initial)
         subjects = rated.series.set_index("series")
@@ -69,19 +71,40 @@ def fit_whole_curves(gated: GatedBatch, initial: FitResult, wells_fitted: str) -
     return WholeCurves(joined(stored), pd.concat(comparisons, ignore_index=True))
 
 
+def _compared(gated: GatedBatch, progress: ProgressResult, initial: FitResult) -> pd.DataFrame:
+    """Rows of `comparisons`: whole curves against initial rates, of series whose law was chosen for these."""
+    rated = gated.rated
+    row_of = {key: row for row, key in enumerate(_well_keys(rated.rates))}
+    of_rates = rate_influence(initial.points, initial.constants, DIFFERENTIAL_LAW)
+    of_rates["well"] = [row_of[key] for key in of_rates["row"]]
+    constants = initial.constants
+    counted = constants["chosen"].astype(bool) & (constants["law"] == DIFFERENTIAL_LAW)
+    compared = compare_with_rates(progress, of_rates, constants[counted])
+    ids = rated.series.set_index("series")[["series_id", "analysis_id"]]
+    return compared.join(ids, on="series")[COMPARISONS.column_names]
+
+
+def _well_keys(frame: pd.DataFrame) -> pd.MultiIndex:
+    return pd.MultiIndex.from_frame(frame[["analysis_id", "well"]])
+
+
 def _integrable(assay: Assay) -> bool:
     return assay.whole_curves.fit and DIFFERENTIAL_LAW in assay.laws and assay.limiting_reagent is None
 
 
-def _usable_wells(gated: GatedBatch) -> np.ndarray:
-    """Whether each curve may be used: clear wells, and those that depletion alone holds; shape (W,)."""
+def _usable_wells(gated: GatedBatch, initial: FitResult) -> np.ndarray:
+    """Whether each curve may be used, shape (W,).
+
+    The wells that the initial rates rest on; where a series has no fit to these, also wells that depletion
+    alone holds. In a series whose other wells are not depleted, one that is has more enzyme than mapped.
+    """
     of_wells = gated.findings[(gated.findings["subject"] == "well") & (gated.findings["outcome"] == "breach")]
     by_well = of_wells.groupby(["analysis_id", "well"])["gate"].agg(set)
     depleted = by_well.index[[gates == {MENDED_BY_WHOLE_CURVES} for gates in by_well]]
-    key = pd.MultiIndex.from_frame(gated.wells[["analysis_id", "well"]])
-    usable = (gated.wells["standing"] == "clear").to_numpy() | key.isin(depleted)
-    rated = pd.MultiIndex.from_frame(gated.rated.rates[["analysis_id", "well"]])
-    return pd.Series(usable, index=key).reindex(rated).to_numpy(dtype=bool)
+    key = _well_keys(gated.wells)
+    no_rates = ~gated.wells["series"].isin(law_chosen(initial).index)
+    usable = (gated.wells["standing"] == "clear") | (no_rates & key.isin(depleted))
+    return pd.Series(usable.to_numpy(), index=key).reindex(_well_keys(gated.rated.rates)).to_numpy(dtype=bool)
 
 
 def _options(stated: Stated) -> ProgressOptions:

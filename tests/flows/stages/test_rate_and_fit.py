@@ -188,7 +188,8 @@ def test_the_error_of_the_calibration_widens_what_is_in_proportion_to_product_an
     current = (
         wide_tables["estimates"]
         .query("wells == 'clear'")
-        .assign(role="sample", series_standing="clear", measured_at=pd.Timestamp("2026-03-02", tz="UTC"))
+        .assign(role="sample", modulator=None, series_standing="clear")
+        .assign(measured_at=pd.Timestamp("2026-03-02", tz="UTC"))
     )
     plates = [
         current.assign(plate_read_id=f"p{n}", estimate_id=current["estimate_id"] + str(n)) for n in range(30)
