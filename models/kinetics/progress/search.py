@@ -64,6 +64,7 @@ def minimise(
     limits: Limits,
     held: int | None = None,
     rounds: int = _ROUNDS,
+    settled: float = _SETTLED,
 ) -> Found:
     """Minimise the sum of squares over the shared constants and the wells' own errors.
 
@@ -81,6 +82,8 @@ def minimise(
         A constant that stays where it starts, or None.
     rounds
         Most steps to take.
+    settled
+        Gain of a next step below which a series is at rest.
 
     Returns
     -------
@@ -113,7 +116,7 @@ def minimise(
         better = tried.objective <= objective[active]
         undamped = damping[active] <= _HARDLY_DAMPED
         # Where the next step is refused though it would gain next to nothing, rounding decides.
-        idle = undamped & ((gain <= _SETTLED) | (~better & (gain <= _ROUNDING)))
+        idle = undamped & ((gain <= settled) | (~better & (gain <= _ROUNDING)))
         taken = better[part.series]
         state.log_constants[:, active[better]] = trial.log_constants[:, better]
         state.dispensed[:, at_wells[taken]] = trial.dispensed[:, taken]

@@ -30,6 +30,7 @@ Flags = NDArray[np.bool_]
 
 _SCATTER_STEPS = (240, 20, 20, 20)
 """Most steps towards the optimum before each estimate of the scatter: the optimum hardly moves with it."""
+_SCATTER_SETTLED = 1e-6
 _LAST_STEPS = 240
 """Where the law does not hold, the way to the optimum is long; elsewhere a few steps do."""
 _FEWEST_SPARE_WELLS = 3
@@ -131,7 +132,7 @@ def fit_series(wells: Wells, constants: Constants, given_cv: tuple[float, float]
     noise = Noise(read_sd, np.where(estimated, _GUESSED_CV, given))
     state = State(state.log_constants, np.zeros_like(state.dispensed), np.zeros_like(state.drift))
     for number, steps in enumerate(_SCATTER_STEPS):
-        found = minimise(wells, constants, state, noise, limits, rounds=steps)
+        found = minimise(wells, constants, state, noise, limits, rounds=steps, settled=_SCATTER_SETTLED)
         state = found.state
         noise = _scatter(wells, constants, found, noise, estimated, floor, first=number == 0)
     found = minimise(wells, constants, state, noise, limits, rounds=_LAST_STEPS)
