@@ -8,6 +8,7 @@ from checks.gates import (
     blank_drift,
     control_window,
     detector_range,
+    enzyme_inactivation,
     enzyme_linearity,
     fit_misfit,
     initial_slope_nonlinear,
@@ -47,6 +48,7 @@ GATES: dict[str, Gate] = {
         initial_vs_full_curve,
         steady_state_valid,
         enzyme_linearity,
+        enzyme_inactivation,
         plate_position,
         reference_off_chart,
     )

@@ -23,6 +23,7 @@ import numpy as np
 import pandas as pd
 
 from checks.gates.gate import (
+    ENZYME_ROLES,
     Gate,
     GateInput,
     Limits,
@@ -51,8 +52,10 @@ CONDITION = [
 
 
 def metrics(data: GateInput) -> pd.DataFrame:
-    """Z' of each plate read that has enzyme or blanks, and what it was taken from."""
-    plates = data.analyses[["analysis_id"]].reset_index(drop=True)
+    """Z' of each plate read that has enzyme, and what it was taken from."""
+    with_enzyme = data.wells.loc[data.wells["role"].isin(ENZYME_ROLES), "analysis_id"]
+    plates = data.analyses.loc[data.analyses["analysis_id"].isin(with_enzyme), ["analysis_id"]]
+    plates = plates.reset_index(drop=True)
     wells = data.wells.reindex(columns=[*CONDITION, "well", "role"])
     wells = wells.merge(
         data.rates[["analysis_id", "well", "raw_rate_um_per_s"]], on=["analysis_id", "well"], how="left"

@@ -11,9 +11,10 @@ whether rates are in proportion to enzyme is `enzyme_linearity`'s question). Lev
 weight. Held where the one-sided p value of k > 0 is at most limit and at least least_loss of the activity is
 lost by the last read. Curves are product less the matching blank's slope, up to 40 % conversion.
 
-What it leaves alone, and why: a lot with one enzyme level (whatever bends its curves, one level cannot tell
-dying from running dry) is not assessed. A lag or burst common to all curves is fitted beside the loss where
-the curves show one. Without much difference between the levels the error of k is large and nothing is held.
+What it leaves alone, and why: a lot at one enzyme level, which cannot tell dying from running dry: there
+`initial_slope_nonlinear` and `initial_vs_full_curve` see that something bends its curves. A lag or burst
+common to all curves is fitted beside the loss where the curves show one. Without much difference between the
+levels the error of k is large and nothing is held.
 
 Source: Selwyn 1965, Biochim. Biophys. Acta 105, 193-195 (doi:10.1016/S0926-6593(65)80190-4, the DOI from
 memory).
@@ -29,7 +30,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from checks.gates.enzyme_linearity import CONDITION, KEY, LOT, enzyme_wells
+from checks.gates.enzyme_linearity import CONDITION, KEY, LOT, enzyme_wells, lots_at_several_levels
 from checks.gates.gate import (
     Gate,
     GateInput,
@@ -53,7 +54,7 @@ HIGHEST_CONVERSION = 0.4
 def metrics(data: GateInput) -> pd.DataFrame:
     """Activity that each lot loses over its read, and the p value of its losing any."""
     wells = enzyme_wells(data)
-    lots = wells[LOT].drop_duplicates(ignore_index=True)
+    lots = lots_at_several_levels(wells)
     levels = wells.groupby([*LOT, *CONDITION], dropna=False)["enzyme"].transform("nunique")
     several = wells[levels > 1]
     curves = _curves(data, several)
@@ -95,7 +96,7 @@ def _curves(data: GateInput, wells: pd.DataFrame) -> pd.DataFrame:
 
 def _judged(curves: pd.DataFrame | None, several: bool) -> tuple[object, ...]:
     if not several:
-        return "the lot has one enzyme level at equal substrate on this plate", np.nan, np.nan, np.nan, 0
+        return "no two enzyme levels of the lot share a substrate level", np.nan, np.nan, np.nan, 0
     tests: list[Inactivation] = []
     longest_s = np.nan
     if curves is not None:

@@ -13,7 +13,8 @@ level that is not known, and a difference of up to half the conversion limit sta
 
 What it leaves alone, and why: wells that the fit leaves out, since a well that runs dry is not a lack of
 proportion; in series that were not fitted, wells whose curve is not straight. Rates below 5 standard errors
-tell nothing about proportion. A lot with one enzyme level, or without a well to spare, is not assessed.
+tell nothing about proportion. For a lot at one enzyme level the question does not arise; one without a well
+to spare is not assessed.
 
 Source: v in proportion to [E] as a condition of any rate assay: M. Dixon, E. C. Webb, Enzymes, 3rd ed.,
 Longman 1979, ISBN 0-582-46217-X; F test: Draper and Smith 1998 (doi:10.1002/9781118625590).
@@ -59,14 +60,12 @@ def metrics(data: GateInput) -> pd.DataFrame:
     if data.points is None or data.fits is None:
         raise ValueError("enzyme_linearity judges fits: it needs fits and points")
     wells = enzyme_wells(data)
-    lots = wells[LOT].drop_duplicates(ignore_index=True)
+    lots = lots_at_several_levels(wells)
     rates = _telling_rates(data, wells)
     groups = dict(list(rates.groupby(LOT, sort=False)))
     found = [
-        _judged(groups.get((analysis, lot), rates.iloc[:0]), several)
-        for analysis, lot, several in zip(
-            lots["analysis_id"], lots["lot"], _several(wells, lots), strict=True
-        )
+        _judged(groups.get((analysis, lot), rates.iloc[:0]))
+        for analysis, lot in zip(lots["analysis_id"], lots["lot"], strict=True)
     ]
     columns = pd.DataFrame(found, columns=["reason", "departure", "p_value", "level", "unit", "level_count"])
     measured = {str(name): columns[name].to_numpy() for name in columns.columns[1:]}
@@ -92,10 +91,11 @@ def enzyme_wells(data: GateInput) -> pd.DataFrame:
     ).reset_index(drop=True)
 
 
-def _several(wells: pd.DataFrame, lots: pd.DataFrame) -> np.ndarray:
-    levels = wells.groupby(LOT)["enzyme"].nunique()
-    several: np.ndarray = levels.reindex(pd.MultiIndex.from_frame(lots)).to_numpy() > 1
-    return several
+def lots_at_several_levels(wells: pd.DataFrame) -> pd.DataFrame:
+    """Lots of each plate read that it holds at more than one enzyme level: analysis_id and lot."""
+    several = wells.groupby(LOT, sort=False)["enzyme"].transform("nunique") > 1
+    lots: pd.DataFrame = wells.loc[several, LOT].drop_duplicates(ignore_index=True)
+    return lots
 
 
 def _telling_rates(data: GateInput, wells: pd.DataFrame) -> pd.DataFrame:
@@ -117,9 +117,7 @@ def _not_judged(reason: str) -> tuple[object, ...]:
     return reason, np.nan, np.nan, np.nan, None, 0
 
 
-def _judged(rates: pd.DataFrame, several: bool) -> tuple[object, ...]:
-    if not several:
-        return _not_judged("the lot has one enzyme level on this plate")
+def _judged(rates: pd.DataFrame) -> tuple[object, ...]:
     rates = rates.sort_values(["enzyme", *CONDITION, "v0_um_per_s"]).reset_index(drop=True)
     condition = rates.groupby(CONDITION, dropna=False)
     shared = condition["enzyme"].transform("nunique") > 1

@@ -50,7 +50,8 @@ def test_each_recipe_is_judged_by_its_own_limits() -> None:
 def test_a_gate_turned_off_finds_nothing_and_the_document_says_so() -> None:
     off = resolve_limits({"substrate_depletion": {"on": False}}, {})
     result = assess("wells", depleted(), {"recipe-1": off, "recipe-2": DEFAULTS})
-    assert result.findings["analysis_id"].tolist() == ["plate-2"]
+    breaches = result.findings[result.findings["outcome"] == "breach"]
+    assert breaches["analysis_id"].tolist() == ["plate-2"]
     well_run = next(run for run in result.runs if run.suite == "wells.well" and run.recipe_id == "recipe-1")
     assert well_run.document["limits"]["substrate_depletion"]["on"] is False
     rules = [expectation["meta"]["gate"] for expectation in well_run.document["suite"]["expectations"]]
@@ -158,6 +159,14 @@ COLUMNS: dict[str, tuple[str, ...]] = {
     "reference_off_chart": ("distance_sd", "of_value", "of_mean", "of_sd"),
     "fit_misfit": ("p_value", "lack_of_fit_p", "runs_p"),
     "initial_vs_full_curve": ("p_value", "km_ratio", "km_ratio_low", "km_ratio_high", "vmax_ratio"),
+    "control_window": (
+        "z_prime", "reference_mean", "reference_sd", "blank_mean", "blank_sd", "reference_count",
+        "blank_count", "substrate_um",
+    ),
+    "outlier_in_series": ("p_value", "relative_residual", "studentised_residual", "point_count"),
+    "enzyme_linearity": ("departure", "certainty", "p_value", "level"),
+    "enzyme_inactivation": ("lost", "certainty", "p_value", "longest_s", "curve_count"),
+    "plate_position": ("effect", "certainty", "p_value", "well_count"),
 }  # fmt: skip
 
 
@@ -167,6 +176,11 @@ WORDS: dict[str, dict[str, object]] = {
     "replicate_scatter": {"wells": ("A1", "A2")},
     "reference_off_chart": {"of_lot": "R1", "of_constant": "km", "of_unit": "umol/L"},
     "fit_misfit": {"law": "hill"},
+    "control_window": {"reference_count": 3, "blank_count": 3},
+    "outlier_in_series": {"point_count": 24},
+    "enzyme_linearity": {"unit": "nmol/L"},
+    "enzyme_inactivation": {"longest_s": 600.0, "curve_count": 12},
+    "plate_position": {"kind": "column", "place": 3, "well_count": 8},
 }
 """Text that the sentences of these gates need."""
 BEYOND: dict[str, Callable[[dict[str, Any]], bool]] = {
@@ -181,6 +195,11 @@ BEYOND: dict[str, Callable[[dict[str, Any]], bool]] = {
     "reference_off_chart": lambda row: row["distance_sd"] > 3,
     "fit_misfit": lambda row: row["p_value"] < 0.01,
     "initial_vs_full_curve": lambda row: row["p_value"] < 0.01,
+    "control_window": lambda row: row["z_prime"] < 0.5,
+    "outlier_in_series": lambda row: row["p_value"] < 0.01,
+    "enzyme_linearity": lambda row: abs(row["departure"]) > 0.1 and abs(row["certainty"]) >= 0.99,
+    "enzyme_inactivation": lambda row: abs(row["lost"]) > 0.1 and abs(row["certainty"]) >= 0.99,
+    "plate_position": lambda row: abs(row["effect"]) > 0.05 and abs(row["certainty"]) >= 0.99,
 }
 """Rules of one line."""
 
@@ -223,7 +242,7 @@ def fixed(gate: Gate, rows: list[dict[str, Any]]) -> Gate:
     """The gate with these metrics, on wells or series of plate-1, or on plate reads of their own."""
     number = [str(one) for one in range(len(rows))]
     plate = number if gate.subjects[0] == "plate_read" else "plate-1"
-    ids = pd.DataFrame({"analysis_id": plate, "well": number, "series_id": number})
+    ids = pd.DataFrame({"analysis_id": plate, "well": number, "series_id": number, "lot": number})
     frame = metrics_frame(gate.subjects[0], ids, "", **pd.DataFrame(rows).to_dict("list"))
     return replace(gate, subjects=gate.subjects[:1], metrics=lambda _: frame)
 
@@ -247,7 +266,7 @@ def test_expectations_flag_exactly_the_rows_that_the_rule_names(gate: Gate, data
         )
         columns |= {"k_name": st.just("Km"), "vmax_open": st.just(True), "k_open": st.just(True)}
     rows = data.draw(st.lists(st.fixed_dictionaries(columns), min_size=20, max_size=40))
-    batch = clean_series() if gate.phase == "series" else clean_batch()
+    batch = clean_batch() if gate.phase == "wells" else clean_series()
     if gate.subjects[0] == "plate_read":
         plates = pd.DataFrame({"analysis_id": [str(one) for one in range(len(rows))]})
         batch = replace(batch, analyses=plates.assign(recipe_id="recipe-1"))
@@ -255,7 +274,7 @@ def test_expectations_flag_exactly_the_rows_that_the_rule_names(gate: Gate, data
     with np.errstate(all="ignore"):
         findings = assess(gate.phase, batch, limits, {gate.name: fixed(gate, rows)}).findings
         expected = {str(number) for number, row in enumerate(rows) if rule_says(gate.name, row)}
-    key = {"well": "well", "series": "series_id", "plate_read": "analysis_id"}[gate.subjects[0]]
+    key = {"well": "well", "series": "series_id", "lot": "lot", "plate_read": "analysis_id"}[gate.subjects[0]]
     breaches = findings[findings["outcome"] == "breach"]
     assert set(breaches[key]) == expected
     unknown = {
