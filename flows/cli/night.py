@@ -36,7 +36,8 @@ _READ = """
 """
 
 _HELD = """
-    SELECT f.gate, f.subject, f.severity, f.outcome, c.plate_id, f.well, s.lot, f.sentence
+    SELECT f.gate, f.subject, f.severity, f.outcome, c.plate_id, f.well,
+           coalesce(s.lot, f.lot) AS lot, f.sentence
     FROM findings f
     JOIN current_analyses c USING (analysis_id)
     LEFT JOIN series s ON s.series_id = f.series_id
@@ -46,10 +47,10 @@ _HELD = """
 """
 
 _LOTS = """
-    SELECT assay, lot, role, constant, value, standard_error, low, high, unit, standing,
+    SELECT assay, lot, role, modulator, constant, value, standard_error, low, high, unit, standing,
            plate_read_count, held_series_count
     FROM lot_latest
-    ORDER BY assay, role, lot, constant
+    ORDER BY assay, role, lot, modulator, constant
 """
 
 # A column of the lots' table holds the first of these constants that a lot has.
@@ -96,7 +97,7 @@ def show_lots(screen: Console, site: Site) -> None:
     if lots.empty:
         screen.print("No lot has a constant yet.")
         return
-    for assay, of_assay in lots.groupby("assay", sort=True):
+    for assay, of_assay in lots[lots["modulator"].isna()].groupby("assay", sort=True):
         screen.print(Text(str(assay), style="bold"))
         columns = [choice for choice in _COLUMNS if set(choice) & set(of_assay["constant"])]
         headings = [("", "left"), ("lot", "left"), ("plates", "right")]
@@ -104,11 +105,33 @@ def show_lots(screen: Console, site: Site) -> None:
         lines = [_lot_row(of_lot, columns) for _, of_lot in of_assay.groupby(["role", "lot"], sort=True)]
         screen.print(plain_table(headings, lines))
         screen.print()
+    _show_modulators(screen, lots[lots["modulator"].notna()])
     screen.print(
         f"{MARKS['clear']} every series clear   {MARKS['held']} a series waits for a person and is left out; "
         "where all wait, the values are those of the held series",
         style="dim",
     )
+
+
+def _show_modulators(screen: Console, lots: pd.DataFrame) -> None:
+    """What each lot's grids say of a modulator, a row a constant; nothing where there are none."""
+    if lots.empty:
+        return
+    screen.print(Text("with a modulator", style="bold"))
+    lines = [
+        (
+            MARKS[str(row.standing)],
+            str(row.lot),
+            str(row.modulator),
+            str(row.plate_read_count),
+            f"{constant_symbol(row.constant)} {number(row.value, row.standard_error)} "
+            f"{unit_symbol(row.unit)}\n{interval(row.low, row.high, row.standard_error)}",
+        )
+        for row in rows(lots)
+    ]
+    headings = [("", "left"), ("lot", "left"), ("modulator", "left"), ("plates", "right"), ("", "left")]
+    screen.print(plain_table(headings, lines))
+    screen.print()
 
 
 def _ask(connection: duckdb.DuckDBPyConnection, sql: str, report: PassReport) -> pd.DataFrame:

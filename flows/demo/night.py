@@ -78,6 +78,8 @@ def _plate_map(scenario: Scenario, entry: MapFile) -> bytes:
         "lot",
         f"substrate [{entry.substrate_unit}]",
         f"enzyme [{entry.enzyme_unit}]",
+        "modulator",
+        "modulator [umol/L]",
     ]
     rows: list[list[Cell]] = [[*head, "assay"]]
     by_mass = entry.enzyme_unit.endswith("/mL")
@@ -93,6 +95,8 @@ def _plate_map(scenario: Scenario, entry: MapFile) -> bytes:
                     well["lot"] or "",
                     _amount(well["substrate_um"], entry.substrate_unit),
                     _amount(enzyme, entry.enzyme_unit),
+                    well["modulator"] or "",
+                    _amount(well["modulator_um"], "umol/L"),
                     plate.assay,
                 ]
             )

@@ -9,11 +9,13 @@ import hashlib
 import math
 import tomllib
 import typing
+from dataclasses import replace
 from datetime import datetime
 from pathlib import Path
 from typing import Annotated, Literal
 
 import numpy as np
+import pandas as pd
 from pydantic import Field, StringConstraints, TypeAdapter, ValidationError
 
 from models.errors import ConfigurationError, UnknownName
@@ -54,10 +56,15 @@ class Lot(Record):
     kcat_per_s: float = Field(gt=0)
     hill_n: float = Field(default=1.0, gt=0)
     molar_mass_g_per_mol: float | None = None
+    k_ic_um: dict[str, float] = Field(default_factory=dict)
+    """Constants of competitive inhibitors by their name [umol/L]."""
 
-    def truth(self) -> LotTruth:
-        """The constants as the simulation wants them."""
-        return LotTruth(**self.model_dump(exclude={"assay"}))
+    def truth(self, modulator: str | None = None, modulator_um: float = 0.0) -> LotTruth:
+        """The constants as the simulation wants them, with a competitive inhibitor at some level."""
+        own = LotTruth(**self.model_dump(exclude={"assay", "k_ic_um"}))
+        if modulator is None or modulator_um == 0:
+            return own
+        return replace(own, k_um=own.k_um * (1.0 + modulator_um / self.k_ic_um[modulator]))
 
 
 class Plate(Record):
@@ -67,6 +74,11 @@ class Plate(Record):
     assay: str
     started_at: datetime
     lots: tuple[str, ...] = Field(min_length=1)
+    enzyme_factors: tuple[float, ...] = (1.0,)
+    """Enzyme levels of every lot but the reference, over the bench's."""
+    modulator: str | None = None
+    modulator_levels_um: tuple[float, ...] = (0.0,)
+    """Levels of the modulator with every lot but the reference."""
     faults: tuple[dict[str, typing.Any], ...] = ()
 
 
@@ -156,11 +168,20 @@ def design_plate(scenario: Scenario, plate: Plate) -> Design:
     """Design of one plate: a level a row, the reference first, then the lots, then blanks."""
     bench = scenario.benches[plate.assay]
     enzyme = {"enzyme_nm": bench.enzyme_nm, "enzyme_ng_per_ml": bench.enzyme_ng_per_ml}
-    columns: list[dict[str, object]] = [
-        {"role": "reference" if lot == plate.lots[0] else "sample", "lot": lot, **enzyme}
-        for lot in plate.lots
-        for _ in range(bench.replicates)
+    reference: dict[str, object] = {"role": "reference", "lot": plate.lots[0], **enzyme}
+    samples: list[dict[str, object]] = [
+        {
+            "role": "sample",
+            "lot": lot,
+            **{name: None if level is None else level * factor for name, level in enzyme.items()},
+            "modulator": plate.modulator if level_um > 0 else None,
+            "modulator_um": level_um if level_um > 0 else None,
+        }
+        for lot in plate.lots[1:]
+        for factor in plate.enzyme_factors
+        for level_um in plate.modulator_levels_um
     ]
+    columns = [column for column in (reference, *samples) for _ in range(bench.replicates)]
     columns += [{"role": "blank"} for _ in range(bench.blanks)]
     return Design(
         well_count=bench.well_count,
@@ -183,13 +204,26 @@ def simulate(scenario: Scenario, plate_id: str) -> SimulatedPlate:
     plate = scenario.plate(plate_id)
     bench = scenario.benches[plate.assay]
     own = int.from_bytes(hashlib.sha256(plate_id.encode()).digest()[:8], "big")
-    return simulate_plate(
-        design_plate(scenario, plate),
-        {lot: scenario.lots[lot].truth() for lot in plate.lots},
+    design = design_plate(scenario, plate)
+    # The simulation knows no modulators: a lot with some of one is another lot to it.
+    levels = design.wells["modulator_um"].fillna(0.0)
+    names = [
+        lot if level == 0 or lot is None else f"{lot} with {level:g}"
+        for lot, level in zip(design.wells["lot"], levels, strict=True)
+    ]
+    truth = {
+        name: scenario.lots[lot].truth(plate.modulator, level)
+        for name, lot, level in zip(names, design.wells["lot"], levels, strict=True)
+        if lot is not None
+    }
+    simulated = simulate_plate(
+        replace(design, wells=design.wells.assign(lot=pd.Series(names, dtype=object))),
+        truth,
         Noise(bench.signal_sd, bench.pipetting_cv, bench.pipetting_cv, bench.baseline_sd),
         [_fault(entry) for entry in plate.faults],
         np.random.default_rng([scenario.seed, own]),
     )
+    return replace(simulated, wells=design.wells)
 
 
 def _fault(entry: dict[str, typing.Any]) -> Fault:
