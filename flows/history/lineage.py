@@ -31,6 +31,7 @@ _IDS: dict[str, tuple[str, str]] = {
     "estimate": ("estimates", "estimate_id"),
     "fit": ("fits", "fit_id"),
     "series": ("series", "series_id"),
+    "grid": ("grids", "grid_id"),
     "analysis": ("analyses", "analysis_id"),
     "plate read": ("plate_reads", "plate_read_id"),
     "file": ("files", "file_id"),
@@ -39,6 +40,11 @@ _IDS: dict[str, tuple[str, str]] = {
 _HOW_TO_FIND = (
     'ids are listed by: halfsat history "SELECT estimate_id, lot, constant, value FROM current_estimates"'
 )
+_WELLS_FITTED = {
+    "clear": "clear wells",
+    "all": "all wells that are not void",
+    "curves": "whole curves",
+}
 _FINDING_MARKS = {"hold": MARKS["held"], "void": MARKS["void"], "none": "·"}
 _CONDITIONS = {
     "unchanged": "bytes unchanged",
@@ -53,8 +59,8 @@ def lineage(site: Site, id_or_prefix: str) -> Node:
     Parameters
     ----------
     id_or_prefix
-        Id of a lot value, estimate, fit, series, analysis, plate read, file or recipe, or its first digits if
-        no other id begins with them.
+        Id of a lot value, estimate, fit, series, grid, analysis, plate read, file or recipe, or its first
+        digits if no other id begins with them.
 
     Raises
     ------
@@ -99,6 +105,7 @@ class _Tracer:
             "estimate": self.estimate,
             "fit": self.fit,
             "series": self.series,
+            "grid": self.grid,
             "analysis": self.analysis,
             "plate read": self.plate_read,
             "file": lambda file_id: self.file("file", file_id),
@@ -114,7 +121,7 @@ class _Tracer:
         sources = self._rows(
             "SELECT e.estimate_id FROM lot_value_sources s JOIN estimates e USING (estimate_id) "
             "JOIN analyses a USING (analysis_id) WHERE s.lot_value_id = ? "
-            "ORDER BY a.computed_at, a.plate_read_id, e.series_id, e.estimate_id",
+            "ORDER BY a.computed_at, a.plate_read_id, e.series_id, e.grid_id, e.estimate_id",
             lot_value_id,
         )
         counts = f"{row['plate_read_count']} plate reads, {row['series_count']} series, {_standing(row)}"
@@ -143,12 +150,17 @@ class _Tracer:
 
     def fit(self, fit_id: str) -> Node:
         row = self._row("SELECT * FROM fits WHERE fit_id = ?", fit_id)
-        details = [f"{row['point_count']} rates, degrees of freedom: {row['degrees_of_freedom']}"]
+        what = "reads" if row["wells"] == "curves" else "rates"
+        details = [f"{row['point_count']} {what}, degrees of freedom: {row['degrees_of_freedom']}"]
         details += [] if row["converged"] else ["the solver did not reach the optimum"]
         details += [] if row["trusted"] else [f"uncertainty not to be trusted: {row['distrust']}"]
         chosen = "chosen" if row["chosen"] else "not chosen"
         title = f"{str(row['law']).replace('_', ' ')}, {_wells_fitted(row)}, {chosen}"
-        children = (self.series(str(row["series_id"]), wells=str(row["wells"])),)
+        wells = str(row["wells"])
+        if row["series_id"] is not None:
+            children = (self.series(str(row["series_id"]), wells=wells),)
+        else:
+            children = (self.grid(str(row["grid_id"]), wells=wells),)
         return Node("fit", fit_id, title, tuple(details), _facts(row), children)
 
     def series(self, series_id: str, *, wells: str = "") -> Node:
@@ -171,6 +183,27 @@ class _Tracer:
             self.analysis(analysis_id),
         )
         return Node("series", series_id, _level(row), tuple(details), _facts(row), children)
+
+    def grid(self, grid_id: str, *, wells: str = "") -> Node:
+        row = self._row("SELECT * FROM grids WHERE grid_id = ?", grid_id)
+        details = [f"{row['well_count']} wells, {row['clear_well_count']} of them clear, {_standing(row)}"]
+        if row["refusal"] is not None:
+            details.append(f"not fitted: {row['refusal']}")
+        if self._again("grid", grid_id):
+            return Node("grid", grid_id, f"{_level(row)} (as above)", (), _facts(row))
+        # The series that it spans: every level of the modulator, and the wells without.
+        spanned = self._rows(
+            "SELECT s.series_id FROM series s JOIN grids g USING (analysis_id, lot, role) "
+            "WHERE g.grid_id = ? AND s.enzyme_nm IS NOT DISTINCT FROM g.enzyme_nm "
+            "AND s.enzyme_ng_per_ml IS NOT DISTINCT FROM g.enzyme_ng_per_ml "
+            "AND (s.modulator = g.modulator OR coalesce(s.modulator_um, 0) = 0) "
+            "ORDER BY s.modulator_um NULLS FIRST, s.series_id",
+            grid_id,
+        )
+        children = tuple(self.series(str(each["series_id"]), wells=wells) for each in spanned)
+        return Node(
+            "grid", grid_id, f"{_level(row)} at all its levels", tuple(details), _facts(row), children
+        )
 
     def analysis(self, analysis_id: str) -> Node:
         row = self._row("SELECT * FROM analyses WHERE analysis_id = ?", analysis_id)
@@ -340,12 +373,13 @@ def _level(row: Row) -> str:
     if row["enzyme_ng_per_ml"] is not None:
         parts.append(f"enzyme {number(_real(row['enzyme_ng_per_ml']))} ng/mL")
     if row["modulator"] is not None:
-        parts.append(f"{row['modulator']} {number(_real(row['modulator_um']))} µM")
+        level = _real(row.get("modulator_um"))
+        parts.append(str(row["modulator"]) + ("" if level is None else f" {number(level)} µM"))
     return ", ".join(parts)
 
 
 def _wells_fitted(row: Row) -> str:
-    return "clear wells" if row["wells"] == "clear" else "all wells that are not void"
+    return _WELLS_FITTED[str(row["wells"])]
 
 
 def _standing(row: Row) -> str:

@@ -11,6 +11,7 @@ NodeKind = Literal[
     "estimate",
     "fit",
     "series",
+    "grid",
     "rate",
     "finding",
     "analysis",

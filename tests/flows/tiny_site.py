@@ -57,6 +57,7 @@ class TinySite:
     plate_read_ids: dict[str, str] = field(default_factory=dict)
     analysis_ids: dict[str, str] = field(default_factory=dict)
     series_ids: dict[tuple[str, str], str] = field(default_factory=dict)
+    grid_ids: dict[tuple[str, str], str] = field(default_factory=dict)
     fit_ids: dict[tuple[str, str], str] = field(default_factory=dict)
     estimate_ids: dict[tuple[str, str], str] = field(default_factory=dict)
     lot_value_ids: dict[tuple[str, str], str] = field(default_factory=dict)
@@ -378,10 +379,23 @@ def _add_series(
             "p_value": 0.6,
         }
     )
-    _add_grid(given, analysis_id, lot, role)
+    if (plate, row) == (HELD[0], HELD[1][0]):
+        level = {"place": 1, "substrate_um": 400.0, "replicates": 3, "settles": True}
+        why = {"gates": "saturation_not_reached", "allowed_by": "reach", "highest_allowed_um": 400.0}
+        given["suggestions"].append(
+            {
+                "series_id": series_id,
+                "analysis_id": analysis_id,
+                **level,
+                **why,
+                "constant": "km",
+                "sentence": "400 µM in triplicate would settle it.",
+            }
+        )
+    made.grid_ids[plate, lot] = _add_grid(given, analysis_id, lot, role)
 
 
-def _add_grid(given: dict[str, list[dict[str, object]]], analysis_id: str, lot: str, role: str) -> None:
+def _add_grid(given: dict[str, list[dict[str, object]]], analysis_id: str, lot: str, role: str) -> str:
     grid_id = result_id("grid", analysis_id, lot)
     given["grids"].append(
         {
@@ -411,6 +425,7 @@ def _add_grid(given: dict[str, list[dict[str, object]]], analysis_id: str, lot: 
             "p_value": 0.34,
         }
     )
+    return grid_id
 
 
 def _add_fit(
@@ -541,6 +556,7 @@ _ANALYSED = (
     "correlations",
     "comparisons",
     "shifts",
+    "suggestions",
     "gate_runs",
 )
 

@@ -38,6 +38,7 @@ def ids_by_kind(made) -> dict[str, str]:
         "estimate": made.estimate_ids[key],
         "fit": made.fit_ids[key],
         "series": made.series_ids[key],
+        "grid": made.grid_ids[key],
         "analysis": made.analysis_ids["TP-2"],
         "plate read": made.plate_read_ids["TP-2"],
         "export": made.export_ids["TP-2"],
@@ -46,7 +47,18 @@ def ids_by_kind(made) -> dict[str, str]:
     }
 
 
-KINDS = ["lot value", "estimate", "fit", "series", "analysis", "plate read", "export", "plate map", "recipe"]
+KINDS = [
+    "lot value",
+    "estimate",
+    "fit",
+    "series",
+    "grid",
+    "analysis",
+    "plate read",
+    "export",
+    "plate map",
+    "recipe",
+]
 
 
 @pytest.mark.parametrize("kind", KINDS)
@@ -71,6 +83,12 @@ def test_an_estimate_leads_to_everything_it_rests_on(made):
     (readings,) = of_kind(node, "readings")
     assert readings.fact("condition") == "unchanged"
     assert readings.fact("path") == f"lake/readings/{made.plate_read_ids['TP-2']}.parquet"
+
+
+def test_a_grid_unfolds_the_series_that_it_spans(made):
+    node = lineage(made.site, made.grid_ids["TP-2", "QX-7"])
+    assert [series.id for series in node.children] == [made.series_ids["TP-2", "QX-7"]]
+    assert "not fitted: one modulator level only" in node.details
 
 
 def test_a_lot_value_gathers_its_estimates_over_plates(made):
