@@ -314,6 +314,8 @@ class Assay(Record):
     """EC number, such as 1.1.1.27."""
     substrate: str = Field(min_length=1)
     """The substrate that is varied."""
+    solubility_limit_um: float | None = Field(default=None, gt=0)
+    """Highest substrate, umol/L, that stays dissolved in the assay mixture: no higher level is suggested."""
     product: str = Field(min_length=1)
     """The product, or the species whose signal is read."""
     plates: tuple[str, ...] = ()

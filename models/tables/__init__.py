@@ -17,6 +17,7 @@ from models.tables.fits import (
 from models.tables.intake import FILES, PASSES, PLATE_MAPS, PLATE_READS, READINGS
 from models.tables.lots import GATE_RUNS, LOT_VALUE_SOURCES, LOT_VALUES, RECIPES
 from models.tables.results import ANALYSES, FINDINGS, RATES, WELLS
+from models.tables.suggestions import SUGGESTIONS
 from models.tables.table import Column, Table
 
 TABLES: tuple[Table, ...] = (
@@ -39,6 +40,7 @@ TABLES: tuple[Table, ...] = (
     CORRELATIONS,
     COMPARISONS,
     SHIFTS,
+    SUGGESTIONS,
     LOT_VALUES,
     LOT_VALUE_SOURCES,
 )
@@ -80,6 +82,7 @@ __all__ = [
     "RECIPES",
     "SERIES",
     "SHIFTS",
+    "SUGGESTIONS",
     "TABLES",
     "WELLS",
     "Column",
