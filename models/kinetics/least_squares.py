@@ -192,7 +192,7 @@ def minimise(
     work = _Work(
         np.arange(series_count), conditions, rates, weights, sum_rows(weights * rates * rates), lower, upper,
         free, amplitude, np.full(series_count, 1e-8), np.full(series_count, np.inf),
-        np.zeros(series_count, dtype=bool),
+        np.zeros(series_count, dtype=bool), np.full(series_count, np.nan), np.full(series_count, np.nan),
     )  # fmt: skip
     best_coordinates, best_amplitude = start.copy(), np.zeros(series_count)
     converged = np.zeros(series_count, dtype=bool)
@@ -218,7 +218,11 @@ def minimise(
 
 @dataclass
 class _Work:
-    """The series still searched, with their data; `done` marks those that wait to be put aside."""
+    """The series still searched, with their data; `done` marks those that wait to be put aside.
+
+    `last_step` is the Gauss-Newton step before the last move, and `last_way` that move, of a lone constant;
+    NaN where there was none.
+    """
 
     series: NDArray[np.intp]
     conditions: Conditions
@@ -232,6 +236,8 @@ class _Work:
     damping: Floats
     last_move: Floats
     done: Flags
+    last_step: Floats
+    last_way: Floats
 
     def point(self, law: RateLaw, coordinates: Floats) -> _Point:
         return _point(
@@ -252,28 +258,34 @@ class _Work:
             self.damping[where],
             self.last_move[where],
             self.done[where],
+            self.last_step[where],
+            self.last_way[where],
         )
 
 
 def _advance(law: RateLaw, work: _Work, at: _Point) -> Flags:
     """One damped Gauss-Newton step of every series at work; returns which have now come to rest."""
     steps = _solve(at.hessian, at.gradient, work.damping, _movable(at, work))
+    if len(steps) == 1:
+        plain, steps = steps[0], [_secant_step(steps[0], work)]
     trial_at = np.empty_like(at.coordinates)
     longest = np.zeros(work.series.size)
     for k, step in enumerate(steps):
-        positive = law.shape_constants[k].positive
-        limited = np.isfinite(work.lower[k]) & np.isfinite(work.upper[k])
-        longest_step = np.where(limited, np.inf, np.maximum(np.abs(at.coordinates[k]), _LEAST_REACH))
-        if positive:
-            longest_step = np.full_like(longest_step, _LONGEST_STEP)
-        step = np.minimum(np.maximum(step, -longest_step), longest_step)
-        wanted = at.coordinates[k] + step
-        trial_at[k] = np.minimum(np.maximum(wanted, work.lower[k]), work.upper[k])
-        moved = np.abs(trial_at[k] - at.coordinates[k])
-        if not positive:
+        here, wanted = at.coordinates[k], trial_at[k]
+        if law.shape_constants[k].positive:
+            longest_step: float | Floats = _LONGEST_STEP
+            scale: float | Floats = 1.0
+        else:
             # A constant without limits has no scale but its own size.
-            moved = moved / np.where(limited, 1.0, np.maximum(np.abs(at.coordinates[k]), 1e-300))
-        longest = np.maximum(longest, moved)
+            limited, size = np.isfinite(work.lower[k]) & np.isfinite(work.upper[k]), np.abs(here)
+            longest_step = np.where(limited, np.inf, np.maximum(size, _LEAST_REACH))
+            scale = np.where(limited, 1.0, np.maximum(size, 1e-300))
+        np.maximum(step, -longest_step, out=wanted)
+        np.minimum(wanted, longest_step, out=wanted)
+        wanted += here
+        np.maximum(wanted, work.lower[k], out=wanted)
+        np.minimum(wanted, work.upper[k], out=wanted)
+        np.maximum(longest, np.abs(wanted - here) / scale, out=longest)
     trial = work.point(law, trial_at)
     open_still = ~work.done
     better = (trial.cost <= at.cost + _ROUNDING * work.square_sum) & open_still
@@ -284,19 +296,33 @@ def _advance(law: RateLaw, work: _Work, at: _Point) -> Flags:
     at_rest = (longest < _STEP_TOLERANCE) | ((longest < 1e-7) & (next_move < _STEP_TOLERANCE))
     rests = open_still & ((better & at_rest & (work.damping < 1e-2)) | exhausted)
     work.last_move = np.where(better, longest, np.inf)
+    if len(steps) == 1:
+        work.last_step = np.where(better, plain, np.nan)
+        work.last_way = trial_at[0] - at.coordinates[0]
     at.accept(trial, better)
     work.damping = np.where(better, np.maximum(work.damping * 0.1, 1e-12), work.damping * 30.0)
     work.done |= rests | (work.damping > 1e12)
     return rests
 
 
+def _secant_step(step: Floats, work: _Work) -> Floats:
+    """Gauss-Newton step of a lone constant, lengthened or shortened to where its steps end.
+
+    Near the optimum they shrink by a steady factor that depends on the residuals; the secant through the last
+    two gets there at once (Traub 1964, Iterative Methods for the Solution of Equations, from memory).
+    """
+    ratio = work.last_way / (work.last_step - step)
+    return np.where((ratio > 0.5) & (ratio < 2.0), step * ratio, step)
+
+
 def _movable(at: _Point, work: _Work) -> Floats:
     """1 for constants that may move, 0 at a limit that the gradient presses against (constants, series)."""
+    at_lower, at_upper = at.coordinates <= work.lower, at.coordinates >= work.upper
+    if not (at_lower.any() or at_upper.any()):
+        return work.free
     movable = work.free.copy()
     for k, gradient in enumerate(at.gradient):
-        pressed = (at.coordinates[k] <= work.lower[k]) & (gradient < 0)
-        pressed |= (at.coordinates[k] >= work.upper[k]) & (gradient > 0)
-        movable[k][pressed] = 0.0
+        movable[k][(at_lower[k] & (gradient < 0)) | (at_upper[k] & (gradient > 0))] = 0.0
     return movable
 
 
