@@ -30,6 +30,7 @@ COMMANDS: dict[str, Entry] = {
     "site": Entry("Make a site, check its configuration, try an export profile.", "site"),
     "overnight": Entry("Run one pass now: pull, stage, gate, fit, load.", "overnight"),
     "serve": Entry("Run passes on the site's schedule until stopped.", "serve"),
+    "gates": Entry("Show which rules ran on what, and what they found.", "gates"),
     "history": Entry("Ask the warehouse a question in SQL.", "history"),
     "lineage": Entry("Trace a result back to the export's bytes.", "lineage"),
 }

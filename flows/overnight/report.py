@@ -30,6 +30,8 @@ class PassReport:
         Plate reads analysed in this pass.
     held_count
         Wells and series that this pass left waiting for a person.
+    gates_off
+        Gates that the recipe of an analysed plate read turns off, by assay: nothing was held against them.
     """
 
     pass_id: str
@@ -41,6 +43,7 @@ class PassReport:
     waiting: tuple[Waiting, ...] = ()
     analysis_ids: tuple[str, ...] = ()
     held_count: int = 0
+    gates_off: tuple[tuple[str, tuple[str, ...]], ...] = ()
 
     def counts(self) -> dict[str, int]:
         """The pass in numbers."""
@@ -52,6 +55,15 @@ class PassReport:
             "plate reads analysed": len(self.analysis_ids),
             "held": self.held_count,
         }
+
+    def gates_off_text(self) -> str:
+        """Which gates were off, as every report of the pass says it: `blank_drift (in assay_a, assay_b)`."""
+        assays_of: dict[str, dict[str, None]] = {}
+        for assay, gates in self.gates_off:
+            for gate in gates:
+                assays_of.setdefault(gate, {})[assay] = None
+        told = [f"{gate} (in {', '.join(assays)})" for gate, assays in sorted(assays_of.items())]
+        return "; ".join(told) or "none"
 
     @property
     def nothing_new(self) -> bool:

@@ -5,7 +5,11 @@ The rows go into the warehouse, the documents below the lake; nothing here judge
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import json
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any, Literal
 
 import pandas as pd
 
@@ -14,9 +18,39 @@ from checks.structure import StructureReport
 from flows.site.durable import write_durably
 from flows.site.layout import Site
 from models.identity import canonical_json, content_id, result_id
+from models.records.assay import SettingValue
 from models.tables import GATE_RUNS
 
 NO_RECIPE = "none"
+BATCH = "batch_analysis_ids"
+"""Key of a document: the plate reads of the batch that its suite ran in, in order, whatever their recipe."""
+
+Condition = Literal["unchanged", "changed", "missing", "unsealed"]
+
+
+@dataclass(frozen=True)
+class KeptRun:
+    """A document as it lies on the disk.
+
+    Attributes
+    ----------
+    sha256
+        Digest of its bytes; None where it is missing.
+    condition
+        Whether it is what was written: its id in the warehouse is a digest of its bytes. `unsealed` where
+        the document does not say which batch it ran in, so that its id cannot be worked out again.
+    document
+        What it says; None unless unchanged or unsealed.
+    """
+
+    sha256: str | None
+    condition: Condition
+    document: Mapping[str, Any] | None
+
+
+def gates_off(limits: Mapping[str, Mapping[str, SettingValue]]) -> tuple[str, ...]:
+    """Names of the gates that these limits, of a recipe or a document, turn off."""
+    return tuple(gate for gate, settings in limits.items() if not settings.get("on", True))
 
 
 def structure_run(report: StructureReport) -> GateRun:
@@ -42,8 +76,8 @@ def keep_runs(site: Site, pass_id: str, runs: Sequence[GateRun], analysis_ids: S
     """
     rows = []
     for run in runs:
-        content = canonical_json(run.document).encode()
-        gate_run_id = result_id("gate_run", run.suite, run.recipe_id, list(analysis_ids), content_id(content))
+        content = canonical_json({**run.document, BATCH: list(analysis_ids)}).encode()
+        gate_run_id = _run_id(run.suite, run.recipe_id, analysis_ids, content)
         path = site.gate_documents / f"{gate_run_id}.json"
         write_durably(path, content, mode=0o444)
         rows.append(
@@ -59,3 +93,35 @@ def keep_runs(site: Site, pass_id: str, runs: Sequence[GateRun], analysis_ids: S
             }
         )
     return pd.DataFrame(rows, columns=GATE_RUNS.column_names)
+
+
+def read_run(site: Site, gate_run_id: str, suite: str, recipe_id: str, file: str) -> KeptRun:
+    """Read a kept document and check it against its id.
+
+    Parameters
+    ----------
+    site
+        The site.
+    gate_run_id, suite, recipe_id, file
+        As its row of `gate_runs` has them.
+    """
+    path = site.root / Path(file)
+    try:
+        content = path.read_bytes()
+    except (FileNotFoundError, IsADirectoryError):
+        return KeptRun(None, "missing", None)
+    sha256 = content_id(content)
+    try:
+        document = json.loads(content)
+        batch = document.get(BATCH)
+    except (ValueError, RecursionError, AttributeError):
+        return KeptRun(sha256, "changed", None)
+    if batch is None:
+        return KeptRun(sha256, "unsealed", document)
+    if not isinstance(batch, list) or _run_id(suite, recipe_id, batch, content) != gate_run_id:
+        return KeptRun(sha256, "changed", None)
+    return KeptRun(sha256, "unchanged", document)
+
+
+def _run_id(suite: str, recipe_id: str, analysis_ids: Sequence[str], content: bytes) -> str:
+    return result_id("gate_run", suite, recipe_id, list(analysis_ids), content_id(content))
