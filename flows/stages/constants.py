@@ -13,7 +13,7 @@ import pandas as pd
 from flows.stages.work import PlateWork
 from models.calibration.activity import activity, nkat_from_u
 from models.calibration.shared_error import add_shared_error
-from models.kinetics.fitting import FitResult
+from models.kinetics.fit_results import FitResult
 from models.kinetics.turnover import turnover
 
 # What is in proportion to product, and so takes the error of the calibration; Km, K0.5 and n do not.

@@ -24,7 +24,8 @@ from flows.stages.grids import fit_grids_of
 from flows.stages.stored_fits import StoredFits, joined, law_chosen, stored_fits
 from flows.stages.whole_curves import WholeCurves, fit_whole_curves
 from flows.stages.work import FittedBatch, GatedBatch
-from models.kinetics.fitting import FitResult, FitSettings, fit_rates
+from models.kinetics.fit_results import FitResult
+from models.kinetics.fitting import FitSettings, fit_rates
 from models.tables import ANALYSES, COMPARISONS, FINDINGS, GRIDS, RATES, SERIES, SHIFTS, WELLS
 
 CLEAR, ALL, CURVES = "clear", "all", "curves"

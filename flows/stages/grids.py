@@ -17,7 +17,8 @@ from flows.frames import rows
 from flows.stages.stored_fits import StoredFits, law_chosen, stored_fits
 from flows.stages.work import GatedBatch, PlateWork
 from models.identity import known, result_id
-from models.kinetics.fitting import FitResult, FitSettings
+from models.kinetics.fit_results import FitResult
+from models.kinetics.fitting import FitSettings
 from models.kinetics.grids import DerivedConstant, fit_grids, ki_from_ic50
 from models.kinetics.laws import law
 from models.kinetics.shift import modulator_shift

@@ -16,7 +16,7 @@ from flows.frames import rows
 from flows.stages.constants import stored_constants
 from flows.stages.work import PlateWork
 from models.identity import result_id
-from models.kinetics.fitting import FitResult
+from models.kinetics.fit_results import FitResult
 from models.tables import CORRELATIONS, ESTIMATES, FIT_POINTS, FITS
 
 Kind = Literal["series", "grid"]

@@ -13,7 +13,7 @@ import pandas as pd
 
 from flows.stages.stored_fits import StoredFits, joined, law_chosen, stored_fits
 from flows.stages.work import GatedBatch
-from models.kinetics.fitting import FIT_COLUMNS, FitResult
+from models.kinetics.fit_results import FIT_COLUMNS, FitResult
 from models.kinetics.influence import rate_influence
 from models.kinetics.progress.comparison import compare_with_rates
 from models.kinetics.progress.fitting import LAW, ProgressOptions, ProgressResult, fit_progress

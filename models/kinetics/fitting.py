@@ -8,7 +8,7 @@ module knows neither gates nor lots.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from itertools import product
 
 import numpy as np
@@ -16,6 +16,14 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from models.kinetics.fit_points import FitPoints, fit_points
+from models.kinetics.fit_results import (
+    CONSTANT_COLUMNS,
+    FIT_COLUMNS,
+    POINT_COLUMNS,
+    REFUSAL_COLUMNS,
+    FitResult,
+    joined,
+)
 from models.kinetics.intervals import profile_intervals
 from models.kinetics.law_fits import LawFit
 from models.kinetics.laws import RateLaw, law
@@ -37,44 +45,8 @@ from models.statistics.sums import sum_rows
 Integers = NDArray[np.int_]
 Flags = NDArray[np.bool_]
 
-FIT_COLUMNS = (
-    "series",
-    "law",
-    "chosen",
-    "converged",
-    "trusted",
-    "distrust",
-    "point_count",
-    "degrees_of_freedom",
-    "weighted_residual_sum",
-    "aicc",
-    "evidence_weight",
-    "lack_of_fit_p",
-    "runs_p",
-)
-POINT_COLUMNS = (
-    "series",
-    "law",
-    "row",
-    "substrate_um",
-    "v_um_per_s",
-    "fitted_um_per_s",
-    "v_sd_um_per_s",
-    "leverage",
-    "studentised_residual",
-)
-CONSTANT_COLUMNS = (
-    "series",
-    "law",
-    "chosen",
-    "constant",
-    "value",
-    "standard_error",
-    "low",
-    "high",
-    "unit",
-)
-REFUSAL_COLUMNS = ("series", "kind", "reason")
+BLOCK = 1024
+"""Series worked on together at most, but for those of one plate."""
 
 
 @dataclass(frozen=True)
@@ -95,40 +67,6 @@ class FitSettings:
         if isinstance(self.loss, str):
             return np.full(series.size, self.loss, dtype=object)
         return np.array(self.loss, dtype=object)[series]
-
-
-@dataclass(frozen=True)
-class FitResult:
-    """Fits of a batch of series.
-
-    Attributes
-    ----------
-    fits
-        A row a series and law that could be fitted: series, law, chosen, converged, trusted, distrust,
-        point_count, degrees_of_freedom, weighted_residual_sum, aicc, evidence_weight, lack_of_fit_p, runs_p.
-    constants
-        A row a constant: series, law, chosen, constant, value, standard_error, low, high, unit. low and high
-        are NaN where the 95 % interval is open.
-    refusals
-        A row a series that no law could be fitted to: series, kind, reason.
-    points
-        A row a rate of the law chosen for its series: series, law, row (the index label in the frame that was
-        fitted), substrate_um, v_um_per_s, fitted_um_per_s, v_sd_um_per_s, leverage, studentised_residual.
-    covariance
-        Covariance of the constants, in the law's order, by series and law; NaN where it is not known.
-    plate_cv
-        Replicate coefficient of variation that the weights used, by plate: of what acts on every rate alike.
-    substrate_cv
-        The same of the substrate in the wells, by plate.
-    """
-
-    fits: pd.DataFrame
-    constants: pd.DataFrame
-    refusals: pd.DataFrame
-    points: pd.DataFrame
-    covariance: Mapping[tuple[int, str], Floats] = field(repr=False)
-    plate_cv: Mapping[int, float]
-    substrate_cv: Mapping[int, float] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)
@@ -166,18 +104,52 @@ def fit_rates(
         If a series names a law that is not in the registry.
     """
     settings = settings or FitSettings()
-    names = sorted({name for laws in series_laws for name in laws}, key=lambda name: law(name).rank)
+    blocks = _blocks(rates, len(series_laws))
+    parts = [
+        _fit_block(rates.iloc[places], places, series_laws, numbers, settings) for places, numbers in blocks
+    ]
+    return parts[0] if len(parts) == 1 else joined(parts)
+
+
+def _blocks(rates: pd.DataFrame, series_count: int) -> list[tuple[Integers, list[int]]]:
+    """Places of rows, and numbers of series, that are worked on together: whole plates, a bounded number of
+    series each, so that memory is bounded and cost in proportion to their number. A series gives the same
+    bits in any block."""
+    places = np.arange(len(rates))
+    if series_count <= BLOCK:
+        return [(places, list(range(series_count)))]
+    series, plate = (rates[name].to_numpy(dtype=np.intp) for name in ("series", "plate"))
+    block_of_series = np.zeros(series_count, dtype=np.intp)
+    member = series >= 0
+    numbers, first = np.unique(series[member], return_index=True)
+    plates, place_of_plate = np.unique(plate[member][first], return_inverse=True)
+    filled = np.cumsum(np.bincount(place_of_plate, minlength=plates.size))
+    block_of_series[numbers] = ((filled - 1) // BLOCK)[place_of_plate]
+    block_of_row = np.where(member, block_of_series[np.maximum(series, 0)], -1)
+    return [
+        (places[block_of_row == block], np.flatnonzero(block_of_series == block).tolist())
+        for block in np.unique(block_of_series)
+    ]
+
+
+def _fit_block(
+    rates: pd.DataFrame,
+    places: Integers,
+    series_laws: Sequence[tuple[str, ...]],
+    numbers: Sequence[int],
+    settings: FitSettings,
+) -> FitResult:
+    """Fit some of the series; `places` are those of their rows in the whole frame."""
+    names = sorted({name for n in numbers for name in series_laws[n]}, key=lambda name: law(name).rank)
     rows = RateRows.of(rates)
-    refused = {
-        number: refusal for number in range(len(series_laws)) if (refusal := rows.refusal(number)) is not None
-    }
+    refused = {number: refusal for number in numbers if (refusal := rows.refusal(number)) is not None}
     eligible: dict[str, list[int]] = {name: [] for name in names}
     reasons: dict[int, dict[str, Refusal]] = {}
-    for number, laws in enumerate(series_laws):
+    for number in numbers:
         if number in refused:
             continue
         counts = rows.counts(number)
-        for name in laws:
+        for name in series_laws[number]:
             refusal = refuse_law(law(name), counts)
             if refusal is None:
                 eligible[name].append(number)
@@ -198,10 +170,10 @@ def fit_rates(
             candidates.setdefault(number, {})[name] = candidate
         for number, refusal in failed.items():
             reasons.setdefault(number, {})[name] = refusal
-    for number in range(len(series_laws)):
+    for number in numbers:
         if number not in candidates and number not in refused:
             refused[number] = _first_reason(series_laws[number], reasons.get(number, {}))
-    return _result(candidates, refused, rows, scatter, _Points(rates.index, rows, points))
+    return _result(candidates, refused, rows, scatter, _Points(rates.index, places, rows, points))
 
 
 def _first_reason(laws: tuple[str, ...], reasons: Mapping[str, Refusal]) -> Refusal:
@@ -315,6 +287,7 @@ class _Points:
     """Rates of every law's fits, and the frame that they came from."""
 
     index: pd.Index
+    places: Integers
     rows: RateRows
     of_fits: Sequence[tuple[str, Packed, FitPoints]]
 
@@ -327,7 +300,7 @@ class _Points:
             row = packed.row[place, column]
             frame = pd.DataFrame(
                 {
-                    "place": self.rows.place[row],
+                    "place": self.places[self.rows.place[row]],
                     "series": packed.series[column],
                     "law": name,
                     "row": self.index[self.rows.place[row]],
@@ -342,8 +315,8 @@ class _Points:
             parts.append(frame)
         if not parts:
             return pd.DataFrame({name: np.empty(0) for name in POINT_COLUMNS})
-        joined = pd.concat(parts, ignore_index=True).sort_values("place", ignore_index=True)
-        return joined[list(POINT_COLUMNS)]
+        in_order = pd.concat(parts, ignore_index=True).sort_values("place", ignore_index=True)
+        return in_order[list(POINT_COLUMNS)]
 
 
 def _result(

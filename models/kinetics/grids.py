@@ -14,7 +14,8 @@ import numpy as np
 import pandas as pd
 
 from models.errors import UnknownName
-from models.kinetics.fitting import FitResult, FitSettings, fit_rates
+from models.kinetics.fit_results import FitResult
+from models.kinetics.fitting import FitSettings, fit_rates
 
 INHIBITION_LAWS = (
     "competitive_inhibition",

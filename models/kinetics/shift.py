@@ -15,7 +15,8 @@ from scipy.optimize import least_squares
 from scipy.stats import f as f_distribution
 
 from models.errors import UnknownName
-from models.kinetics.fitting import FitResult, FitSettings, fit_rates
+from models.kinetics.fit_results import FitResult
+from models.kinetics.fitting import FitSettings, fit_rates
 from models.kinetics.law_fits import fit_law
 from models.kinetics.laws import Conditions, RateLaw, at_levels, law
 from models.kinetics.laws.law import Floats

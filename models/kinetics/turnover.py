@@ -13,7 +13,7 @@ import pandas as pd
 from numpy.typing import NDArray
 from scipy.stats import t as t_distribution
 
-from models.kinetics.fitting import CONSTANT_COLUMNS, FitResult
+from models.kinetics.fit_results import CONSTANT_COLUMNS, FitResult
 from models.kinetics.intervals import LEVEL
 from models.kinetics.laws import law
 

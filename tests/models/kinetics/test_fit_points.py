@@ -102,3 +102,22 @@ def test_no_rates_give_no_points():
     empty = fit_rates(rates().iloc[:0], [("michaelis_menten",)])
     assert empty.points.empty
     assert "studentised_residual" in empty.points.columns
+
+
+def test_blocks_of_plates_give_what_one_block_gives(monkeypatch):
+    frame = pd.concat(
+        [
+            rates(seed=seed).assign(series=lambda f, s=seed: f["series"] + 2 * s, plate=seed)
+            for seed in range(4)
+        ]
+    )
+    laws = [("michaelis_menten", "hill")] * 9
+    whole = fit_rates(frame, laws)
+    monkeypatch.setattr("models.kinetics.fitting.BLOCK", 3)
+    parts = fit_rates(frame.sample(frac=1.0, random_state=1), laws)
+    for name in ("fits", "constants", "refusals"):
+        pd.testing.assert_frame_equal(getattr(whole, name), getattr(parts, name))
+    assert whole.plate_cv == parts.plate_cv
+    np.testing.assert_array_equal(np.sort(parts.points["place"]), np.arange(len(frame)))
+    assert parts.points["place"].is_monotonic_increasing
+    assert set(parts.refusals["series"]) == {8}

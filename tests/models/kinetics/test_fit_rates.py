@@ -10,7 +10,8 @@ from hypothesis import strategies as st
 from scipy.optimize import curve_fit
 
 from models.errors import UnknownName
-from models.kinetics.fitting import FitResult, fit_rates
+from models.kinetics.fit_results import FitResult
+from models.kinetics.fitting import fit_rates
 from models.kinetics.law_fits import fit_law
 from models.kinetics.laws import HILL, MICHAELIS_MENTEN, at_levels
 
