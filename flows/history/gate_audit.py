@@ -108,6 +108,7 @@ def audit_record(site: Site, scope: Scope | None = None) -> AuditRecord:
         recipes=recipes,
         structure=_rules(structure, plate_reads),
         documents=tuple(run.record for run in runs),
+        partial=not whole_pass,
     )
 
 

@@ -35,7 +35,6 @@ CONDITIONS = {
     "unchanged": "as written",
     "changed": "changed since it was written",
     "missing": "missing",
-    "unsealed": "does not name its batch: cannot be checked",
 }
 
 
@@ -153,4 +152,6 @@ def gate_summary(record: AuditRecord) -> RenderableType:
     notes += [
         Text(f"{MARKS['held']} {plain(each.file)}: {CONDITIONS[each.condition]}") for each in record.broken
     ]
+    if record.partial:
+        notes.append(Text("Judged counts the whole runs that these results were part of."))
     return Group(table, Text(""), *notes)

@@ -172,7 +172,14 @@ class PassTimes:
 
 @dataclass(frozen=True)
 class AuditRecord:
-    """What the gates did within a scope."""
+    """What the gates did within a scope.
+
+    Attributes
+    ----------
+    partial
+        Whether the scope is less than whole runs: rows are then those of the runs, which judged other plate
+        reads beside; flags and findings are those of the scope.
+    """
 
     site_name: str
     about: str
@@ -180,6 +187,7 @@ class AuditRecord:
     recipes: tuple[RecipeRecord, ...]
     structure: tuple[RuleRun, ...]
     documents: tuple[DocumentRecord, ...]
+    partial: bool
 
     @property
     def plate_count(self) -> int:

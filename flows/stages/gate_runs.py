@@ -25,7 +25,7 @@ NO_RECIPE = "none"
 BATCH = "batch_analysis_ids"
 """Key of a document: the plate reads of the batch that its suite ran in, in order, whatever their recipe."""
 
-Condition = Literal["unchanged", "changed", "missing", "unsealed"]
+Condition = Literal["unchanged", "changed", "missing"]
 
 
 @dataclass(frozen=True)
@@ -37,10 +37,10 @@ class KeptRun:
     sha256
         Digest of its bytes; None where it is missing.
     condition
-        Whether it is what was written: its id in the warehouse is a digest of its bytes. `unsealed` where
-        the document does not say which batch it ran in, so that its id cannot be worked out again.
+        Whether it is what was written: its id in the warehouse is a digest of its bytes, its recipe and the
+        batch that it names.
     document
-        What it says; None unless unchanged or unsealed.
+        What it says; None unless unchanged.
     """
 
     sha256: str | None
@@ -116,8 +116,6 @@ def read_run(site: Site, gate_run_id: str, suite: str, recipe_id: str, file: str
         batch = document.get(BATCH)
     except (ValueError, RecursionError, AttributeError):
         return KeptRun(sha256, "changed", None)
-    if batch is None:
-        return KeptRun(sha256, "unsealed", document)
     if not isinstance(batch, list) or _run_id(suite, recipe_id, batch, content) != gate_run_id:
         return KeptRun(sha256, "changed", None)
     return KeptRun(sha256, "unchanged", document)

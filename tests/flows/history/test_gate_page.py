@@ -197,7 +197,7 @@ def test_the_same_site_gives_the_same_page(judged: TinySite, record: AuditRecord
     assert gate_page(again) == gate_page(record)
 
 
-@pytest.mark.parametrize("change", ["limit", "cut", "batch"])
+@pytest.mark.parametrize("change", ["limit", "cut", "batch", "no batch", "a list"])
 def test_a_changed_document_is_told_and_what_it_says_is_not_shown(
     judged: TinySite, tampered: Path, change: str
 ) -> None:
@@ -207,8 +207,12 @@ def test_a_changed_document_is_told_and_what_it_says_is_not_shown(
         tampered.write_bytes(content.replace(b'"max_value":0.07', b'"max_value":0.7'))
     elif change == "cut":
         tampered.write_bytes(content[:-20])
-    else:
+    elif change == "batch":
         tampered.write_text(json.dumps({**document, BATCH: ["another"]}))
+    elif change == "no batch":
+        tampered.write_text(json.dumps({key: value for key, value in document.items() if key != BATCH}))
+    else:
+        tampered.write_text("[]")
     record = audit_record(judged.site, Scope(pass_id="pass-2"))
     assert [each.condition for each in record.broken] == ["changed"]
     seen = Reader(gate_page(record)).seen
@@ -220,13 +224,16 @@ def test_a_changed_document_is_told_and_what_it_says_is_not_shown(
     assert "changed since it was written" in " ".join(done.output.split())
 
 
-def test_a_document_without_its_batch_is_said_to_be_unchecked(judged: TinySite, tampered: Path) -> None:
-    document = json.loads(tampered.read_bytes())
-    del document[BATCH]
-    tampered.write_text(json.dumps(document))
-    kept = read_run(judged.site, "an id", "wells.well", "a recipe", f"lake/gate_documents/{tampered.name}")
-    assert kept.condition == "unsealed"
-    assert kept.document == document
+def test_a_document_is_read_only_as_the_run_that_it_is(judged: TinySite) -> None:
+    """Its bytes are unchanged, but another run's row points at it: it vouches for nothing."""
+    (path,) = documents(judged)
+    file = f"lake/gate_documents/{path.name}"
+    run = (path.stem, "wells.well", json.loads(path.read_bytes())["recipe_id"])
+    assert read_run(judged.site, *run, file).condition == "unchanged"
+    assert read_run(judged.site, *run, "lake/gate_documents").condition == "missing"
+    for place, other in enumerate(("0" * 32, "series.series", "another recipe")):
+        kept = read_run(judged.site, *(other if k == place else each for k, each in enumerate(run)), file)
+        assert (kept.condition, kept.document) == ("changed", None)
 
 
 def test_a_missing_document_is_told(tmp_path: Path) -> None:
@@ -242,6 +249,8 @@ def test_scopes_choose_a_pass_an_analysis_or_a_plate(judged: TinySite) -> None:
     assert by_plate.about == "plate TP-2, current results"
     by_id = audit_record(judged.site, Scope(analysis_id=judged.analysis_ids["TP-2"][:8]))
     assert by_id.recipes == by_plate.recipes
+    assert by_plate.partial
+    assert "count the whole runs" in Reader(gate_page(by_plate)).seen
     latest = audit_record(judged.site)
     assert latest.about == "pass pass-2"
     first = audit_record(judged.site, Scope(pass_id="pass-1"))
