@@ -241,7 +241,7 @@ def _why_none(held: _Held) -> str | None:
             return (
                 f"The highest level needed for {_ratio_text(held)} = {held.saturation_limit:.3g} is "
                 f"{_um(needed)}, and the assay's solubility limit, {_um(held.solubility_um)}, reaches "
-                f"{reached:.2g} only"
+                f"{number(reached, digits=2)} only"
             )
     if held.highest_allowed_um <= _lowest_um(held):
         return f"{k} lies too far above the assay's solubility limit, {_um(held.highest_allowed_um)}"
@@ -307,13 +307,13 @@ def _sentence(held: _Held, wells: Sequence[tuple[float, int]], expected: Expecte
     lowest = min(held.lowest_um, wells[0][0])
     reach = []
     if held.saturation_limit is not None and highest > held.highest_um:
-        ratios = [f"{held.highest_ratio(each):.2g}" for each in (held.highest_um, highest)]
+        ratios = [number(held.highest_ratio(each), digits=2) for each in (held.highest_um, highest)]
         reach.append(f"the highest {_ratio_text(held)} from {ratios[0]} to {ratios[1]}")
     if held.low_end_limit is not None:
-        ratios = [f"{each / held.k_um:.2g}" for each in (held.lowest_um, lowest)]
+        ratios = [number(each / held.k_um, digits=2) for each in (held.lowest_um, lowest)]
         reach.append(f"the lowest S/{held.k_text} from {ratios[0]} to {ratios[1]}")
     would = "would" if settles else "would not settle it: they would"
-    told = " and ".join([brings, *(f"bring {each}" if "leave" in brings else each for each in reach)])
+    told = _listed([brings, *(f"bring {each}" if "leave" in brings else each for each in reach)])
     return f"{_levels_text(wells)} {would} {told}. {_basis(held)}"
 
 
@@ -325,7 +325,7 @@ def _basis(held: _Held) -> str:
     allowed = _um(held.highest_allowed_um)
     if held.allowed_by == "solubility":
         return f"{plan}; levels up to the assay's solubility limit, {allowed}, were allowed."
-    reach = f"{_ratio_text(held)} = {held.highest_ratio(held.highest_allowed_um):.2g}"
+    reach = f"{_ratio_text(held)} = {number(held.highest_ratio(held.highest_allowed_um), digits=2)}"
     why = "the highest measured" if held.highest_allowed_um == held.highest_um else reach
     return f"{plan}; the assay states no solubility_limit_um, so levels up to {allowed} ({why}) were allowed."
 
@@ -333,12 +333,12 @@ def _basis(held: _Held) -> str:
 def _levels_text(wells: Sequence[tuple[float, int]]) -> str:
     counts = {count for _, count in wells}
     if len(counts) > 1:
-        each = [f"{number(level, digits=4)} µM in {count} wells" for level, count in wells]
+        each = [f"{level:.6g} µM in {count} wells" for level, count in wells]
         return f"Levels of {_listed(each)}"
     count = counts.pop()
     many = len(wells) > 1
     how = f"in {FOLD_WORDS[count]}" if count in FOLD_WORDS else f"in {count} wells{' each' if many else ''}"
-    levels = _listed([number(level, digits=4) for level, _ in wells])
+    levels = _listed([f"{level:.6g}" for level, _ in wells])
     return f"{'Levels' if many else 'A level'} of {levels} µM {how}"
 
 
