@@ -96,16 +96,7 @@ def fit_points(packed: Packed, weighted: WeightedFit, level: Floats) -> FitPoint
 
 def _variance_of_fit(law: RateLaw, packed: Packed, constants: Floats, covariance: Floats) -> Floats:
     """Variance of each fitted rate, shape (levels, series)."""
-    shape, slopes = law.evaluate(packed.conditions, tuple(constants[law.first_shape :]))
-    amplitude = 1.0 if law.amplitude is None else constants[0]
-    gradient = [
-        amplitude * slope / value if constant.positive else amplitude * slope
-        for constant, value, slope in zip(
-            law.shape_constants, constants[law.first_shape :], slopes, strict=True
-        )
-    ]
-    if law.amplitude is not None:
-        gradient = [shape, *gradient]
+    gradient = law.gradient(packed.conditions, tuple(constants))
     total = np.zeros_like(packed.rate)
     for j, left in enumerate(gradient):
         for k, right in enumerate(gradient):

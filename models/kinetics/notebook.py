@@ -1,18 +1,19 @@
 """Fits of arrays and data frames for notebooks: one set of rates in, a typed result out.
 
-The same engine as the overnight pass, without plates or gates. This module reads no files and draws nothing:
-a result hands out its table and its curve.
+The same engine as the overnight pass, without plates or gates. This module reads no files; a result hands out
+its table, its curve and its figure.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
-from typing import Literal
+from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 import pandas as pd
 from numpy.typing import ArrayLike
+from scipy.stats import t as t_distribution
 
 from models.errors import HalfsatError
 from models.kinetics.fitting import reason_to_distrust
@@ -26,6 +27,9 @@ from models.kinetics.refusals import Counts, Refusal, RefusalKind, refuse_fit, r
 from models.kinetics.replicate_weights import Scatter, ScatterSource, fit_with_weights, plate_scatter
 from models.kinetics.robust import Loss
 from models.kinetics.selection import UNITS_OF_GRACE, aicc, evidence_weights
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
 
 Weights = Literal["equal", "replicates"]
 
@@ -67,6 +71,10 @@ class Fit:
     candidates
         A row a law that could be fitted, the simplest first: law, chosen, aicc, evidence_weight, trusted,
         distrust.
+    conditions, rates
+        What was fitted.
+    rate_unit, concentration_unit
+        Units of the data.
     """
 
     law: RateLaw
@@ -79,6 +87,9 @@ class Fit:
     degrees_of_freedom: int
     candidates: pd.DataFrame
     conditions: Conditions = field(repr=False)
+    rates: Floats = field(repr=False)
+    rate_unit: str
+    concentration_unit: str
 
     def table(self) -> pd.DataFrame:
         """Constants by name, with value, standard_error, low, high and unit."""
@@ -119,8 +130,11 @@ class Fit:
         """
         substrate = self.conditions.substrate_um[:, 0]
         modulator = None if self.conditions.modulator_um is None else self.conditions.modulator_um[:, 0]
-        enzyme = None if self.conditions.enzyme_um is None else float(self.conditions.enzyme_um[0, 0])
-        steps = np.linspace(0.0, 1.0, points)
+        enzyme = None if self.conditions.enzyme_um is None else self._enzyme()
+        # Half of them evenly along a straight axis, half along a logarithmic one.
+        even = points - points // 2
+        low = np.geomspace(1e-3, 1.0, points // 2, endpoint=False)
+        steps = np.sort(np.concatenate([np.linspace(0.0, 1.0, even), low]))
         if modulator is None:
             levels = substrate.max() * steps
             return pd.DataFrame({"substrate": levels, "modulator": np.nan, "rate": self.rate(levels)})
@@ -130,6 +144,84 @@ class Fit:
             pairs = [(substrate.max() * steps, np.full(points, level)) for level in np.unique(modulator)]
         s, i = (np.concatenate(each) for each in zip(*pairs, strict=True))
         return pd.DataFrame({"substrate": s, "modulator": i, "rate": self.rate(s, i, enzyme)})
+
+    def band(self, points: int = 200) -> pd.DataFrame:
+        """`curve` with the ends of the fitted rate's 95 % confidence interval: columns low and high.
+
+        By the derivatives of the rate and the covariance of the constants (delta method: Bates and Watts
+        1988, doi:10.1002/9780470316757, section 2.3); NaN where the covariance is not known.
+        """
+        curve = self.curve(points)
+        enzyme = None if self.conditions.enzyme_um is None else np.full(len(curve), self._enzyme())
+        substrate = curve["substrate"].to_numpy(dtype=np.float64)
+        modulator = None if curve["modulator"].isna().all() else curve["modulator"].to_numpy(np.float64)
+        conditions = at_levels(
+            substrate[:, None],
+            None if modulator is None else modulator[:, None],
+            None if enzyme is None else enzyme[:, None],
+        )
+        values = tuple(np.array([value]) for value in self.constants["value"])
+        with np.errstate(all="ignore"):
+            gradient = np.stack([column[:, 0] for column in self.law.gradient(conditions, values)])
+            variance = np.einsum("ip,ij,jp->p", gradient, self.covariance, gradient)
+            reach = t_distribution.ppf(0.975, self.degrees_of_freedom) * np.sqrt(variance)
+        return curve.assign(low=curve["rate"] - reach, high=curve["rate"] + reach)
+
+    def figure(self, log_substrate: bool = False, theme: str = "light") -> Figure:
+        """Rates with the fitted law, its 95 % band and the residuals beneath.
+
+        Parameters
+        ----------
+        log_substrate
+            Whether the horizontal axis is logarithmic.
+        theme
+            light, dark or print.
+
+        Examples
+        --------
+        >>> from models.kinetics import fit_michaelis_menten
+        >>> found = fit_michaelis_menten([10, 20, 40, 80, 160], [11, 20, 33, 50, 67])
+        >>> figure = found.figure()
+        >>> [axes.get_ylabel() for axes in figure.axes]
+        ['rate, umol/L/s', 'residual']
+        """
+        # Here, since drawing takes a second to import and most fits are never drawn.
+        from models.figures.kinetics import FittedLine, draw_rates
+        from models.figures.theme import THEMES
+
+        curve = self.band()
+        substrate = self.conditions.substrate_um[:, 0]
+        modulator = None if self.conditions.modulator_um is None else self.conditions.modulator_um[:, 0]
+        fitted = self.rate(
+            substrate, modulator, None if self.conditions.enzyme_um is None else self._enzyme()
+        )
+        along = "substrate" if modulator is None or np.unique(substrate).size > 1 else "modulator"
+        several = along == "substrate" and modulator is not None
+        lines = [
+            FittedLine(
+                part[along].to_numpy(dtype=np.float64),
+                part["rate"].to_numpy(dtype=np.float64),
+                part["low"].to_numpy(dtype=np.float64),
+                part["high"].to_numpy(dtype=np.float64),
+                f"{level:g} {self.concentration_unit}" if several else "",
+            )
+            for level, part in (curve.groupby("modulator") if several else [(0.0, curve)])
+        ]
+        return draw_rates(
+            substrate if along == "substrate" or modulator is None else modulator,
+            self.rates,
+            fitted,
+            lines,
+            x_label=along,
+            x_unit=self.concentration_unit,
+            rate_unit=self.rate_unit,
+            logarithmic=log_substrate,
+            theme=THEMES[theme],
+        )
+
+    def _enzyme(self) -> float:
+        assert self.conditions.enzyme_um is not None
+        return float(self.conditions.enzyme_um[0, 0])
 
 
 def fit_michaelis_menten(substrate: ArrayLike, rate: ArrayLike) -> Fit:
@@ -399,4 +491,7 @@ def _result(fitted: Sequence[_Fitted], packed: Packed, concentration_unit: str, 
         degrees_of_freedom=int(fit.degrees_of_freedom[0]),
         candidates=candidates,
         conditions=packed.conditions,
+        rates=packed.rate[:, 0],
+        rate_unit=rate_unit,
+        concentration_unit=concentration_unit,
     )

@@ -210,6 +210,18 @@ class RateLaw:
         shape, _ = self.evaluate(conditions, constants[self.first_shape :])
         return shape if self.amplitude is None else constants[0] * shape
 
+    def gradient(self, conditions: Conditions, constants: tuple[Array, ...]) -> tuple[Array, ...]:
+        """Derivatives of the rate by each constant itself, in order, each (levels, series)."""
+        shape, slopes = self.evaluate(conditions, constants[self.first_shape :])
+        amplitude = 1.0 if self.amplitude is None else constants[0]
+        by_shape = tuple(
+            amplitude * slope / value if constant.positive else amplitude * slope
+            for constant, value, slope in zip(
+                self.shape_constants, constants[self.first_shape :], slopes, strict=True
+            )
+        )
+        return by_shape if self.amplitude is None else (shape, *by_shape)
+
     def limits(self, conditions: Conditions, weights: Floats) -> tuple[Floats, Floats]:
         """Lower and upper limit of each shape constant's coordinate, shape (constants, series)."""
         lower = np.empty((len(self.shape_constants), weights.shape[1]))
