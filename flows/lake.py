@@ -5,10 +5,14 @@ The schema is that of models.tables. Which files belong to which batch, ledger a
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import hashlib
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Literal
 
+import numpy as np
 import pandas as pd
 import pyarrow as pa
 import pyarrow.parquet as pq
@@ -16,13 +20,16 @@ import pyarrow.parquet as pq
 from flows.site.durable import write_durably
 from flows.site.layout import Site
 from models.errors import SiteError
-from models.identity import content_id
-from models.tables import table
+from models.identity import canonical_json, content_id
+from models.tables import Table, table
 
 # Earlier versions of a file lie below this folder, where no view over the lake looks.
 EARLIER = "earlier"
 _ROWS_A_GROUP = 122_880
 _READ_ONLY = 0o444
+_DIGESTS_KEY = b"halfsat.columns"
+_DIGEST_LENGTH = 16
+_REBUILD = "make it again from raw/: halfsat rebuild"
 
 
 @dataclass(frozen=True)
@@ -35,6 +42,9 @@ class LakeFile:
         Where it is, below the site's folder, with forward slashes.
     sha256
         Digest of its bytes.
+    columns
+        Digest of each column's values (`column_digests`): the same rows have the same, whatever release of
+        the Parquet library wrote the bytes. Empty for files of before there were any.
     """
 
     path: str
@@ -42,6 +52,7 @@ class LakeFile:
     table_name: str
     row_count: int
     byte_count: int
+    columns: Mapping[str, str] = field(default_factory=dict)
 
 
 def encode_rows(table_name: str, frame: pd.DataFrame) -> bytes:
@@ -54,9 +65,11 @@ def encode_rows(table_name: str, frame: pd.DataFrame) -> bytes:
     KeyError, pyarrow.ArrowInvalid
         If the rows do not fit the table.
     """
+    arrow = table(table_name).to_arrow(frame)
+    digests = canonical_json(column_digests(arrow)).encode()
     sink = pa.BufferOutputStream()
     pq.write_table(
-        table(table_name).to_arrow(frame),
+        arrow.replace_schema_metadata({_DIGESTS_KEY: digests}),
         sink,
         compression="zstd",
         compression_level=3,
@@ -64,6 +77,30 @@ def encode_rows(table_name: str, frame: pd.DataFrame) -> bytes:
         store_schema=True,
     )
     return sink.getvalue().to_pybytes()
+
+
+def column_digests(rows: pa.Table) -> dict[str, str]:
+    """Digest of each column's values in their order: first 16 hexadecimal digits of a SHA-256.
+
+    Depends on the values alone, not on how Arrow or Parquet lay them out.
+    """
+    return {name: _column_digest(rows.column(name)) for name in rows.column_names}
+
+
+def _column_digest(column: pa.ChunkedArray[pa.Scalar[pa.DataType]]) -> str:
+    whole = pa.concat_arrays(column.chunks) if column.num_chunks else pa.array([], column.type)
+    known = np.asarray(whole.is_valid())
+    hashed = hashlib.sha256(f"{len(whole)}:".encode())
+    hashed.update(np.packbits(known).tobytes())
+    if pa.types.is_string(whole.type) or pa.types.is_large_string(whole.type):
+        encoded = whole.dictionary_encode()
+        hashed.update(canonical_json(encoded.dictionary.to_pylist()).encode())
+        hashed.update(np.asarray(encoded.indices.fill_null(-1)).astype("<i4").tobytes())
+    elif pa.types.is_floating(whole.type):
+        hashed.update(np.asarray(whole.fill_null(0.0)).astype("<f8").tobytes())
+    else:
+        hashed.update(np.asarray(whole.cast(pa.int64()).fill_null(0)).astype("<i8").tobytes())
+    return hashed.hexdigest()[:_DIGEST_LENGTH]
 
 
 def write_rows(site: Site, table_name: str, file_stem: str, frame: pd.DataFrame) -> LakeFile:
@@ -95,7 +132,7 @@ def write_rows(site: Site, table_name: str, file_stem: str, frame: pd.DataFrame)
 def write_encoded(site: Site, table_name: str, file_stem: str, content: bytes, row_count: int) -> LakeFile:
     """Write Parquet bytes from `encode_rows`; otherwise as `write_rows`."""
     path = lake_path(site, table_name, file_stem)
-    kept = LakeFile(_below(site, path), content_id(content), table_name, row_count, len(content))
+    kept = described(_below(site, path), table_name, content, row_count)
     try:
         present = path.read_bytes()
     except FileNotFoundError:
@@ -108,6 +145,30 @@ def write_encoded(site: Site, table_name: str, file_stem: str, content: bytes, r
     return kept
 
 
+def described(path: str, table_name: str, content: bytes, row_count: int) -> LakeFile:
+    """What a file with these bytes would be, without writing it."""
+    digests = _kept_digests(pq.read_metadata(pa.BufferReader(content)))
+    return LakeFile(path, content_id(content), table_name, row_count, len(content), digests)
+
+
+def restore(site: Site, file: LakeFile, content: bytes, *, later: bool) -> None:
+    """Put the bytes of a file that was lost or damaged back where they belong.
+
+    Parameters
+    ----------
+    file
+        The file as it is recorded.
+    content
+        Its bytes.
+    later
+        Whether a later version of it lies, or will lie, in its place: then this one goes below `earlier/`.
+    """
+    path = site.root / file.path
+    if later:
+        path = _earlier_path(site, path, content_id(content))
+    write_durably(path, content, mode=_READ_ONLY)
+
+
 def read_rows(site: Site, table_name: str, file_stem: str) -> pd.DataFrame:
     """Rows of one file, in the table's columns.
 
@@ -116,26 +177,79 @@ def read_rows(site: Site, table_name: str, file_stem: str) -> pd.DataFrame:
     SiteError
         If the file is missing or damaged.
     """
-    frame: pd.DataFrame = _read(lake_path(site, table_name, file_stem)).to_pandas()
+    path = lake_path(site, table_name, file_stem)
+    frame: pd.DataFrame = conformed(table(table_name), _read(path), str(path)).to_pandas()
     return frame
 
 
-def read_arrow(site: Site, path: str, sha256: str) -> pa.Table:
+def read_arrow(site: Site, path: str, sha256: str, table_name: str | None = None) -> pa.Table:
     """Rows of the file that was at `path` when it had this digest, wherever it lies now.
+
+    Parameters
+    ----------
+    table_name
+        The table whose columns the rows shall have; None leaves them as they were written.
 
     Raises
     ------
     SiteError
-        If no file with that digest is there any more.
+        If no file with that digest is there any more, or its rows cannot be given the table's columns.
     """
     found = locate(site, path, sha256)
     if found is None:
         raise SiteError(
             f"the lake file {path} is missing or has changed",
             where=str(site.root),
-            remedy="bring it back from a backup, or have the lake rebuilt from raw/",
+            remedy=_REBUILD,
         )
-    return _read(found)
+    rows = _read(found)
+    return rows if table_name is None else conformed(table(table_name), rows, path)
+
+
+def conformed(declared: Table, rows: pa.Table, where: str) -> pa.Table:
+    """Rows that an earlier version wrote, with exactly the columns that the table has now.
+
+    A column that was not there yet is NULL in every row; one that the table has no more is left out.
+
+    Parameters
+    ----------
+    declared
+        The table as it is now.
+    rows
+        The rows as they were written.
+    where
+        The file, as a message names it.
+
+    Raises
+    ------
+    SiteError
+        If a column that must be known was not there yet, or has values that do not fit its kind.
+    """
+    schema = declared.arrow_schema()
+    if rows.schema.equals(schema):
+        return rows
+    columns = []
+    for column in schema:
+        if column.name in rows.column_names:
+            found = rows.column(column.name)
+        else:
+            found = pa.chunked_array([pa.nulls(rows.num_rows, column.type)])
+        try:
+            found = found.cast(column.type)
+        except (pa.ArrowInvalid, pa.ArrowNotImplementedError) as error:
+            raise SiteError(
+                f"{declared.name}.{column.name} was written as {found.type} and is {column.type} now",
+                where=where,
+                remedy=_REBUILD,
+            ) from error
+        if found.null_count and not column.nullable:
+            raise SiteError(
+                f"{declared.name}.{column.name} must be known now; {found.null_count} rows do not have it",
+                where=where,
+                remedy=_REBUILD,
+            )
+        columns.append(found)
+    return pa.Table.from_arrays(columns, schema=schema)
 
 
 def locate(site: Site, path: str, sha256: str) -> Path | None:
@@ -168,9 +282,17 @@ def describe(site: Site, table_name: str, file_stem: str) -> LakeFile:
         If it is missing or damaged.
     """
     path = lake_path(site, table_name, file_stem)
-    rows = _metadata(path).num_rows
+    metadata = _metadata(path)
     content = path.read_bytes()
-    return LakeFile(_below(site, path), content_id(content), table_name, rows, len(content))
+    digests = _kept_digests(metadata)
+    return LakeFile(
+        _below(site, path), content_id(content), table_name, metadata.num_rows, len(content), digests
+    )
+
+
+def _kept_digests(metadata: pq.FileMetaData) -> dict[str, str]:
+    kept = (metadata.metadata or {}).get(_DIGESTS_KEY)
+    return {} if kept is None else {str(name): str(each) for name, each in json.loads(kept).items()}
 
 
 def _metadata(path: Path) -> pq.FileMetaData:
@@ -190,7 +312,7 @@ def _read(path: Path) -> pa.Table:
 
 def _unreadable(path: Path, error: Exception) -> SiteError:
     what = "the lake file is missing" if isinstance(error, FileNotFoundError) else "the lake file is damaged"
-    return SiteError(what, where=str(path), remedy="have the lake rebuilt from raw/")
+    return SiteError(what, where=str(path), remedy=_REBUILD)
 
 
 def _earlier_path(site: Site, path: Path, sha256: str) -> Path:
