@@ -87,6 +87,7 @@ def show_pass(screen: Console, site: Site, report: PassReport) -> None:
     _show_waiting(screen, report)
     if report.analysis_ids:
         _show_held(screen, held)
+        screen.print(Text(f"Gates off: {report.gates_off_text()}"))
 
 
 def show_lots(screen: Console, site: Site) -> None:

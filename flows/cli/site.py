@@ -12,12 +12,14 @@ from rich.text import Text
 
 from checks.gates import resolve_limits
 from flows.cli.options import site_option
+from flows.cli.prove import prove
 from flows.cli.root import EXIT_ATTENTION
 from flows.cli.tables import console, heading, plain_table
 from flows.ledger import append
 from flows.site.configuration import Configuration, load_configuration, schemas
 from flows.site.layout import create_site, open_site
 from flows.site.shipped import shipped
+from flows.stages.gate_runs import gates_off
 from flows.stages.read import TrialPlate, TrialReport, choose_profile, trial_report
 from flows.wording import number
 from models.errors import ConfigurationError
@@ -28,6 +30,9 @@ from models.kinetics.laws import law
 @click.group("site")
 def command() -> None:
     """Make a site, check its configuration, try an export profile."""
+
+
+command.add_command(prove)
 
 
 @command.command("new")
@@ -94,8 +99,15 @@ def check_names(configuration: Configuration) -> None:
 
 
 def _gates_off(configuration: Configuration) -> list[str]:
-    limits = resolve_limits(configuration.gates, {})
-    return [name for name, settings in limits.items() if not settings["on"]]
+    """Gates off for the whole site, then those that only an assay turns off, with its name."""
+    everywhere = gates_off(resolve_limits(configuration.gates, {}))
+    of_assays = [
+        f"{gate} (in {name})"
+        for name, assay in configuration.assays.items()
+        for gate in gates_off(resolve_limits(configuration.gates, assay.gates))
+        if gate not in everywhere
+    ]
+    return [*everywhere, *of_assays]
 
 
 @command.command("try-profile")

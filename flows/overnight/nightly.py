@@ -22,7 +22,7 @@ from flows.site.lock import pass_lock
 from flows.site.recipes import code_version, keep_recipe
 from flows.stages.fit import fit_batch
 from flows.stages.gate import gate_batch
-from flows.stages.gate_runs import keep_runs
+from flows.stages.gate_runs import gates_off, keep_runs
 from flows.stages.load import load_results, repair
 from flows.stages.lots import current_estimates, lot_values
 from flows.stages.publish import publish_results
@@ -102,6 +102,7 @@ def run_pass(site: Site, clock: Clock, run: Run = run_plainly) -> PassReport:
         ready, waiting = find_pending(site, night.configuration)
         analysis_ids: list[str] = []
         held_count = 0
+        off: list[tuple[str, tuple[str, ...]]] = []
         for part in _batches(ready, night.configuration.settings.plates_per_batch):
             works, unconverted = load_work(night.site, part)
             waiting += unconverted
@@ -112,6 +113,7 @@ def run_pass(site: Site, clock: Clock, run: Run = run_plainly) -> PassReport:
             run("load", _load_batch, night, fitted)
             analysis_ids += [work.analysis_id for work in fitted.plates]
             held_count += _held(fitted)
+            off += [(work.recipe.assay_name, gates_off(work.recipe.limits)) for work in fitted.plates]
         finished_at = clock()
         if staged.files or analysis_ids:
             load_results(
@@ -138,6 +140,7 @@ def run_pass(site: Site, clock: Clock, run: Run = run_plainly) -> PassReport:
         waiting=tuple(waiting),
         analysis_ids=tuple(analysis_ids),
         held_count=held_count,
+        gates_off=tuple(dict.fromkeys(off)),
     )
 
 

@@ -22,11 +22,12 @@ from checks.verdicts import (
 from flows.stages.gate import gate_input, limits_by_recipe
 from flows.stages.grids import fit_grids_of
 from flows.stages.stored_fits import StoredFits, joined, law_chosen, stored_fits
+from flows.stages.suggestions import suggest_levels
 from flows.stages.whole_curves import WholeCurves, fit_whole_curves
 from flows.stages.work import FittedBatch, GatedBatch
 from models.kinetics.fit_results import FitResult
 from models.kinetics.fitting import FitSettings, fit_rates
-from models.tables import ANALYSES, COMPARISONS, FINDINGS, GRIDS, RATES, SERIES, SHIFTS, WELLS
+from models.tables import ANALYSES, COMPARISONS, FINDINGS, GRIDS, RATES, SERIES, SHIFTS, SUGGESTIONS, WELLS
 
 CLEAR, ALL, CURVES = "clear", "all", "curves"
 STANDINGS_FITTED = {CLEAR: ("clear",), ALL: ("clear", "held")}
@@ -58,6 +59,8 @@ def fit_batch(gated: GatedBatch) -> FittedBatch:
     by_series = _assess("series", gated, series, stored, curves)
     findings = _together(gated.findings, without_consequences(by_series.findings))
     series["standing"] = series_standings(series, findings, gated.wells).to_numpy()
+    assays = {work.analysis_id: work.recipe.assay for work in rated.plates}
+    suggestions = suggest_levels(series, stored.estimates, findings, gated.wells, stored.points, assays)
     grids = fit_grids_of(gated, fitted.stored.estimates, findings, STANDINGS_FITTED)
     stored = joined([stored, *grids.stored])
     standing = plate_read_standing(gated.wells, pd.concat([series, grids.rows]), findings)
@@ -81,6 +84,7 @@ def fit_batch(gated: GatedBatch) -> FittedBatch:
         **stored.tables(),
         COMPARISONS.name: curves.comparisons[COMPARISONS.column_names],
         SHIFTS.name: grids.shifts[SHIFTS.column_names],
+        SUGGESTIONS.name: suggestions[SUGGESTIONS.column_names],
     }
     return FittedBatch(rated.plates, tables, (*gated.runs, *by_series.runs))
 

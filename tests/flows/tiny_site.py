@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
-from datetime import UTC, datetime, timedelta
+from datetime import datetime, timedelta
 from pathlib import Path
 
 import pandas as pd
@@ -26,15 +26,21 @@ from models.identity import result_id
 from models.records.assay import Assay
 from models.records.export_profile import ExportProfile
 from models.tables import TABLES, Table
-
-KM_UM, VMAX_UM_PER_S = 50.0, 0.2
-LEVELS_UM = (10.0, 20.0, 80.0, 320.0)
-LOTS = {"A": ("QX-7", "sample"), "B": ("REF-1", "reference")}
-READS, INTERVAL_S = 5, 10.0
-SIGNAL_PER_UM = 0.01
-FIRST_NIGHT = datetime(2026, 3, 2, 21, 0, tzinfo=UTC)
-PLATES = ("TP-1", "TP-2")
-HELD = ("TP-2", "A4")
+from tests.flows.tiny_fits import add_series
+from tests.flows.tiny_plates import (
+    FIRST_NIGHT,
+    HELD,
+    INTERVAL_S,
+    KM_UM,
+    LOTS,
+    PLATES,
+    READS,
+    SIGNAL_PER_UM,
+    all_wells,
+    rate_um_per_s,
+    signal,
+    substrate_um,
+)
 
 
 @dataclass(frozen=True)
@@ -150,23 +156,6 @@ def export_text(plate: str) -> bytes:
     return ("\n".join(lines) + "\n").encode()
 
 
-def all_wells() -> list[str]:
-    return [f"{row}{column}" for row in LOTS for column in range(1, len(LEVELS_UM) + 1)] + ["C1"]
-
-
-def signal(plate: str, well: str, time_s: float) -> float:
-    rate = 0.0 if well == "C1" else rate_um_per_s(substrate_um(well))
-    return round(0.1 + PLATES.index(plate) * 0.001 + rate * SIGNAL_PER_UM * time_s, 9)
-
-
-def substrate_um(well: str) -> float:
-    return 0.0 if well == "C1" else LEVELS_UM[int(well[1:]) - 1]
-
-
-def rate_um_per_s(substrate: float) -> float:
-    return VMAX_UM_PER_S * substrate / (KM_UM + substrate)
-
-
 def staged_tables(
     made: TinySite, pulled: Sequence[PulledFile], plate: str, pass_id: str
 ) -> dict[str, pd.DataFrame]:
@@ -276,7 +265,7 @@ def analysed_tables(
     for well in all_wells():
         _add_well(made, given, plate, analysis_id, well)
     for row in LOTS:
-        _add_series(made, given, plate, analysis_id, row)
+        add_series(made, given, plate, analysis_id, row)
     if plate == HELD[0]:
         given["findings"] += [
             _finding(
@@ -331,159 +320,6 @@ def _add_well(
             "missing_count": 0,
         }
     )
-
-
-def _add_series(
-    made: TinySite, given: dict[str, list[dict[str, object]]], plate: str, analysis_id: str, row: str
-) -> None:
-    lot, role = LOTS[row]
-    series_id = made.series_ids[plate, lot]
-    clear = 3 if (plate, row) == (HELD[0], HELD[1][0]) else 4
-    given["series"].append(
-        {
-            "series_id": series_id,
-            "analysis_id": analysis_id,
-            "lot": lot,
-            "role": role,
-            "enzyme_nm": 5.0,
-            "well_count": 4,
-            "clear_well_count": clear,
-            "level_count": clear,
-            "lowest_substrate_um": LEVELS_UM[0],
-            "highest_substrate_um": LEVELS_UM[clear - 1],
-            "law": "michaelis_menten",
-            "standing": "clear",
-        }
-    )
-    for law in ("michaelis_menten", "hill"):
-        for wells in ("clear", "all"):
-            _add_fit(made, given, plate, lot, law, wells, clear if wells == "clear" else 4)
-    ids = {"analysis_id": analysis_id, "fit_id": made.fit_ids[plate, lot]}
-    for column, level in enumerate(LEVELS_UM[:clear], start=1):
-        rate = {"v_um_per_s": rate_um_per_s(level), "fitted_um_per_s": rate_um_per_s(level)}
-        point = {"well": f"{row}{column}", "substrate_um": level, "v_sd_um_per_s": 0.001, "leverage": 0.5}
-        given["fit_points"].append({**ids, **rate, **point})
-    given["correlations"].append(
-        {**ids, "constant": "vmax", "other_constant": "km", "correlation": 0.9},
-    )
-    given["comparisons"].append(
-        {
-            "series_id": series_id,
-            "analysis_id": analysis_id,
-            "km_ratio": 1.02,
-            "km_ratio_low": 0.95,
-            "km_ratio_high": 1.1,
-            "vmax_ratio": 1.01,
-            "vmax_ratio_low": 0.99,
-            "vmax_ratio_high": 1.03,
-            "p_value": 0.6,
-        }
-    )
-    if (plate, row) == (HELD[0], HELD[1][0]):
-        level = {"place": 1, "substrate_um": 400.0, "replicates": 3, "settles": True}
-        why = {"gates": "saturation_not_reached", "allowed_by": "reach", "highest_allowed_um": 400.0}
-        given["suggestions"].append(
-            {
-                "series_id": series_id,
-                "analysis_id": analysis_id,
-                **level,
-                **why,
-                "constant": "km",
-                "sentence": "400 µM in triplicate would settle it.",
-            }
-        )
-    made.grid_ids[plate, lot] = _add_grid(given, analysis_id, lot, role)
-
-
-def _add_grid(given: dict[str, list[dict[str, object]]], analysis_id: str, lot: str, role: str) -> str:
-    grid_id = result_id("grid", analysis_id, lot)
-    given["grids"].append(
-        {
-            "grid_id": grid_id,
-            "analysis_id": analysis_id,
-            "lot": lot,
-            "role": role,
-            "enzyme_nm": 5.0,
-            "modulator": "an inhibitor",
-            "well_count": 4,
-            "clear_well_count": 4,
-            "substrate_level_count": 4,
-            "modulator_level_count": 1,
-            "refusal": "one modulator level only",
-            "standing": "held",
-        }
-    )
-    given["shifts"].append(
-        {
-            "grid_id": grid_id,
-            "analysis_id": analysis_id,
-            "law": "michaelis_menten",
-            "constants": "km",
-            "f_value": 1.0,
-            "numerator_degrees": 1,
-            "denominator_degrees": 10,
-            "p_value": 0.34,
-        }
-    )
-    return grid_id
-
-
-def _add_fit(
-    made: TinySite,
-    given: dict[str, list[dict[str, object]]],
-    plate: str,
-    lot: str,
-    law: str,
-    wells: str,
-    points: int,
-) -> None:
-    analysis_id, series_id = made.analysis_ids[plate], made.series_ids[plate, lot]
-    fit_id = result_id("fit", series_id, law, wells)
-    chosen = law == "michaelis_menten"
-    given["fits"].append(
-        {
-            "fit_id": fit_id,
-            "series_id": series_id,
-            "analysis_id": analysis_id,
-            "law": law,
-            "wells": wells,
-            "chosen": chosen,
-            "converged": True,
-            "trusted": chosen,
-            "distrust": None if chosen else "too few levels",
-            "point_count": points,
-            "degrees_of_freedom": points - 2,
-            "weighted_residual_sum": 0.5,
-        }
-    )
-    # Plates differ by a known step, so that moving ranges and means have known values.
-    km = KM_UM + 2.0 * PLATES.index(plate)
-    for constant, value, unit in (("km", km, "umol/L"), ("vmax", VMAX_UM_PER_S, "umol/L/s")):
-        estimate_id = result_id("estimate", fit_id, constant)
-        if chosen and wells == "clear":
-            made.fit_ids[plate, lot] = fit_id
-            if constant == "km":
-                made.estimate_ids[plate, lot] = estimate_id
-        given["estimates"].append(
-            {
-                "estimate_id": estimate_id,
-                "fit_id": fit_id,
-                "series_id": series_id,
-                "analysis_id": analysis_id,
-                "assay": "tiny",
-                "lot": lot,
-                "law": law,
-                "wells": wells,
-                "chosen": chosen,
-                "constant": constant,
-                "value": value,
-                "standard_error": value / 20,
-                "low": value * 0.9,
-                "high": None if constant == "vmax" else value * 1.1,
-                "unit": unit,
-                "assay_relative_error": 0.0,
-            }
-        )
 
 
 def lot_tables(made: TinySite, pass_id: str, at: datetime) -> dict[str, pd.DataFrame]:

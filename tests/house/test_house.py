@@ -108,6 +108,7 @@ def test_readme_has_exactly_two_one_line_set_up_commands() -> None:
 def test_units_parse_and_stand_in_the_name(table_name: str, column: Column) -> None:
     endings = {
         "umol/L/s": "_um_per_s",
+        "1/s": "_per_s",
         "umol/L": "_um",
         "nmol/L": "_nm",
         "ng/mL": "_ng_per_ml",

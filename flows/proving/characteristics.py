@@ -1,0 +1,318 @@
+"""How often each gate holds what is clean, at which size it catches a fault, and what change can be seen.
+
+Simulated plates go through the stages of a pass, a few dozen at a time; nothing is stored.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from concurrent.futures import ProcessPoolExecutor
+from dataclasses import dataclass
+from multiprocessing import get_context
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+from scipy.optimize import isotonic_regression
+from scipy.stats import norm
+
+from checks.gates import GATES
+from flows.proving.bench import ProvingBench
+from flows.proving.trials import Site, Struck, Trial, for_bench
+from flows.stages.fit import fit_batch
+from flows.stages.gate import gate_batch
+from flows.stages.rate import rate_batch
+from flows.stages.work import FittedBatch, RatedBatch
+from models.plates import plate_format, well_position
+from models.simulation import SimulatedPlate, simulate_plate
+from models.simulation.faults import Fault
+
+Floats = NDArray[np.float64]
+
+BATCH = 24
+"""Plates that go through the line at once."""
+LARGE = 5.0
+"""Standard errors of its own estimate from which a fault counts as one that can be seen."""
+MANY_WELLS = 0.25
+"""Share of a lot's wells that a gate must hold to speak of the lot."""
+LEVEL, POWER = 0.05, 0.80
+PER_ENZYME_AND_K = ("kcat_per_km", "kcat_per_k_half")
+
+
+@dataclass(frozen=True)
+class CleanGate:
+    """How often one gate holds clean subjects: subjects tried, held, and not assessed."""
+
+    gate: str
+    subject: str
+    subjects: int
+    held: int
+    not_assessed: int
+
+
+@dataclass(frozen=True)
+class Clean:
+    """What happens to clean plates.
+
+    Attributes
+    ----------
+    gates
+        A row a gate and kind of subject.
+    well_count, held_well_count
+        Wells with enzyme, and those that any gate holds.
+    log_ratio_sd
+        Standard deviation between plates of the logarithm of kcat/K of one lot over another's; NaN where it
+        is not known.
+    """
+
+    gates: tuple[CleanGate, ...]
+    well_count: int
+    held_well_count: int
+    log_ratio_sd: float
+
+    def smallest_change(self, plates: int) -> float:
+        """Smallest relative change of kcat/K against the reference that N plates show.
+
+        (z(0.975) + z(0.80)) s / sqrt(N) on the logarithm, two-sided at 5 %, with 80 % power (normal
+        approximation with s known: Chow, Shao and Wang 2008, Sample Size Calculations in Clinical Research,
+        section 3.1, from memory).
+        """
+        reach = (norm.ppf(1.0 - LEVEL / 2.0) + norm.ppf(POWER)) * self.log_ratio_sd / np.sqrt(plates)
+        return float(np.expm1(reach))
+
+
+@dataclass(frozen=True)
+class Caught:
+    """One fault at one size.
+
+    Attributes
+    ----------
+    plates, large
+        Plates tried, and those on which the fault is larger than 5 standard errors of its own estimate.
+    caught, named
+        Plates on which the subject was held, and by a gate that names the fault.
+    large_caught, large_named
+        The same of the large ones; `large_named` counts caught ones.
+    """
+
+    size: float
+    plates: int
+    large: int
+    caught: int
+    named: int
+    large_caught: int
+    large_named: int
+
+
+@dataclass(frozen=True)
+class Curve:
+    """How a fault is caught over its sizes."""
+
+    trial: Trial
+    points: tuple[Caught, ...]
+
+    def size_caught(self, share: float) -> float:
+        """Size from which so many are caught, by isotonic regression between the sizes tried; NaN if none."""
+        rates = np.array([point.caught / point.plates for point in self.points])
+        smooth = np.asarray(isotonic_regression(rates).x, dtype=np.float64)
+        above = np.flatnonzero(smooth >= share)
+        if above.size == 0:
+            return float("nan")
+        place = int(above[0])
+        sizes = np.array([point.size for point in self.points])
+        if place == 0 or smooth[place] == smooth[place - 1]:
+            return float(sizes[place])
+        along = (share - smooth[place - 1]) / (smooth[place] - smooth[place - 1])
+        return float(sizes[place - 1] + along * (sizes[place] - sizes[place - 1]))
+
+
+def through_line(bench: ProvingBench, plates: Sequence[SimulatedPlate]) -> FittedBatch:
+    """Take simulated plates through the stages of a pass."""
+    works = [bench.work(number, plate) for number, plate in enumerate(plates)]
+    return fit_batch(gate_batch(rate_batch(works)))
+
+
+def simulate(bench: ProvingBench, seed: Sequence[int], faults: Sequence[Fault] = ()) -> SimulatedPlate:
+    """One plate of the bench; the same seed gives the same noise, whatever the faults."""
+    return simulate_plate(bench.design, bench.truth, bench.noise, faults, np.random.default_rng(list(seed)))
+
+
+def prove_clean(bench: ProvingBench, plates: int, seed: int) -> Clean:
+    """Take clean plates through the line."""
+    tallies: dict[tuple[str, str], list[int]] = {}
+    wells = held = 0
+    ratios: list[float] = []
+    for numbers in _batches(range(plates)):
+        tables = through_line(bench, [simulate(bench, (seed, 0, n)) for n in numbers]).tables
+        findings = tables["findings"]
+        with_enzyme = tables["wells"]["role"].isin(("sample", "reference"))
+        wells += int(with_enzyme.sum())
+        held += int((with_enzyme & (tables["wells"]["standing"] != "clear")).sum())
+        for gate in GATES.values():
+            if not bench.limits[gate.name]["on"]:
+                continue
+            for subject in gate.subjects:
+                mine = findings[(findings["gate"] == gate.name) & (findings["subject"] == subject)]
+                tally = tallies.setdefault((gate.name, subject), [0, 0, 0])
+                tally[0] += _subject_count(subject, tables, int(with_enzyme.sum()))
+                tally[1] += int((mine["outcome"] == "breach").sum())
+                tally[2] += int((mine["outcome"] == "not_assessed").sum())
+        ratios += _log_ratios(tables["estimates"])
+    return Clean(
+        tuple(CleanGate(gate, subject, *tally) for (gate, subject), tally in tallies.items()),
+        wells,
+        held,
+        float(np.std(ratios, ddof=1)) if len(ratios) > 2 else float("nan"),
+    )
+
+
+def prove_trial(
+    bench: ProvingBench,
+    trial: Trial,
+    plates: int,
+    seed: int,
+    sizes: Sequence[float] | None = None,
+) -> Curve:
+    """Take plates with one kind of fault through the line, at each of its sizes."""
+    points = []
+    for size in trial.sizes if sizes is None else sizes:
+        seen: list[tuple[bool, bool, bool]] = []
+        for numbers in _batches(range(plates)):
+            clean = [simulate(bench, (seed, 1, n)) for n in numbers]
+            rates = rate_batch([bench.work(k, plate) for k, plate in enumerate(clean)])
+            struck = [
+                trial.strike(_site(bench, plate, rates, k, (seed, 2, n)), size)
+                for k, (n, plate) in enumerate(zip(numbers, clean, strict=True))
+            ]
+            faulty = [
+                simulate(bench, (seed, 1, n), one.faults) for n, one in zip(numbers, struck, strict=True)
+            ]
+            fitted = through_line(bench, faulty)
+            seen += [
+                _caught(trial, one, fitted, work.analysis_id)
+                for one, work in zip(struck, fitted.plates, strict=True)
+            ]
+        large = [one for one in seen if one[2]]
+        points.append(
+            Caught(
+                size,
+                len(seen),
+                len(large),
+                sum(one[0] for one in seen),
+                sum(one[1] for one in seen),
+                sum(one[0] for one in large),
+                sum(one[1] for one in large),
+            )
+        )
+    return Curve(trial, tuple(points))
+
+
+@dataclass(frozen=True)
+class Task:
+    """One part of a proof, which can run in a process of its own: clean plates, or a fault at its sizes."""
+
+    bench: ProvingBench
+    trial: Trial | None
+    plates: int
+    seed: int
+    sizes: tuple[float, ...] | None = None
+
+    def run(self) -> Clean | Curve:
+        """Do it."""
+        if self.trial is None:
+            return prove_clean(self.bench, self.plates, self.seed)
+        return prove_trial(self.bench, self.trial, self.plates, self.seed, self.sizes)
+
+
+def tasks(bench: ProvingBench, plates: int, seed: int, *, clear_only: bool = False) -> list[Task]:
+    """The parts of a proof: clean plates (as many as all sizes of a fault have), then every kind of fault.
+
+    Parameters
+    ----------
+    plates
+        Plates a size.
+    clear_only
+        Whether only the size is tried that a practitioner calls clear.
+    """
+    of_faults = [
+        Task(bench, trial, plates, seed, (trial.clear,) if clear_only else None) for trial in for_bench(bench)
+    ]
+    return [Task(bench, None, plates if clear_only else 5 * plates, seed), *of_faults]
+
+
+def run_tasks(parts: Sequence[Task], processes: int) -> Iterator[tuple[Task, Clean | Curve]]:
+    """Run the parts on several processes; each result with its part, in the order of the parts."""
+    if processes <= 1:
+        yield from ((part, part.run()) for part in parts)
+        return
+    # Not by fork: the libraries of the gates start threads.
+    with ProcessPoolExecutor(processes, mp_context=get_context("spawn")) as pool:
+        yield from zip(parts, pool.map(Task.run, parts), strict=True)
+
+
+def _batches(numbers: range) -> Iterator[range]:
+    for first in range(0, len(numbers), BATCH):
+        yield numbers[first : first + BATCH]
+
+
+def _site(
+    bench: ProvingBench, plate: SimulatedPlate, rated: RatedBatch, place: int, seed: Sequence[int]
+) -> Site:
+    """What a trial knows of one plate of a batch."""
+    keys, analysis_id = ["analysis_id", "well"], rated.plates[place].analysis_id
+    rates = rated.rates[rated.rates["analysis_id"] == analysis_id]
+    own = rates.merge(rated.wells[[*keys, "lot", "role", "substrate_um"]], on=keys)
+    own = own[own["role"].isin(("sample", "reference")) & (own["v0_um_per_s"] > 0)].reset_index(drop=True)
+    form = plate_format(bench.design.well_count)
+    places = [well_position(well) for well in own["well"]]
+    own["at_edge"] = [r in (1, form.row_count) or c in (1, form.column_count) for r, c in places]
+    return Site(bench, plate, own, np.random.default_rng(list(seed)))
+
+
+def _caught(trial: Trial, struck: Struck, fitted: FittedBatch, analysis_id: str) -> tuple[bool, bool, bool]:
+    """Whether the subject is held, whether by a gate that names the fault, and whether the fault is large."""
+    findings = fitted.tables["findings"]
+    mine = findings[(findings["analysis_id"] == analysis_id) & (findings["outcome"] == "breach")]
+    if trial.subject == "well":
+        on_series = _series_of(fitted, analysis_id, struck.wells)
+        mine = mine[mine["well"].isin(struck.wells) | mine["series_id"].isin(on_series)]
+    elif trial.subject == "series":
+        on_series = _series_of(fitted, analysis_id, struck.wells)
+        of_lot = mine["series_id"].isin(on_series) | (mine["lot"] == struck.lot)
+        # A gate speaks of the lot where it holds the series, the lot, or many of its wells.
+        wells = mine[mine["well"].isin(struck.wells)].groupby("gate").size()
+        many = set(wells.index[wells >= MANY_WELLS * len(struck.wells)])
+        mine = mine[of_lot | (mine["well"].isin(struck.wells) & mine["gate"].isin(many))]
+    else:
+        mine = mine[mine["subject"] == "plate_read"]
+    gates = set(mine["gate"])
+    return bool(gates), bool(gates & set(trial.named_by)), bool(struck.standard_errors > LARGE)
+
+
+def _series_of(fitted: FittedBatch, analysis_id: str, wells: Sequence[str]) -> set[str]:
+    table = fitted.tables["wells"]
+    mine = (table["analysis_id"] == analysis_id) & table["well"].isin(wells) & table["series_id"].notna()
+    return set(table.loc[mine, "series_id"])
+
+
+def _subject_count(subject: str, tables: dict[str, pd.DataFrame], wells: int) -> int:
+    if subject == "well":
+        return wells
+    if subject == "series":
+        return len(tables["series"])
+    if subject == "lot":
+        return len(tables["series"].drop_duplicates(["analysis_id", "lot"]))
+    return len(tables["analyses"])
+
+
+def _log_ratios(estimates: pd.DataFrame) -> list[float]:
+    """Log of kcat/K of a plate's second lot over its first's, a value a plate."""
+    mine = estimates[
+        (estimates["wells"] == "clear") & estimates["chosen"] & estimates["constant"].isin(PER_ENZYME_AND_K)
+    ]
+    ratios = []
+    for _, rows in mine.sort_values("lot").groupby("analysis_id", sort=False):
+        per_lot = rows.drop_duplicates("lot")["value"].to_numpy(dtype=float)
+        if per_lot.size > 1:
+            ratios.append(float(np.log(per_lot[1] / per_lot[0])))
+    return ratios
