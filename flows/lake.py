@@ -97,7 +97,8 @@ def _column_digest(column: pa.ChunkedArray[pa.Scalar[pa.DataType]]) -> str:
         hashed.update(canonical_json(encoded.dictionary.to_pylist()).encode())
         hashed.update(np.asarray(encoded.indices.fill_null(-1)).astype("<i4").tobytes())
     elif pa.types.is_floating(whole.type):
-        hashed.update(np.asarray(whole.fill_null(0.0)).astype("<f8").tobytes())
+        values = np.asarray(whole.to_numpy(zero_copy_only=False), dtype="<f8")
+        hashed.update(np.where(known, values, 0.0).tobytes())
     else:
         hashed.update(np.asarray(whole.cast(pa.int64()).fill_null(0)).astype("<i8").tobytes())
     return hashed.hexdigest()[:_DIGEST_LENGTH]

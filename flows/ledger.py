@@ -27,6 +27,7 @@ Kind = Literal[
     "recipe_kept",
     "analysis_loaded",
     "tables_loaded",
+    "lake_rebuilt",
     "pass_started",
     "pass_finished",
     "published",

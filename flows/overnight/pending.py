@@ -5,30 +5,29 @@ A plate read is ready when it has no analysis yet and its plate has a plate map,
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from fnmatch import fnmatchcase
-from functools import lru_cache
 from typing import Any
 
 from checks.gates import resolve_limits
 from flows.frames import rows
 from flows.lake import read_rows
 from flows.overnight.report import Waiting
-from flows.site.archive import fetch
 from flows.site.configuration import Configuration
 from flows.site.layout import Site
 from flows.site.recipes import Recipe, code_version
-from flows.stages.conversion import plate_conversion
-from flows.stages.read import PlateMap, read_plate_map
+from flows.stages.kept_profiles import read_profile
+from flows.stages.plate_work import RawReader, channel_of, make_work
+from flows.stages.recorded import profiles_used
 from flows.stages.work import PlateWork
 from flows.warehouse.writer import loader
 from models.errors import HalfsatError
+from models.records.export_profile import ExportProfile
 from models.tables import READINGS
-from models.tables.keys import ONLY_CHANNEL
 
 _NOT_ANALYSED = """
-    SELECT p.plate_read_id, p.plate_id, p.channels, f.file_name, f.profile,
+    SELECT p.plate_read_id, p.export_id, p.plate_id, p.channels, f.file_name, f.profile,
            m.map_id, m.assay, m.file_name AS map_name
     FROM plate_reads p
     JOIN files f ON f.file_id = p.export_id
@@ -69,7 +68,7 @@ def find_pending(site: Site, configuration: Configuration) -> tuple[list[Ready],
     found = found.where(found.notna(), None)
     ready: list[Ready] = []
     waiting: list[Waiting] = []
-    recipes = _RecipeBook(configuration)
+    recipes = _RecipeBook(site, configuration, profiles_used(site) if len(found) else {})
     for row in rows(found):
         try:
             ready.append(_make_ready(row, configuration, recipes))
@@ -91,65 +90,72 @@ def load_work(site: Site, ready: Sequence[Ready]) -> tuple[list[PlateWork], list
     SiteError
         If raw archive or lake have lost or changed a file.
     """
-    plate_maps = _PlateMaps(site)
+    reader = RawReader(site)
     works: list[PlateWork] = []
     waiting: list[Waiting] = []
     for each in ready:
         readings = read_rows(site, READINGS.name, each.plate_read_id)
-        wells = plate_maps.of(each.map_id, each.map_name)[each.plate_id].wells
+        plate_maps = reader.plate_map(each.map_id, each.map_name)
         try:
-            conversion = plate_conversion(each.recipe.assay, readings, wells, each.channel)
+            work = make_work(
+                each.plate_read_id,
+                each.plate_id,
+                each.map_id,
+                each.recipe,
+                each.channel,
+                readings,
+                plate_maps,
+            )
         except HalfsatError as error:
             waiting.append(Waiting(each.plate_id, str(error)))
             continue
-        of_channel = readings[readings["channel"] == each.channel].reset_index(drop=True)
-        works.append(
-            PlateWork(
-                each.plate_read_id, each.plate_id, each.map_id, each.recipe, of_channel, wells, conversion
-            )
-        )
+        works.append(work)
     return works, waiting
 
 
 class _RecipeBook:
-    """Recipes by assay and profile, each made once."""
+    """Recipes by assay and profile, each made once.
 
-    def __init__(self, configuration: Configuration) -> None:
-        self.configuration = configuration
+    The profile in a recipe is the one that read the export, though the site may have edited it since: the
+    readings in the lake are what it made of the bytes.
+    """
+
+    def __init__(self, site: Site, configuration: Configuration, used: Mapping[str, str]) -> None:
+        self.site, self.configuration, self.used = site, configuration, used
         self._made: dict[tuple[str, str], Recipe] = {}
 
-    def of(self, assay_name: str, profile_name: str) -> Recipe:
-        key = (assay_name, profile_name)
+    def of(self, assay_name: str, profile_name: str, export_id: str) -> Recipe:
+        """The recipe for an export.
+
+        Raises
+        ------
+        HalfsatError
+            If neither the profile as it was nor one of that name is there.
+        """
+        key = (assay_name, self.used.get(export_id, profile_name))
         if key not in self._made:
             assay = self.configuration.assays[assay_name]
             limits = resolve_limits(self.configuration.gates, assay.gates)
-            profile = self.configuration.profiles[profile_name]
+            profile = self._profile(profile_name, export_id)
             self._made[key] = Recipe(assay_name, assay, profile_name, profile, limits, code_version())
         return self._made[key]
 
-
-class _PlateMaps:
-    """Plate maps from the raw archive; those of the last few files are remembered."""
-
-    def __init__(self, site: Site) -> None:
-        self.of = lru_cache(maxsize=8)(lambda map_id, name: self._read(site, map_id, name))
-
-    @staticmethod
-    def _read(site: Site, map_id: str, name: str) -> dict[str, PlateMap]:
-        return {each.plate_id: each for each in read_plate_map(fetch(site, map_id), name)}
+    def _profile(self, name: str, export_id: str) -> ExportProfile:
+        if export_id in self.used:
+            return read_profile(self.site, self.used[export_id])[1]
+        if name not in self.configuration.profiles:
+            raise HalfsatError(
+                f"the profile '{name}' that read its export is gone", remedy="put it back in config/profiles"
+            )
+        return self.configuration.profiles[name]
 
 
 def _make_ready(row: Any, configuration: Configuration, recipes: _RecipeBook) -> Ready:
     if row.map_id is None:
         raise HalfsatError("no plate map for this plate yet", remedy="drop the plate map into the inbox")
-    if row.profile not in configuration.profiles:
-        raise HalfsatError(
-            f"the profile '{row.profile}' that read its export is gone",
-            remedy="put it back in config/profiles",
-        )
     assay_name = _assay_of(row.plate_id, row.assay, configuration)
-    channel = _channel_of(row.channels.split(","), assay_name, configuration)
-    recipe = recipes.of(assay_name, row.profile)
+    channel = channel_of(row.channels.split(","), assay_name, configuration.assays[assay_name])
+    recipe = recipes.of(assay_name, row.profile, row.export_id)
     return Ready(row.plate_read_id, row.plate_id, row.map_id, row.map_name, channel, recipe)
 
 
@@ -172,23 +178,3 @@ def _assay_of(plate_id: str, named: str | None, configuration: Configuration) ->
         found = f"the assays {', '.join(fitting)} all claim it" if fitting else "no assay claims it"
         raise HalfsatError(found, remedy="name the assay in the plate map, or mend 'plates' in config/assays")
     return fitting[0]
-
-
-def _channel_of(channels: list[str], assay_name: str, configuration: Configuration) -> str:
-    """Channel of the export that the assay reads; an export that names none has only the one."""
-    wanted = configuration.assays[assay_name].signal.channel
-    if channels == [ONLY_CHANNEL]:
-        return ONLY_CHANNEL
-    if wanted is None:
-        if len(channels) == 1:
-            return channels[0]
-        raise HalfsatError(
-            f"its export has the channels {', '.join(channels)}",
-            remedy=f"say signal.channel in config/assays/{assay_name}.toml",
-        )
-    if wanted not in channels:
-        raise HalfsatError(
-            f"its export has no channel '{wanted}', but {', '.join(channels)}",
-            remedy=f"mend signal.channel in config/assays/{assay_name}.toml or the profile",
-        )
-    return wanted

@@ -15,17 +15,13 @@ import pandas as pd
 import pyarrow as pa
 
 from flows import lake, ledger
-from flows.lake import LakeFile
-from flows.ledger import Entry
 from flows.site.durable import sweep_parts
 from flows.site.layout import Site
+from flows.stages.recorded import RecordedBatch, describe_batch, recorded_batches
 from flows.warehouse import writer
 from flows.warehouse.writer import Batch, DamagedWarehouse
-from models.errors import LedgerError
 from models.identity import Json, content_id, result_id
-from models.tables import ANALYSES, FILES, PLATE_READS, READINGS
-
-LOADING_KINDS = ("analysis_loaded", "tables_loaded")
+from models.tables import ANALYSES, PLATE_READS, READINGS
 
 
 def load_results(
@@ -70,7 +66,7 @@ def load_results(
             lake.describe(site, READINGS.name, each) for each in given[PLATE_READS.name]["plate_read_id"]
         ]
     kind: ledger.Kind = "analysis_loaded" if ANALYSES.name in given else "tables_loaded"
-    entry = ledger.append(site, kind, _body(pass_id, batch_id, given, files), at=now)
+    entry = ledger.append(site, kind, describe_batch(pass_id, batch_id, given, files), at=now)
     writer.load(site, given, Batch(batch_id, entry.seq, entry.time, files))
     return entry
 
@@ -101,58 +97,30 @@ def repair(site: Site) -> int:
         site.loader_file.with_name(site.loader_file.name + ".wal").unlink(missing_ok=True)
         present = set()
     loaded = 0
-    for entry in ledger.entries(site):
-        if entry.kind in LOADING_KINDS and entry.body.get("batch_id") not in present:
-            batch, rows = _recorded(site, entry)
-            loaded += writer.load(site, rows, batch)
+    for recorded in recorded_batches(site):
+        if recorded.batch_id not in present:
+            loaded += writer.load(site, stored_rows(site, recorded), as_batch(recorded))
     return loaded
 
 
-def _body(
-    pass_id: str, batch_id: str, given: Mapping[str, pd.DataFrame], files: list[LakeFile]
-) -> dict[str, Json]:
-    body: dict[str, Json] = {
-        "pass_id": pass_id,
-        "batch_id": batch_id,
-        "lake_files": [
-            {
-                "path": each.path,
-                "sha256": each.sha256,
-                "table_name": each.table_name,
-                "row_count": each.row_count,
-                "byte_count": each.byte_count,
-            }
-            for each in files
-        ],
-    }
-    for name, columns in (
-        (ANALYSES.name, ("analysis_id", "plate_read_id", "map_id", "recipe_id")),
-        (PLATE_READS.name, ("plate_read_id", "export_id", "place_in_export")),
-        (FILES.name, ("file_id", "kind")),
-    ):
-        if name in given:
-            records = given[name][list(columns)].to_dict(orient="records")
-            body[name] = [{str(key): value for key, value in row.items()} for row in records]
-    return body
+def stored_rows(site: Site, recorded: RecordedBatch) -> dict[str, pa.Table]:
+    """Rows of a recorded batch from the lake, by table, in the tables' present columns.
 
-
-def _recorded(site: Site, entry: Entry) -> tuple[Batch, dict[str, pa.Table]]:
-    try:
-        # Any JSON may stand there; what is no list of lake files is caught below.
-        files = [LakeFile(**each) for each in entry.body["lake_files"]]  # type: ignore[union-attr, arg-type]
-        batch = Batch(str(entry.body["batch_id"]), entry.seq, entry.time, files)
-    except (KeyError, TypeError) as error:
-        raise LedgerError(
-            "the entry does not say which lake files were loaded",
-            where=f"{site.ledger_file}, line {entry.seq}",
-            remedy="bring ledger/ back from a backup of the site",
-        ) from error
-    rows = {
-        each.table_name: lake.read_arrow(site, each.path, each.sha256)
-        for each in files
+    Raises
+    ------
+    SiteError
+        If a lake file is missing or has changed, or its rows cannot be given the present columns.
+    """
+    return {
+        each.table_name: lake.read_arrow(site, each.path, each.sha256, each.table_name)
+        for each in recorded.lake_files
         if each.table_name != READINGS.name
     }
-    return batch, rows
+
+
+def as_batch(recorded: RecordedBatch) -> Batch:
+    """The batch as the warehouse records it."""
+    return Batch(recorded.batch_id, recorded.seq, recorded.time, recorded.lake_files)
 
 
 def _aside(path: Path) -> Path:

@@ -13,22 +13,26 @@ from itertools import islice
 import pandas as pd
 
 from checks.assess import GateRun
-from checks.structure import check_structure
+from checks.structure import StructureReport, check_structure
 from flows.lake import write_rows
 from flows.site.archive import quarantine
 from flows.site.configuration import Configuration
 from flows.site.layout import Site
 from flows.stages.gate_runs import structure_run
+from flows.stages.kept_profiles import keep_profile
 from flows.stages.pull import PulledFile
 from flows.stages.read import (
+    PlateMap,
     StagedRead,
     choose_profile,
     is_plate_map,
     read_export,
     read_plate_map,
 )
+from flows.stages.recorded import PROFILE_ID
 from models.errors import HalfsatError
 from models.identity import result_id
+from models.records.export_profile import ExportProfile
 from models.tables import READINGS
 
 EXPORTS_A_CHUNK = 40
@@ -41,7 +45,8 @@ class StagedFiles:
     Attributes
     ----------
     files, plate_maps, plate_reads
-        Rows of the tables of the same names; `files` without its pass.
+        Rows of the tables of the same names; `files` without its pass, and with the id of the kept profile
+        that read an export (PROFILE_ID), which goes into the ledger.
     runs
         The structure suite's runs, one a chunk of exports.
     """
@@ -57,9 +62,12 @@ class StagedFiles:
 
 
 @dataclass(frozen=True)
-class _ReadExport:
+class ExportRead:
+    """An export, the profile that read it, and its plate reads by id."""
+
     file: PulledFile
     profile: str
+    kept_profile: str
     plates: dict[str, StagedRead]
 
 
@@ -69,41 +77,53 @@ def stage_files(site: Site, configuration: Configuration, pulled: Sequence[Pulle
     Parameters
     ----------
     site
-        Where lake and quarantine are.
+        Where lake and quarantine are, and where the profiles used are kept.
     configuration
         The site's profiles.
     pulled
         New files with their bytes, already in the raw archive.
     """
     staged = StagedFiles()
-    remaining = iter(pulled)
-    while chunk := list(islice(remaining, EXPORTS_A_CHUNK)):
+    for chunk in chunks(pulled):
         _stage_exports(site, staged, list(_read_chunk(site, configuration, staged, chunk)))
     return staged
 
 
-def _read_chunk(
-    site: Site, configuration: Configuration, staged: StagedFiles, chunk: Sequence[PulledFile]
-) -> Iterator[_ReadExport]:
-    for file in chunk:
-        try:
-            content = file.content
-            if is_plate_map(content, file.file_name):
-                _accept_map(staged, file, content)
-                continue
-            profile = choose_profile(content, file.file_name, configuration.profiles)
-            reads = read_export(content, file.file_name, configuration.profiles[profile])
-        except HalfsatError as error:
-            _refuse(site, staged, file, str(error))
-            continue
-        plates = {result_id("plate_read", file.file_id, read.place_in_export): read for read in reads}
-        yield _ReadExport(file, profile, plates)
+def chunks(pulled: Sequence[PulledFile]) -> Iterator[list[PulledFile]]:
+    """Files in the parts whose exports are checked together."""
+    remaining = iter(pulled)
+    while chunk := list(islice(remaining, EXPORTS_A_CHUNK)):
+        yield chunk
 
 
-def _accept_map(staged: StagedFiles, file: PulledFile, content: bytes) -> None:
-    plate_maps = read_plate_map(content, file.file_name)
-    staged.files.append(_file_row(file, "plate_map"))
-    staged.plate_maps.extend(
+def read_plates(file: PulledFile, content: bytes, profile: ExportProfile) -> dict[str, StagedRead]:
+    """Plate reads of an export by their ids.
+
+    Raises
+    ------
+    ExportError
+        If the export cannot be read as the profile says.
+    """
+    reads = read_export(content, file.file_name, profile)
+    return {result_id("plate_read", file.file_id, read.place_in_export): read for read in reads}
+
+
+def check_exports(exports: Sequence[ExportRead]) -> tuple[dict[str, pd.DataFrame], StructureReport | None]:
+    """Readings of all plate reads of a chunk, by id, and what the structure suite says of them together."""
+    frames = {
+        plate_read_id: read.readings.assign(plate_read_id=plate_read_id)[READINGS.column_names]
+        for export in exports
+        for plate_read_id, read in export.plates.items()
+    }
+    if not frames:
+        return frames, None
+    formats = {name: read.plate_format for export in exports for name, read in export.plates.items()}
+    return frames, check_structure(pd.concat(frames.values(), ignore_index=True), formats)
+
+
+def map_rows(file: PulledFile, plate_maps: Sequence[PlateMap]) -> list[dict[str, object]]:
+    """Rows of `plate_maps` that a plate map file gives."""
+    return [
         {
             "map_id": file.file_id,
             "plate_id": plate_map.plate_id,
@@ -112,41 +132,63 @@ def _accept_map(staged: StagedFiles, file: PulledFile, content: bytes) -> None:
             "received_at": file.received_at,
         }
         for plate_map in plate_maps
-    )
+    ]
 
 
-def _stage_exports(site: Site, staged: StagedFiles, exports: Sequence[_ReadExport]) -> None:
+def _read_chunk(
+    site: Site, configuration: Configuration, staged: StagedFiles, chunk: Sequence[PulledFile]
+) -> Iterator[ExportRead]:
+    for file in chunk:
+        try:
+            content = file.content
+            if is_plate_map(content, file.file_name):
+                plate_maps = read_plate_map(content, file.file_name)
+                staged.files.append(_file_row(file, "plate_map"))
+                staged.plate_maps.extend(map_rows(file, plate_maps))
+                continue
+            name = choose_profile(content, file.file_name, configuration.profiles)
+            profile = configuration.profiles[name]
+            plates = read_plates(file, content, profile)
+        except HalfsatError as error:
+            _refuse(site, staged, file, str(error))
+            continue
+        yield ExportRead(file, name, keep_profile(site, name, profile), plates)
+
+
+def _stage_exports(site: Site, staged: StagedFiles, exports: Sequence[ExportRead]) -> None:
     """Check the structure of a chunk's readings together and write those that hold."""
-    frames = {
-        plate_read_id: read.readings.assign(plate_read_id=plate_read_id)[READINGS.column_names]
-        for export in exports
-        for plate_read_id, read in export.plates.items()
-    }
-    if not frames:
+    frames, report = check_exports(exports)
+    if report is None:
         return
-    formats = {name: read.plate_format for export in exports for name, read in export.plates.items()}
-    report = check_structure(pd.concat(frames.values(), ignore_index=True), formats)
     staged.runs.append(structure_run(report))
     for export in exports:
         reasons = [
             reason for plate_read_id in export.plates for reason in report.reasons.get(plate_read_id, ())
         ]
         if reasons:
-            _refuse(site, staged, export.file, "; ".join(reasons))
+            _refuse(site, staged, export.file, "; ".join(reasons), kept_profile=export.kept_profile)
             continue
-        staged.files.append(_file_row(export.file, "export", profile=export.profile))
+        row = _file_row(export.file, "export", profile=export.profile, kept_profile=export.kept_profile)
+        staged.files.append(row)
         for plate_read_id, read in export.plates.items():
             write_rows(site, READINGS.name, plate_read_id, frames[plate_read_id])
-            staged.plate_reads.append(_plate_read_row(plate_read_id, export.file.file_id, read))
+            staged.plate_reads.append(plate_read_row(plate_read_id, export.file.file_id, read))
 
 
-def _refuse(site: Site, staged: StagedFiles, file: PulledFile, reason: str) -> None:
+def _refuse(
+    site: Site, staged: StagedFiles, file: PulledFile, reason: str, *, kept_profile: str | None = None
+) -> None:
     quarantine(site, file.content, file.file_name, reason)
-    staged.files.append(_file_row(file, "quarantined", reason=reason))
+    staged.files.append(_file_row(file, "quarantined", reason=reason, kept_profile=kept_profile))
 
 
 def _file_row(
-    file: PulledFile, kind: str, *, profile: str | None = None, reason: str | None = None
+    file: PulledFile,
+    kind: str,
+    *,
+    profile: str | None = None,
+    reason: str | None = None,
+    kept_profile: str | None = None,
 ) -> dict[str, object]:
     return {
         "file_id": file.file_id,
@@ -156,10 +198,12 @@ def _file_row(
         "received_at": file.received_at,
         "profile": profile,
         "reason": reason,
+        PROFILE_ID: kept_profile,
     }
 
 
-def _plate_read_row(plate_read_id: str, export_id: str, read: StagedRead) -> dict[str, object]:
+def plate_read_row(plate_read_id: str, export_id: str, read: StagedRead) -> dict[str, object]:
+    """Row of `plate_reads` that a staged read gives."""
     readings = read.readings
     temperature = readings["temperature_c"]
     return {
