@@ -146,7 +146,8 @@ def _depletion(site: Site, conversion: float) -> Struck:
     k_um = site.bench.truth[str(row["lot"])].k_um
     substrate = float(row["substrate_um"])
     vmax = float(row["v0_um_per_s"]) * (k_um + substrate) / substrate
-    factor = (substrate * conversion - k_um * np.log1p(-conversion)) / (vmax * time_s)
+    # Never less enzyme than planned: that would be another fault.
+    factor = max((substrate * conversion - k_um * np.log1p(-conversion)) / (vmax * time_s), 1.0)
     error = site.read_sd_um * 2.0 / np.sqrt(shortest) / substrate
     return Struck(
         (Depletion(float(factor), (str(row["well"]),)),), (str(row["well"]),), None, conversion / error
