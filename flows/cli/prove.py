@@ -204,7 +204,11 @@ def _clean_row(gate: str, subject: str, subjects: int, held: int, not_assessed: 
 
 
 def _fault_row(curve: Curve) -> tuple[str, ...]:
-    at = [_size(curve, curve.size_caught(share)) for share in SHARES]
+    first = curve.points[0]
+    at = [
+        ("≤ " if first.caught >= share * first.plates else "") + _size(curve, curve.size_caught(share))
+        for share in SHARES
+    ]
     tried = ", ".join(
         f"{_size(curve, point.size)}: {100.0 * point.caught / point.plates:.0f} %" for point in curve.points
     )

@@ -20,7 +20,7 @@ def console() -> Console:
 
 
 def plain_table(headings: Sequence[tuple[str, str]], rows: Iterable[Sequence[str]]) -> Table:
-    """A table with a thin rule under its head.
+    """A table with a thin rule under its head, where any column has a name.
 
     Parameters
     ----------
@@ -29,7 +29,8 @@ def plain_table(headings: Sequence[tuple[str, str]], rows: Iterable[Sequence[str
     rows
         Texts; each may run over several lines. They come from files and are printed as they stand.
     """
-    table = Table(box=box.SIMPLE_HEAD, pad_edge=False, padding=(0, 1), show_edge=False)
+    named = any(name for name, _ in headings)
+    table = Table(box=box.SIMPLE_HEAD, pad_edge=False, padding=(0, 1), show_edge=False, show_header=named)
     for name, justify in headings:
         table.add_column(name, justify="right" if justify == "right" else "left", overflow="fold")
     for row in rows:
