@@ -12,6 +12,7 @@ import duckdb
 
 from flows import lake
 from flows.history.drawing import lineage_text, render
+from flows.history.lookup import find_id, readings_file
 from flows.history.node import Fact, Node, NodeKind
 from flows.history.spans import Span, source_spans
 from flows.site import archive
@@ -22,24 +23,8 @@ from models.errors import QueryError
 
 __all__ = ["Node", "lineage", "lineage_text", "render"]
 
-SHORTEST_PREFIX = 4
-
 Row = Mapping[str, object]
 
-_IDS: dict[str, tuple[str, str]] = {
-    "lot value": ("lot_values", "lot_value_id"),
-    "estimate": ("estimates", "estimate_id"),
-    "fit": ("fits", "fit_id"),
-    "series": ("series", "series_id"),
-    "grid": ("grids", "grid_id"),
-    "analysis": ("analyses", "analysis_id"),
-    "plate read": ("plate_reads", "plate_read_id"),
-    "file": ("files", "file_id"),
-    "recipe": ("recipes", "recipe_id"),
-}
-_HOW_TO_FIND = (
-    'ids are listed by: halfsat history "SELECT estimate_id, lot, constant, value FROM current_estimates"'
-)
 _WELLS_FITTED = {
     "clear": "clear wells",
     "all": "all wells that are not void",
@@ -70,28 +55,8 @@ def lineage(site: Site, id_or_prefix: str) -> Node:
         If nothing is published yet.
     """
     with open_published(site) as connection:
-        kind, full_id = _find(connection, id_or_prefix)
+        kind, full_id = find_id(connection, id_or_prefix)
         return _Tracer(site, connection).node(kind, full_id)
-
-
-def _find(connection: duckdb.DuckDBPyConnection, prefix: str) -> tuple[str, str]:
-    wanted = prefix.strip().lower()
-    if not re.fullmatch(rf"[0-9a-f]{{{SHORTEST_PREFIX},64}}", wanted):
-        raise QueryError(
-            f"'{prefix}' is no id: ids are at least {SHORTEST_PREFIX} digits of 0-9 and a-f",
-            remedy=_HOW_TO_FIND,
-        )
-    search = " UNION ALL ".join(
-        f"SELECT '{kind}' AS kind, {column} AS id FROM {name} WHERE starts_with({column}, $prefix)"
-        for kind, (name, column) in _IDS.items()
-    )
-    found = connection.execute(f"{search} ORDER BY kind, id LIMIT 9", {"prefix": wanted}).fetchall()
-    if not found:
-        raise QueryError(f"nothing here has an id that begins with '{wanted}'", remedy=_HOW_TO_FIND)
-    if len(found) > 1:
-        some = ", ".join(f"{kind} {full_id[: len(wanted) + 8]}" for kind, full_id in found[:4])
-        raise QueryError(f"several ids begin with '{wanted}': {some}", remedy="type more digits")
-    return str(found[0][0]), str(found[0][1])
 
 
 class _Tracer:
@@ -276,7 +241,7 @@ class _Tracer:
             "WHERE a.analysis_id = ?",
             analysis_id,
         )
-        file = self._lake_file(str(source["plate_read_id"]), analysis_id)
+        file = readings_file(self.connection, str(source["plate_read_id"]), analysis_id)
         spans = source_spans(self.site, file, str(source["recipe"]), rows) if file else {}
         return [_rate(row, spans.get(str(row["well"])), wells) for row in rows]
 
@@ -297,7 +262,7 @@ class _Tracer:
         ]
 
     def _readings(self, plate_read_id: str, analysis_id: str | None) -> list[Node]:
-        file = self._lake_file(plate_read_id, analysis_id)
+        file = readings_file(self.connection, plate_read_id, analysis_id)
         if file is None:
             return []
         path, sha256 = file
@@ -305,18 +270,6 @@ class _Tracer:
         details = (*_digest_lines(sha256), _CONDITIONS[found])
         facts: tuple[tuple[str, Fact], ...] = (("path", path), ("sha256", sha256), ("condition", found))
         return [Node("readings", sha256, _short_path(path), details, facts)]
-
-    def _lake_file(self, plate_read_id: str, analysis_id: str | None) -> tuple[str, str] | None:
-        """Path and digest of the readings that an analysis used: the last written before it."""
-        rows = self._rows(
-            "SELECT f.path, f.sha256 FROM lake_files f JOIN loads l USING (batch_id) "
-            "LEFT JOIN analyses a ON a.analysis_id = $2 "
-            "WHERE f.path = 'lake/readings/' || $1 || '.parquet' "
-            "ORDER BY coalesce(l.loaded_at <= a.computed_at, true) DESC, l.ledger_seq DESC LIMIT 1",
-            plate_read_id,
-            analysis_id,
-        )
-        return (str(rows[0]["path"]), str(rows[0]["sha256"])) if rows else None
 
     def _again(self, kind: str, full_id: str) -> bool:
         seen = (kind, full_id) in self._shown

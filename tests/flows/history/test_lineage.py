@@ -201,7 +201,7 @@ def test_an_unknown_id_is_answered_with_what_to_type(made, asked, says):
 
 
 def test_digits_that_several_ids_share_ask_for_more(made, monkeypatch):
-    monkeypatch.setattr("flows.history.lineage.SHORTEST_PREFIX", 0)
+    monkeypatch.setattr("flows.history.lookup.SHORTEST_PREFIX", 0)
     with pytest.raises(QueryError, match="several ids begin with") as refused:
         lineage(made.site, "")
     assert refused.value.remedy == "type more digits"
