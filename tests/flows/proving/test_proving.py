@@ -6,9 +6,11 @@ import math
 
 import numpy as np
 import pytest
+from click.testing import CliRunner
 
 from checks.gates import GATES, resolve_limits
 from flows.cli.prove import csv_rows, drawing, show
+from flows.cli.root import tree
 from flows.cli.tables import console
 from flows.proving.bench import common_bench
 from flows.proving.characteristics import (
@@ -24,8 +26,9 @@ from flows.proving.characteristics import (
 )
 from flows.proving.trials import TRIALS, for_bench
 from flows.site.configuration import load_configuration
+from flows.site.layout import create_site
 from flows.site.shipped import shipped
-from models.errors import HalfsatError
+from models.errors import ConfigurationError, HalfsatError
 from models.simulation import TRIPLICATE_NOISE
 from tests.flows.stages.test_rate_and_fit import assay
 
@@ -143,3 +146,14 @@ def test_tables_hold_at_80_columns_and_rows_and_drawing_say_the_same(capsys):
     rows = csv_rows(clean, curves)
     assert [row[7] for row in rows[1:]] == [0, 4, 10, 20, 20]
     assert b"<svg" in drawing(curves, ".svg")
+
+
+def test_the_command_names_the_assays_that_there_are_and_the_figures_it_can_write(tmp_path):
+    site = create_site(tmp_path / "site", shipped("config"))
+    given = ["site", "prove", "--site", str(site.root), "--assay"]
+    unknown = CliRunner().invoke(tree, [*given, "nonesuch"])
+    assert isinstance(unknown.exception, ConfigurationError)
+    assert "alkaline_phosphatase_405" in str(unknown.exception)
+    odd = CliRunner().invoke(tree, [*given, "alkaline_phosphatase_405", "--plot", "rates.bmp"])
+    assert odd.exit_code == 2
+    assert ".svg, .png or .pdf" in odd.output
