@@ -29,7 +29,7 @@ from models.simulation.faults import Fault
 
 Floats = NDArray[np.float64]
 
-BATCH = 24
+BATCH = 96
 """Plates that go through the line at once."""
 LARGE = 5.0
 """Standard errors of its own estimate from which a fault counts as one that can be seen."""
@@ -174,37 +174,36 @@ def prove_trial(
     sizes: Sequence[float] | None = None,
 ) -> Curve:
     """Take plates with one kind of fault through the line, at each of its sizes."""
-    points = []
-    for size in trial.sizes if sizes is None else sizes:
-        seen: list[tuple[bool, bool, bool]] = []
-        for numbers in _batches(range(plates)):
-            clean = [simulate(bench, (seed, 1, n)) for n in numbers]
-            rates = rate_batch([bench.work(k, plate) for k, plate in enumerate(clean)])
-            struck = [
-                trial.strike(_site(bench, plate, rates, k, (seed, 2, n)), size)
-                for k, (n, plate) in enumerate(zip(numbers, clean, strict=True))
-            ]
-            faulty = [
-                simulate(bench, (seed, 1, n), one.faults) for n, one in zip(numbers, struck, strict=True)
-            ]
-            fitted = through_line(bench, faulty)
-            seen += [
-                _caught(trial, one, fitted, work.analysis_id)
-                for one, work in zip(struck, fitted.plates, strict=True)
-            ]
-        large = [one for one in seen if one[2]]
-        points.append(
-            Caught(
-                size,
-                len(seen),
-                len(large),
-                sum(one[0] for one in seen),
-                sum(one[1] for one in seen),
-                sum(one[0] for one in large),
-                sum(one[1] for one in large),
-            )
-        )
+    tried = tuple(trial.sizes if sizes is None else sizes)
+    seen: dict[float, list[tuple[bool, bool, bool]]] = {size: [] for size in tried}
+    # All sizes go through the line together: a batch costs seconds, a plate in it a fraction of one.
+    for numbers in _batches(range(plates), len(tried)):
+        clean = [simulate(bench, (seed, 1, n)) for n in numbers]
+        rates = rate_batch([bench.work(k, plate) for k, plate in enumerate(clean)])
+        # Every size strikes the same subject of the same plate, and only the size differs.
+        struck = [
+            (size, n, trial.strike(_site(bench, plate, rates, k, (seed, 2, n)), size))
+            for size in tried
+            for k, (n, plate) in enumerate(zip(numbers, clean, strict=True))
+        ]
+        fitted = through_line(bench, [simulate(bench, (seed, 1, n), one.faults) for _, n, one in struck])
+        for (size, _, one), work in zip(struck, fitted.plates, strict=True):
+            seen[size].append(_caught(trial, one, fitted, work.analysis_id))
+    points = [_counted(size, outcomes) for size, outcomes in seen.items()]
     return Curve(trial, tuple(points))
+
+
+def _counted(size: float, seen: Sequence[tuple[bool, bool, bool]]) -> Caught:
+    large = [one for one in seen if one[2]]
+    return Caught(
+        size,
+        len(seen),
+        len(large),
+        sum(one[0] for one in seen),
+        sum(one[1] for one in seen),
+        sum(one[0] for one in large),
+        sum(one[1] for one in large),
+    )
 
 
 @dataclass(frozen=True)
@@ -250,9 +249,11 @@ def run_tasks(parts: Sequence[Task], processes: int) -> Iterator[tuple[Task, Cle
         yield from zip(parts, pool.map(Task.run, parts), strict=True)
 
 
-def _batches(numbers: range) -> Iterator[range]:
-    for first in range(0, len(numbers), BATCH):
-        yield numbers[first : first + BATCH]
+def _batches(numbers: range, sizes: int = 1) -> Iterator[range]:
+    """Plates that go through the line at once, each at so many sizes."""
+    step = max(BATCH // sizes, 1)
+    for first in range(0, len(numbers), step):
+        yield numbers[first : first + step]
 
 
 def _site(
