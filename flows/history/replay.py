@@ -309,7 +309,7 @@ def compared(
 
 
 def _ask(connection: duckdb.DuckDBPyConnection, sql: str, given: Mapping[str, object]) -> pa.Table:
-    found = connection.sql(sql, params=dict(given)).to_arrow_table()
+    found: pa.Table | None = connection.sql(sql, params=dict(given)).to_arrow_table()
     assert found is not None, "a SELECT gives rows"
     return found
 
