@@ -23,7 +23,6 @@ from flows.stages.fit import fit_batch
 from flows.stages.gate import gate_batch
 from flows.stages.rate import rate_batch
 from flows.stages.work import FittedBatch, RatedBatch
-from models.plates import plate_format, well_position
 from models.simulation import SimulatedPlate, simulate_plate
 from models.simulation.faults import Fault
 
@@ -264,9 +263,6 @@ def _site(
     rates = rated.rates[rated.rates["analysis_id"] == analysis_id]
     own = rates.merge(rated.wells[[*keys, "lot", "role", "substrate_um"]], on=keys)
     own = own[own["role"].isin(("sample", "reference")) & (own["v0_um_per_s"] > 0)].reset_index(drop=True)
-    form = plate_format(bench.design.well_count)
-    places = [well_position(well) for well in own["well"]]
-    own["at_edge"] = [r in (1, form.row_count) or c in (1, form.column_count) for r, c in places]
     return Site(bench, plate, own, np.random.default_rng(list(seed)))
 
 

@@ -14,6 +14,7 @@ import numpy as np
 import pandas as pd
 
 from flows.proving.bench import ProvingBench
+from flows.proving.sizes import curve_size, edge_error, residual_error
 from models.simulation import SimulatedPlate
 from models.simulation.faults import (
     ActivityLoss,
@@ -87,6 +88,17 @@ class Site:
         """Length of the read [s]."""
         return float(self.bench.design.time_s[-1])
 
+    def until_limit_s(self, row: pd.Series) -> float:
+        """Time of a clean well's conversion limit [s], or the read's end: an initial rate sees no more."""
+        limit = float(self.bench.limits["substrate_depletion"]["limit"])
+        return min(limit * float(row["substrate_um"]) / float(row["v0_um_per_s"]), self.length_s)
+
+    def in_curve(self, row: pd.Series, fault: Callable[[tuple[str, ...]], Fault]) -> Struck:
+        """A fault that bends one well's curve, seen in the reads of its initial rate."""
+        well = (str(row["well"]),)
+        made = fault(well)
+        return Struck((made,), well, None, curve_size(self.bench, (made,), well, (self.until_limit_s(row),)))
+
 
 @dataclass(frozen=True)
 class Trial:
@@ -148,7 +160,8 @@ def _depletion(site: Site, conversion: float) -> Struck:
     vmax = float(row["v0_um_per_s"]) * (k_um + substrate) / substrate
     # Never less enzyme than planned: that would be another fault.
     factor = max((substrate * conversion - k_um * np.log1p(-conversion)) / (vmax * time_s), 1.0)
-    error = site.read_sd_um * 2.0 / np.sqrt(shortest) / substrate
+    # That of a line's rise over its reads, on substrate.
+    error = site.read_sd_um * np.sqrt(12.0 / shortest) / substrate
     return Struck(
         (Depletion(float(factor), (str(row["well"]),)),), (str(row["well"]),), None, conversion / error
     )
@@ -157,13 +170,8 @@ def _depletion(site: Site, conversion: float) -> Struck:
 def _bend(site: Site, change: float) -> Struck:
     """Activity of one well falls by `change` over the reads before the conversion limit."""
     row = site.any_well()
-    limit = float(site.bench.limits["substrate_depletion"]["limit"])
-    until_s = min(limit * float(row["substrate_um"]) / float(row["v0_um_per_s"]), site.length_s)
-    loss = -np.log1p(-change) / until_s
-    error = abs(float(row["early_slope_change"]) / float(row["early_slope_change_t"]))
-    return Struck(
-        (ActivityLoss(float(loss), (str(row["well"]),)),), (str(row["well"]),), None, change / error
-    )
+    loss = -np.log1p(-change) / site.until_limit_s(row)
+    return site.in_curve(row, lambda well: ActivityLoss(float(loss), well))
 
 
 def _unsaturated(site: Site, ratio: float) -> Struck:
@@ -188,38 +196,25 @@ def _bubble(site: Site, jump: float) -> Struck:
     row = site.any_well()
     start, end = float(row["window_start_s"]), float(row["window_end_s"])
     at_s = start + float(site.generator.uniform(0.25, 0.75)) * (end - start)
-    points = max(float(row["window_point_count"]), 2.0)
-    error = site.bench.noise.signal_sd * 4.0 / np.sqrt(points)
-    return _in_well(row, lambda well: Bubble(at_s, jump, well), abs(jump) / error)
+    return site.in_curve(row, lambda well: Bubble(at_s, jump, well))
 
 
 def _lag(site: Site, share: float) -> Struck:
     """One well reaches its steady rate after `share` of the read: three time constants."""
     row = site.any_well()
-    tau_s = share * site.length_s / 3.0
-    late_um = float(row["v0_um_per_s"]) * tau_s
-    points = max(share * site.bench.design.time_s.size, 3.0)
-    error = site.read_sd_um * 4.0 / np.sqrt(points)
-    return _in_well(row, lambda well: Lag(tau_s, well), late_um / error)
+    return site.in_curve(row, lambda well: Lag(share * site.length_s / 3.0, well))
 
 
 def _pipetting(site: Site, share: float) -> Struck:
     """One well got `share` less enzyme than planned."""
     row = site.any_well()
-    noise = site.bench.noise
-    own = float(row["v0_se_um_per_s"]) / float(row["v0_um_per_s"])
-    order = site.bench.truth[str(row["lot"])].k_um
-    order = order / (order + float(row["substrate_um"]))
-    error = float(np.sqrt(noise.enzyme_cv**2 + (order * noise.substrate_cv) ** 2 + own**2))
+    error = residual_error(site.bench, site.rates[site.rates["lot"] == row["lot"]], str(row["well"]))
     return _in_well(row, lambda well: PipettingError(enzyme_factor=1.0 - share, wells=well), share / error)
 
 
 def _edge(site: Site, share: float) -> Struck:
     """Wells at the plate's edge run `share` slower."""
-    edge = site.rates["at_edge"].to_numpy(dtype=bool)
-    each = float(np.hypot(site.bench.noise.enzyme_cv, site.bench.noise.substrate_cv))
-    counts = max(int(edge.sum()), 1), max(int((~edge).sum()), 1)
-    error = each * float(np.sqrt(1.0 / counts[0] + 1.0 / counts[1]))
+    error = edge_error(site.bench, site.rates)
     return Struck((EdgeEffect(1.0 - share),), tuple(site.rates["well"]), None, share / error)
 
 
@@ -227,14 +222,11 @@ def _lost_activity(site: Site, share: float) -> Struck:
     """A lot loses `share` of its activity by the end of the read."""
     lot = site.any_lot()
     loss = -np.log1p(-share) / site.length_s
-    rows = site.rates[site.rates["lot"] == lot]
-    # What the loss costs by the end of the read, against the noise of a read, over all wells of the lot.
-    lost_um = 0.5 * share * rows["v0_um_per_s"].to_numpy(dtype=float) * site.length_s
-    seen_um = np.minimum(lost_um, 0.5 * rows["substrate_um"].to_numpy(dtype=float))
-    error = site.read_sd_um * 4.0 / np.sqrt(site.bench.design.time_s.size)
-    size = float(np.sqrt(np.sum((seen_um / error) ** 2)))
     wells = site.wells_of(lot)
-    return Struck((ActivityLoss(float(loss), wells),), wells, lot, size)
+    fault = ActivityLoss(float(loss), wells)
+    # Whole curves see all reads.
+    size = curve_size(site.bench, (fault,), wells, (site.length_s,) * len(wells))
+    return Struck((fault,), wells, lot, size)
 
 
 def _temperature(site: Site, kelvin: float) -> Struck:
