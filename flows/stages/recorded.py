@@ -5,7 +5,7 @@ Batches are read and written here; how their rows are computed or stored is the 
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import Any
@@ -87,16 +87,21 @@ class RecordedBatch:
         return frame
 
 
-def recorded_batches(site: Site) -> Iterator[RecordedBatch]:
+def recorded_batches(site: Site, entries: Sequence[Entry] | None = None) -> Iterator[RecordedBatch]:
     """Yield every batch in the order in which they were loaded.
+
+    Parameters
+    ----------
+    entries
+        The ledger's entries where the caller has them; None reads them.
 
     Raises
     ------
     LedgerError
         If a line is no entry, or an entry does not say which lake files were loaded.
     """
-    written_again = _written_again(site)
-    for entry in ledger.entries(site):
+    written_again = _written_again(ledger.entries(site) if entries is None else entries)
+    for entry in ledger.entries(site) if entries is None else entries:
         if entry.kind in LOADING_KINDS:
             yield _batch(site, entry, written_again)
 
@@ -164,10 +169,10 @@ def record_rebuilt(site: Site, replaced: Sequence[tuple[LakeFile, LakeFile]], no
         ledger.append(site, "lake_rebuilt", {"lake_files": files}, at=now)
 
 
-def _written_again(site: Site) -> dict[tuple[str, str], tuple[str, int]]:
+def _written_again(entries: Iterable[Entry]) -> dict[tuple[str, str], tuple[str, int]]:
     """Digest and size that a file has now, by its path and the digest that it had."""
     found: dict[tuple[str, str], tuple[str, int]] = {}
-    for entry in ledger.entries(site):
+    for entry in entries:
         files = entry.body.get("lake_files") if entry.kind == "lake_rebuilt" else None
         for each in files if isinstance(files, list) else ():
             if isinstance(each, Mapping):
