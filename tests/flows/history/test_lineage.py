@@ -10,16 +10,8 @@ from flows.site.archive import raw_path
 from flows.stages.load import load_results
 from flows.stages.publish import publish_results
 from models.errors import QueryError, SiteError
-from tests.flows.tiny_site import (
-    FIRST_NIGHT,
-    HELD,
-    LEVELS_UM,
-    analysed_tables,
-    empty_site,
-    signal,
-    tiny_recipe,
-    tiny_site,
-)
+from tests.flows.tiny_plates import FIRST_NIGHT, HELD, LEVELS_UM, signal
+from tests.flows.tiny_site import analysed_tables, empty_site, tiny_recipe, tiny_site
 
 
 @pytest.fixture(scope="module")
