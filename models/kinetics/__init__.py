@@ -10,12 +10,13 @@ from importlib import import_module
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
-    from models.kinetics.notebook import Fit, FitRefused, fit, fit_michaelis_menten
+    from models.kinetics.notebook import fit, fit_michaelis_menten
+    from models.kinetics.one_fit import Fit, FitRefused
     from models.kinetics.own_laws import own_law
 
 _HOME = {
-    "Fit": "models.kinetics.notebook",
-    "FitRefused": "models.kinetics.notebook",
+    "Fit": "models.kinetics.one_fit",
+    "FitRefused": "models.kinetics.one_fit",
     "fit": "models.kinetics.notebook",
     "fit_michaelis_menten": "models.kinetics.notebook",
     "own_law": "models.kinetics.own_laws",
