@@ -14,6 +14,7 @@ from datetime import datetime
 from pathlib import Path
 
 import pandas as pd
+import pyarrow as pa
 
 from flows import lake, ledger
 from flows.history.recompute import Known, recompute
@@ -29,7 +30,7 @@ from flows.stages.publish import publish_results
 from flows.stages.recorded import RecordedBatch, record_rebuilt, recorded_batches
 from flows.warehouse import writer
 from flows.warehouse.bookkeeping import STORED
-from models.errors import HalfsatError
+from models.errors import HalfsatError, SiteError
 from models.tables import ANALYSES, GATE_RUNS, LOT_VALUES, READINGS, table
 
 Tell = Callable[[int, int], None]
@@ -191,8 +192,9 @@ class _Rebuilding:
     def take(self, batch: RecordedBatch) -> None:
         """Bring one batch into the new warehouse, from the lake or computed again."""
         self.known.learn(batch)
-        if _whole(self.site, batch):
-            writer.load(self.beside, stored_rows(self.site, batch), as_batch(batch))
+        rows = _rows_in_lake(self.site, batch)
+        if rows is not None:
+            writer.load(self.beside, rows, as_batch(batch))
             self.kept += 1
             return
         try:
@@ -256,6 +258,17 @@ class _Rebuilding:
             f"{error}; it was made by halfsat {', '.join(others)}, and this is {code_version()} "
             "(rebuild with that version first, then with this one)"
         )
+
+
+def _rows_in_lake(site: Site, batch: RecordedBatch) -> dict[str, pa.Table] | None:
+    """Rows of a batch as the lake has them; None where they must be computed again."""
+    if not _whole(site, batch):
+        return None
+    try:
+        return stored_rows(site, batch)
+    except SiteError:
+        # A column that must be known now was not there when the files were written.
+        return None
 
 
 def _whole(site: Site, batch: RecordedBatch) -> bool:
