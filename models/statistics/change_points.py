@@ -18,7 +18,7 @@ Integers = NDArray[np.int_]
 ALPHA = 0.01
 SHORTEST = 3
 """Fewest points of a level: one or two points off are an outlier, which is a chart's business."""
-# An even grid over half a turn, to which the integrand, of the same period, is exact to many digits.
+# An even grid over half a turn, the period of the integrand: good to 1e-5 of a p value from 5 points on, 0.3 % for 3.
 _ANGLES = np.linspace(0.0, np.pi, 4001)[:-1] + np.pi / 8000.0
 _PLACES_AT_ONCE = 256
 
