@@ -5,7 +5,7 @@ Simulated plates go through the stages of a pass, a few dozen at a time; nothing
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass
 from multiprocessing import get_context
@@ -16,11 +16,11 @@ from numpy.typing import NDArray
 from scipy.optimize import isotonic_regression
 from scipy.stats import norm
 
-from checks.gates import GATES
+from checks.gates import GATES, GateInput
 from flows.proving.bench import ProvingBench
 from flows.proving.trials import Site, Struck, Trial, for_bench
 from flows.stages.fit import fit_batch
-from flows.stages.gate import gate_batch
+from flows.stages.gate import gate_batch, gate_input
 from flows.stages.rate import rate_batch
 from flows.stages.work import FittedBatch, RatedBatch
 from models.simulation import SimulatedPlate, simulate_plate
@@ -40,13 +40,18 @@ PER_ENZYME_AND_K = ("kcat_per_km", "kcat_per_k_half")
 
 @dataclass(frozen=True)
 class CleanGate:
-    """How often one gate holds clean subjects: subjects tried, held, and not assessed."""
+    """How often one gate holds clean subjects: those that it has a word on, held, and not assessed."""
 
     gate: str
     subject: str
     subjects: int
     held: int
     not_assessed: int
+
+    @property
+    def assessed(self) -> int:
+        """Subjects that the gate could judge."""
+        return self.subjects - self.not_assessed
 
 
 @dataclass(frozen=True)
@@ -142,7 +147,10 @@ def prove_clean(bench: ProvingBench, plates: int, seed: int) -> Clean:
     wells = held = 0
     ratios: list[float] = []
     for numbers in _batches(range(plates)):
-        tables = through_line(bench, [simulate(bench, (seed, 0, n)) for n in numbers]).tables
+        works = [bench.work(k, simulate(bench, (seed, 0, n))) for k, n in enumerate(numbers)]
+        rated = rate_batch(works)
+        tables = fit_batch(gate_batch(rated)).tables
+        data = _judged(rated, tables)
         findings = tables["findings"]
         with_enzyme = tables["wells"]["role"].isin(("sample", "reference"))
         wells += int(with_enzyme.sum())
@@ -150,10 +158,11 @@ def prove_clean(bench: ProvingBench, plates: int, seed: int) -> Clean:
         for gate in GATES.values():
             if not bench.limits[gate.name]["on"]:
                 continue
+            measured = gate.metrics(data)["subject"].value_counts()
             for subject in gate.subjects:
                 mine = findings[(findings["gate"] == gate.name) & (findings["subject"] == subject)]
                 tally = tallies.setdefault((gate.name, subject), [0, 0, 0])
-                tally[0] += _subject_count(subject, tables, int(with_enzyme.sum()))
+                tally[0] += int(measured.get(subject, 0))
                 tally[1] += int((mine["outcome"] == "breach").sum())
                 tally[2] += int((mine["outcome"] == "not_assessed").sum())
         ratios += _log_ratios(tables["estimates"])
@@ -292,14 +301,17 @@ def _series_of(fitted: FittedBatch, analysis_id: str, wells: Sequence[str]) -> s
     return set(table.loc[mine, "series_id"])
 
 
-def _subject_count(subject: str, tables: dict[str, pd.DataFrame], wells: int) -> int:
-    if subject == "well":
-        return wells
-    if subject == "series":
-        return len(tables["series"])
-    if subject == "lot":
-        return len(tables["series"].drop_duplicates(["analysis_id", "lot"]))
-    return len(tables["analyses"])
+def _judged(rated: RatedBatch, tables: Mapping[str, pd.DataFrame]) -> GateInput:
+    """What the gates see of a fitted batch: to count the subjects that they have a word on."""
+    points = tables["fit_points"].merge(tables["fits"][["fit_id", "series_id"]], on="fit_id")
+    return gate_input(
+        rated,
+        series=tables["series"],
+        estimates=tables["estimates"],
+        fits=tables["fits"],
+        points=points,
+        comparisons=tables["comparisons"],
+    )
 
 
 def _log_ratios(estimates: pd.DataFrame) -> list[float]:
