@@ -80,9 +80,11 @@ class _Projected:
         self, law: RateLaw, conditions: Conditions, rates: Floats, weights: Floats, series: int
     ) -> None:
         self._law = law
-        self._conditions = conditions.select(np.array([series]))
-        self._rates = rates[:, series]
-        self._root = np.sqrt(weights[:, series])
+        # Without the places that only fill the batch's array: a sum over them would round otherwise.
+        used = weights[:, series] > 0
+        self._conditions = conditions.select(np.array([series])).points(used)
+        self._rates = rates[used, series]
+        self._root = np.sqrt(weights[used, series])
 
     def amplitude(self, coordinates: Floats) -> float:
         return self._solve(coordinates)[0]

@@ -57,6 +57,13 @@ class Conditions:
             self.substrate_um[:, series], self.log_substrate[:, series], modulator, enzyme, further
         )
 
+    def points(self, used: Array) -> Conditions:
+        """Conditions at some of the levels, by mask or index."""
+        modulator = None if self.modulator_um is None else self.modulator_um[used]
+        enzyme = None if self.enzyme_um is None else self.enzyme_um[used]
+        further = tuple(each[used] for each in self.further)
+        return Conditions(self.substrate_um[used], self.log_substrate[used], modulator, enzyme, further)
+
     @property
     def modulator(self) -> Floats:
         """Modulator [umol/L], for laws that need one.

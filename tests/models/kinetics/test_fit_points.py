@@ -8,6 +8,9 @@ import pytest
 from scipy.optimize import curve_fit
 
 from models.kinetics.fitting import fit_rates
+from models.kinetics.laws import HILL, at_levels
+from models.kinetics.least_squares import Minimum
+from models.kinetics.stragglers import settle
 
 LEVELS_UM = 80.0 * np.geomspace(0.125, 12.0, 8)
 
@@ -121,3 +124,21 @@ def test_blocks_of_plates_give_what_one_block_gives(monkeypatch):
     np.testing.assert_array_equal(np.sort(parts.points["place"]), np.arange(len(frame)))
     assert parts.points["place"].is_monotonic_increasing
     assert set(parts.refusals["series"]) == {8}
+
+
+def test_a_series_that_scipy_settles_does_not_depend_on_the_longest_of_its_batch():
+    """Places that only fill an array, of weight 0, must not change a sum's last bit."""
+    generator = np.random.default_rng(2)
+    substrate = np.repeat(LEVELS_UM, 3)[:, None]
+    rate = 0.05 * substrate / (80.0 + substrate) * (1 + 0.4 * generator.standard_normal((24, 1)))
+    found = []
+    for filling in (0, 7, 40):
+        filled = [np.pad(each, ((0, filling), (0, 0)), constant_values=1.0) for each in (substrate, rate)]
+        weights = np.pad(1.0 + rate**2, ((0, filling), (0, 0)))
+        start = Minimum(np.ones(1), np.array([[4.0], [1.2]]), np.full(1, np.inf), np.zeros(1, dtype=bool))
+        limits = np.array([[0.0], [0.2]]), np.array([[9.0], [5.0]])
+        settled = settle(HILL, at_levels(filled[0]), filled[1], weights, start, *limits)
+        found.append(
+            (settled.amplitude.tolist(), settled.coordinates.tolist(), settled.residual_sum.tolist())
+        )
+    assert found[0][:2] == found[1][:2] == found[2][:2]
