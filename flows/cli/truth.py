@@ -6,6 +6,7 @@ What computes is imported when a command runs, so that help answers at once.
 from __future__ import annotations
 
 import csv
+import textwrap
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from datetime import UTC, datetime
@@ -216,12 +217,11 @@ def _show_rebuilt(screen: Console, report: RebuildReport) -> None:
 
 
 def _lines(screen: Console, title: str, lines: Sequence[str]) -> None:
-    from rich.padding import Padding
-    from rich.text import Text
-
     _plainly(screen, title)
     for line in lines:
-        screen.print(Padding(Text(line), (0, 0, 0, 2), expand=False))
+        # A path that is longer than the line stays in one piece, to be copied.
+        wrapped = textwrap.wrap(line, screen.width - 2, break_long_words=False, break_on_hyphens=False)
+        screen.print(textwrap.indent("\n".join(wrapped), "  "), markup=False, soft_wrap=True)
 
 
 def _plainly(screen: Console, text: str) -> None:

@@ -168,6 +168,8 @@ def _named(site: Site, entries: Sequence[Entry]) -> _Named:
         elif entry.kind == "recipe_kept":
             named.recipes[str(body["recipe_id"])] = None
         elif entry.kind == "published":
+            # A rebuilt warehouse numbers its copies anew: the last entry of a name counts, and stands last.
+            named.published.pop(str(body["file"]), None)
             named.published[str(body["file"])] = str(body["sha256"])
     for batch in recorded_batches(site, entries):
         named.batches.append(batch)

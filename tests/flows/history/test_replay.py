@@ -15,7 +15,7 @@ from flows.site.recipes import recipe_path
 from flows.warehouse.reader import open_published
 from models.errors import QueryError
 from models.identity import content_id
-from tests.flows.history.conftest import PLATES
+from tests.flows.conftest import PLATES
 
 
 def one(site: Site, sql: str) -> str:
@@ -133,7 +133,7 @@ def test_a_lost_export_a_changed_map_and_a_lost_recipe_are_named(nights: Site) -
     assert refusals[PLATES[1]] is None
 
 
-def test_other_code_is_refused_by_name_and_compared_on_request(
+def test_other_code_is_refused_by_name_and_compared_on_request_and_nothing_written(
     kept_nights: Site, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     analysis = one(kept_nights, f"SELECT analysis_id FROM current_analyses WHERE plate_id = '{PLATES[2]}'")
@@ -142,9 +142,15 @@ def test_other_code_is_refused_by_name_and_compared_on_request(
     (refused,) = replay(kept_nights, analysis).analyses
     assert f"made by halfsat {made_by}, and this is 9.9+other" in str(refused.refusal)
     assert not refused.equal
+
+    def state() -> dict[Path, int]:
+        return {path: path.stat().st_mtime_ns for path in kept_nights.root.rglob("*")}
+
+    before = state()
     report = replay(kept_nights, analysis, other_code=True)
     assert report.by_other_code == report.analyses
     assert report.equal_count == 1
+    assert state() == before
 
 
 def test_a_kept_recipe_keeps_its_id_whatever_its_records_gain(kept_nights: Site) -> None:
@@ -152,12 +158,3 @@ def test_a_kept_recipe_keeps_its_id_whatever_its_records_gain(kept_nights: Site)
     recipe = replaying.RawReader(kept_nights).recipe(recipe_id)
     assert recipe.recipe_id == recipe_id
     assert content_id(recipe.canonical.encode()) == recipe_id
-
-
-def test_replay_writes_nothing(kept_nights: Site) -> None:
-    def state() -> dict[Path, int]:
-        return {path: path.stat().st_mtime_ns for path in kept_nights.root.rglob("*")}
-
-    before = state()
-    replay(kept_nights, one(kept_nights, "SELECT analysis_id FROM analyses LIMIT 1"))
-    assert state() == before
