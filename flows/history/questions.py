@@ -35,9 +35,8 @@ _PARAMETER = re.compile(
     r"(?P<name>[a-z][a-z0-9_]*) \((?P<kind>\w+), "
     r"(?:(?P<way>required|optional)|default (?P<default>[^)]+))\): (?P<meaning>\S.*)"
 )
-_HEAD = (
-    "a head of '-- title:', '-- answers:' and '-- parameter: NAME (KIND, required|optional|default X): ...'"
-)
+_ONE_PARAMETER = "NAME (KIND, required), (KIND, optional) or (KIND, default X): meaning"
+_HEAD = f"begin with '-- title:', '-- answers:' and for each parameter '-- parameter: {_ONE_PARAMETER}'"
 # What is no use of a parameter: text in quotes, and comments.
 _QUOTED = re.compile(r"'(?:[^']|'')*'|\"(?:[^\"]|\"\")*\"|--[^\n]*")
 _USE = re.compile(r"\$([a-z_][a-z0-9_]*)", re.IGNORECASE)
