@@ -27,6 +27,7 @@ def a_plate(
     rows = [("reference", "REF", substrate_um, rate) for rate in reference]
     rows += [("blank", None, substrate_um, rate) for rate in blank]
     rows += [("reference", name, 100.0, rate) for name, rates in others.items() for rate in rates]
+    rows.append(("sample", "L1", substrate_um, 20.0))
     frame = pd.DataFrame(rows, columns=["role", "lot", "substrate_um", "raw_rate_um_per_s"])
     frame = frame.assign(
         analysis_id="plate-1", well=[f"A{n}" for n in range(1, len(frame) + 1)], enzyme_nm=1.0
