@@ -67,6 +67,9 @@ def test_clean_plates_are_left_alone_and_counted():
     assert subjects["substrate_depletion", "well"] == 6 * 48
     assert subjects["fit_misfit", "series"] == 12
     assert subjects["plate_position", "plate_read"] == 6
+    # A lot at one enzyme level, a plate without standards: there is nothing to judge.
+    assert subjects["enzyme_inactivation", "lot"] == 0
+    assert subjects["standard_curve", "plate_read"] == 0
     assert 0.005 < clean.log_ratio_sd < 0.2
     assert clean.smallest_change(4) == pytest.approx(math.exp(2.8016 * clean.log_ratio_sd / 2) - 1, rel=1e-4)
 
@@ -79,6 +82,13 @@ def test_a_glaring_fault_is_named_by_its_gate_and_a_tiny_one_is_not():
     assert (glaring.caught, glaring.named, glaring.large) == (6, 6, 6)
 
 
+def test_sizes_that_go_through_the_line_together_give_what_each_gives_alone():
+    lag = trial("lag")
+    together = prove_trial(bench(), lag, 2, 3, (0.2, 0.6))
+    alone = [prove_trial(bench(), lag, 2, 3, (size,)).points[0] for size in (0.2, 0.6)]
+    assert list(together.points) == alone
+
+
 def test_a_fault_of_a_lot_and_one_of_the_plate_are_caught():
     for name, size in (("highest substrate", 0.5), ("edge effect", 0.2)):
         (point,) = prove_trial(bench(), trial(name), 4, 1, (size,)).points
@@ -87,7 +97,7 @@ def test_a_fault_of_a_lot_and_one_of_the_plate_are_caught():
 
 def test_a_gate_that_is_off_catches_nothing_and_is_not_counted():
     lenient = bench(gates={"detector_range": {"on": False}})
-    (point,) = prove_trial(lenient, trial("reads past"), 3, 1, (1.0,)).points
+    (point,) = prove_trial(lenient, trial("top reads past"), 3, 1, (1.0,)).points
     assert point.named == 0
     assert "detector_range" not in {gate.gate for gate in prove_clean(lenient, 2, 1).gates}
 
