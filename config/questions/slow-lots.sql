@@ -9,9 +9,8 @@ WITH turnover AS (
     FROM lot_latest
     WHERE constant IN ('kcat', 'specific_activity') AND modulator IS NULL AND value IS NOT NULL
 )
-SELECT l.assay, l.lot, l.constant, l.value, l.low, l.high, l.unit, r.lot AS reference_lot,
-       r.value AS reference_value, 100 * (1 - l.value / r.value) AS slower_by_percent,
-       l.high < r.low AS surely, l.plate_read_count, l.standing
+SELECT l.lot, r.lot AS reference_lot, l.constant, l.value, r.value AS reference_value, l.unit,
+       100 * (1 - l.value / r.value) AS slower_by_percent, l.high < r.low AS surely, l.standing
 FROM turnover l
 JOIN turnover r ON r.assay = l.assay AND r.constant = l.constant AND r.role = 'reference' AND r.place = 1
 WHERE l.role = 'sample' AND l.place = 1 AND l.value <= r.value * (1 - $percent / 100.0)

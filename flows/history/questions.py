@@ -102,6 +102,13 @@ class Question:
     sql: str
     own: bool
 
+    @property
+    def query(self) -> str:
+        """The SQL without its head."""
+        lines = self.sql.splitlines()
+        begin = next((place for place, line in enumerate(lines) if not line.startswith("--")), len(lines))
+        return "\n".join(lines[begin:]).strip()
+
 
 def is_name(text: str) -> bool:
     """Whether a text is a question's name rather than SQL: one word."""
@@ -128,7 +135,7 @@ def load_questions(site: Site | None) -> dict[str, Question]:
     return dict(sorted(found.items()))
 
 
-def find_question(site: Site, name: str) -> Question:
+def find_question(site: Site | None, name: str) -> Question:
     """One question by its name.
 
     Raises
