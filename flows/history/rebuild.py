@@ -120,6 +120,9 @@ class _Restorer:
             unlike = _unlike_columns(file, now)
             if unlike:
                 raise _Unlike(f"{table_name}: {unlike}")
+            if lake.locate(self.site, file.path, file.sha256) is not None and _has_all_columns(file):
+                self.restored[table_name, stem] = file
+                return
             self.replaced.append((file, now))
         self.restored[table_name, stem] = replace(now, columns=file.columns)
         if lake.locate(self.site, file.path, now.sha256) is None:
@@ -300,6 +303,11 @@ def _as_stored(file: LakeFile, frame: pd.DataFrame) -> pd.DataFrame:
         return frame
     since = [c.name for c in table(file.table_name).columns if c.name not in file.columns and c.nullable]
     return frame.assign(**dict.fromkeys(since)) if since else frame
+
+
+def _has_all_columns(file: LakeFile) -> bool:
+    """Whether a file was written with every column that must be known now."""
+    return all(c.nullable or c.name in file.columns for c in table(file.table_name).columns)
 
 
 def _unlike_columns(file: LakeFile, now: LakeFile) -> str:

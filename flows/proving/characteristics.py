@@ -5,6 +5,7 @@ Simulated plates go through the stages of a pass, a few dozen at a time; nothing
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Iterator, Mapping, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass
@@ -97,6 +98,8 @@ class Caught:
         Plates on which the subject was held, and by a gate that names the fault.
     large_caught, large_named
         The same of the large ones; `large_named` counts caught ones.
+    gates
+        Gates that held the subject, with the plates on which each did, the most frequent first.
     """
 
     size: float
@@ -106,6 +109,7 @@ class Caught:
     named: int
     large_caught: int
     large_named: int
+    gates: tuple[tuple[str, int], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -114,6 +118,14 @@ class Curve:
 
     trial: Trial
     points: tuple[Caught, ...]
+
+    def caught_by(self, most: int = 2) -> tuple[str, ...]:
+        """Gates that catch it most often, over all sizes; none that has a tenth of the share of the first."""
+        counts: Counter[str] = Counter()
+        for point in self.points:
+            counts.update(dict(point.gates))
+        ordered = sorted(counts.items(), key=lambda item: (-item[1], item[0]))
+        return tuple(gate for gate, count in ordered[:most] if count > 0.1 * ordered[0][1])
 
     def size_caught(self, share: float) -> float:
         """Size from which so many are caught, by isotonic regression between the sizes tried; NaN if none."""
@@ -183,7 +195,7 @@ def prove_trial(
 ) -> Curve:
     """Take plates with one kind of fault through the line, at each of its sizes."""
     tried = tuple(trial.sizes if sizes is None else sizes)
-    seen: dict[float, list[tuple[bool, bool, bool]]] = {size: [] for size in tried}
+    seen: dict[float, list[_Outcome]] = {size: [] for size in tried}
     # All sizes go through the line together: a batch costs seconds, a plate in it a fraction of one.
     for numbers in _batches(range(plates), len(tried)):
         clean = [simulate(bench, (seed, 1, n)) for n in numbers]
@@ -201,16 +213,27 @@ def prove_trial(
     return Curve(trial, tuple(points))
 
 
-def _counted(size: float, seen: Sequence[tuple[bool, bool, bool]]) -> Caught:
-    large = [one for one in seen if one[2]]
+@dataclass(frozen=True)
+class _Outcome:
+    """One plate: the gates that held its subject, whether one of them names the fault, whether it is large."""
+
+    gates: frozenset[str]
+    named: bool
+    large: bool
+
+
+def _counted(size: float, seen: Sequence[_Outcome]) -> Caught:
+    large = [one for one in seen if one.large]
+    counts = Counter(gate for one in seen for gate in one.gates)
     return Caught(
         size,
         len(seen),
         len(large),
-        sum(one[0] for one in seen),
-        sum(one[1] for one in seen),
-        sum(one[0] for one in large),
-        sum(one[1] for one in large),
+        sum(bool(one.gates) for one in seen),
+        sum(one.named for one in seen),
+        sum(bool(one.gates) for one in large),
+        sum(one.named for one in large),
+        tuple(sorted(counts.items(), key=lambda item: (-item[1], item[0]))),
     )
 
 
@@ -275,8 +298,7 @@ def _site(
     return Site(bench, plate, own, np.random.default_rng(list(seed)))
 
 
-def _caught(trial: Trial, struck: Struck, fitted: FittedBatch, analysis_id: str) -> tuple[bool, bool, bool]:
-    """Whether the subject is held, whether by a gate that names the fault, and whether the fault is large."""
+def _caught(trial: Trial, struck: Struck, fitted: FittedBatch, analysis_id: str) -> _Outcome:
     findings = fitted.tables["findings"]
     mine = findings[(findings["analysis_id"] == analysis_id) & (findings["outcome"] == "breach")]
     if trial.subject == "well":
@@ -291,8 +313,8 @@ def _caught(trial: Trial, struck: Struck, fitted: FittedBatch, analysis_id: str)
         mine = mine[of_lot | (mine["well"].isin(struck.wells) & mine["gate"].isin(many))]
     else:
         mine = mine[mine["subject"] == "plate_read"]
-    gates = set(mine["gate"])
-    return bool(gates), bool(gates & set(trial.named_by)), bool(struck.standard_errors > LARGE)
+    gates = frozenset(mine["gate"])
+    return _Outcome(gates, bool(gates & set(trial.named_by)), bool(struck.standard_errors > LARGE))
 
 
 def _series_of(fitted: FittedBatch, analysis_id: str, wells: Sequence[str]) -> set[str]:

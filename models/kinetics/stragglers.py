@@ -91,14 +91,16 @@ class _Projected:
 
     def residuals(self, coordinates: Floats) -> Floats:
         best, shape, _ = self._solve(coordinates)
-        return self._root * self._rates - best * shape
+        residuals: Floats = self._root * self._rates - best * shape
+        return residuals
 
     def jacobian(self, coordinates: Floats) -> NDArray[np.float64]:
         """Kaufman's form: what is left of the derivatives beside the shape itself."""
         best, shape, slopes = self._solve(coordinates)
         if self._law.amplitude is not None:
             slopes = slopes - np.outer(shape, shape @ slopes) / float(shape @ shape)
-        return -best * slopes
+        jacobian: NDArray[np.float64] = -best * slopes
+        return jacobian
 
     def _solve(self, coordinates: Floats) -> tuple[float, Floats, Floats]:
         with np.errstate(all="ignore"):

@@ -46,7 +46,9 @@ def test_a_whole_site_is_whole_and_every_kind_of_thing_was_looked_at(kept_nights
     assert counts["raw files"] == sum(parts[0] == "raw" for parts in files)
     assert counts["lake files"] == sum(parts[-1].endswith(".parquet") for parts in files)
     assert counts["gate documents"] == sum("gate_documents" in parts for parts in files)
-    assert counts["recipes"] + counts["profiles"] == sum("recipes" in parts for parts in files)
+    assert counts["recipes"] + counts["profiles"] == sum(
+        parts[:2] == ("config", "recipes") for parts in files
+    )
     assert counts["published copies"] == sum(parts[-1].startswith("published-") for parts in files)
     lines = kept_nights.ledger_file.read_bytes().count(b"\n")
     assert counts["ledger entries"] == lines
