@@ -215,7 +215,7 @@ def prove_trial(
 
 @dataclass(frozen=True)
 class _Outcome:
-    """One plate: the gates that held its subject, whether one of them names the fault, whether it is large."""
+    """One plate: the gates that held its subject, whether one names the fault, whether it is large."""
 
     gates: frozenset[str]
     named: bool

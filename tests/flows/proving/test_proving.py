@@ -46,7 +46,10 @@ def trial(name: str):
 
 def curve(shares: list[float]) -> Curve:
     sizes = trial("blank").sizes
-    points = [Caught(size, 20, 20, round(20 * s), 0, 0, 0) for size, s in zip(sizes, shares, strict=True)]
+    points = [
+        Caught(size, 20, 20, round(20 * s), 0, 0, 0, (("blank_drift", round(20 * s)), ("fit_misfit", 1)))
+        for size, s in zip(sizes, shares, strict=True)
+    ]
     return Curve(trial("blank"), tuple(points))
 
 
@@ -118,6 +121,12 @@ def test_a_simulated_plate_goes_through_the_line_with_its_constants():
     np.testing.assert_allclose(km, 80.0, rtol=0.1)
 
 
+def test_gates_that_catch_are_told_in_order_and_those_of_chance_left_out():
+    (point,) = prove_trial(bench(), trial("edge effect"), 3, 1, (0.2,)).points
+    assert dict(point.gates)["plate_position"] == point.caught == 3
+    assert curve([0.0, 0.2, 0.5, 1.0, 1.0]).caught_by() == ("blank_drift",)
+
+
 def test_the_size_caught_lies_between_the_sizes_tried():
     assert curve([0.0, 0.0, 0.5, 1.0, 1.0]).size_caught(0.5) == pytest.approx(0.15)
     assert curve([0.0, 0.0, 0.5, 1.0, 1.0]).size_caught(0.95) == pytest.approx(0.195)
@@ -153,8 +162,11 @@ def test_tables_hold_at_80_columns_and_rows_and_drawing_say_the_same(capsys):
     printed = capsys.readouterr().out
     assert max(len(line) for line in printed.splitlines()) <= 80
     assert "15 %" in printed
+    assert "blank_drift" in printed
     rows = csv_rows(clean, curves)
     assert [row[7] for row in rows[1:]] == [0, 4, 10, 20, 20]
+    assert {len(row) for row in rows} == {len(rows[0])}
+    assert rows[-1][-1] == "blank_drift:20 fit_misfit:1"
     assert b"<svg" in drawing(curves, ".svg")
 
 
