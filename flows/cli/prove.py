@@ -112,8 +112,13 @@ def show(screen: Console, bench: ProvingBench, clean: Clean, curves: Sequence[Cu
     share = clean.held_well_count / clean.well_count if clean.well_count else math.nan
     screen.print(f"all gates together hold {share * 100:.2f} % of {clean.well_count} clean wells")
     heading(screen, "Faults: the size from which they are caught")
-    names = [("fault", "left"), ("50 % at", "right"), ("95 % at", "right"), ("sizes tried: caught", "left")]
+    names = [("fault", "left"), ("50 % at", "right"), ("95 % at", "right"), ("caught by", "left")]
     screen.print(plain_table(names, [_fault_row(curve) for curve in curves]))
+    tried = curves[0].points[0].plates if curves else 0
+    screen.print(
+        f"read off isotonic regression between sizes of {tried} plates each; a wrong gate may be among those "
+        "that catch; –: not caught so often at any size tried"
+    )
     heading(screen, "Smallest change of kcat/K against the reference that is seen")
     if math.isfinite(clean.log_ratio_sd):
         rows = [(f"{n}", f"{clean.smallest_change(n) * 100:.1f} %") for n in PLATES_OF_A_LOT]
@@ -140,10 +145,11 @@ def csv_rows(clean: Clean, curves: Sequence[Curve]) -> list[list[object]]:
             "named",
             "large_held",
             "large_named",
+            "gates",
         ]
     ]
     for each in clean.gates:
-        rows.append(["clean", each.gate, each.subject, "", "", each.subjects, "", each.held, "", "", ""])
+        rows.append(["clean", each.gate, each.subject, "", "", each.subjects, "", each.held, "", "", "", ""])
     for curve in curves:
         trial = curve.trial
         rows += [
@@ -159,6 +165,7 @@ def csv_rows(clean: Clean, curves: Sequence[Curve]) -> list[list[object]]:
                 point.named,
                 point.large_caught,
                 point.large_named,
+                " ".join(f"{gate}:{count}" for gate, count in point.gates),
             ]
             for point in curve.points
         ]
@@ -209,10 +216,7 @@ def _fault_row(curve: Curve) -> tuple[str, ...]:
         ("≤ " if first.caught >= share * first.plates else "") + _size(curve, curve.size_caught(share))
         for share in SHARES
     ]
-    tried = ", ".join(
-        f"{_size(curve, point.size)}: {100.0 * point.caught / point.plates:.0f} %" for point in curve.points
-    )
-    return curve.trial.name, *at, tried
+    return curve.trial.name, *at, ", ".join(curve.caught_by())
 
 
 def _size(curve: Curve, size: float) -> str:

@@ -19,7 +19,10 @@ EXIT_DONE, EXIT_ATTENTION, EXIT_WRONG_USE, EXIT_FAILED = 0, 1, 2, 3
 
 @dataclass(frozen=True)
 class Entry:
-    """A command: the line that `--help` shows, and the module below flows.cli that holds it as `command`."""
+    """A command: the line that `--help` shows, and the module below flows.cli that holds it.
+
+    It is called `command` there, unless its name stands after a colon.
+    """
 
     summary: str
     module: str
@@ -33,6 +36,9 @@ COMMANDS: dict[str, Entry] = {
     "gates": Entry("Show which rules ran on what, and what they found.", "gates"),
     "history": Entry("Ask the warehouse a question in SQL.", "history"),
     "lineage": Entry("Trace a result back to the export's bytes.", "lineage"),
+    "replay": Entry("Compute results again from raw bytes and compare.", "truth:replay_command"),
+    "verify": Entry("Check every hash: ledger, raw files, lake, warehouse.", "truth:verify_command"),
+    "rebuild": Entry("Make lake and warehouse again from raw files and ledger.", "truth:rebuild_command"),
 }
 
 
@@ -48,9 +54,10 @@ class CommandTree(click.Group):
         entry = COMMANDS.get(cmd_name)
         if entry is None:
             return None
-        loaded = importlib.import_module(f"flows.cli.{entry.module}").command
+        module, _, name = entry.module.partition(":")
+        loaded = getattr(importlib.import_module(f"flows.cli.{module}"), name or "command")
         if not isinstance(loaded, click.Command):
-            raise TypeError(f"flows.cli.{entry.module}.command is no command")
+            raise TypeError(f"flows.cli.{entry.module} is no command")
         return loaded
 
     def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:

@@ -14,6 +14,7 @@ from datetime import datetime
 from pathlib import Path
 
 import pandas as pd
+import pyarrow as pa
 
 from flows import lake, ledger
 from flows.history.recompute import Known, recompute
@@ -29,7 +30,7 @@ from flows.stages.publish import publish_results
 from flows.stages.recorded import RecordedBatch, record_rebuilt, recorded_batches
 from flows.warehouse import writer
 from flows.warehouse.bookkeeping import STORED
-from models.errors import HalfsatError
+from models.errors import HalfsatError, SiteError
 from models.tables import ANALYSES, GATE_RUNS, LOT_VALUES, READINGS, table
 
 Tell = Callable[[int, int], None]
@@ -119,6 +120,9 @@ class _Restorer:
             unlike = _unlike_columns(file, now)
             if unlike:
                 raise _Unlike(f"{table_name}: {unlike}")
+            if lake.locate(self.site, file.path, file.sha256) is not None and _has_all_columns(file):
+                self.restored[table_name, stem] = file
+                return
             self.replaced.append((file, now))
         self.restored[table_name, stem] = replace(now, columns=file.columns)
         if lake.locate(self.site, file.path, now.sha256) is None:
@@ -191,8 +195,9 @@ class _Rebuilding:
     def take(self, batch: RecordedBatch) -> None:
         """Bring one batch into the new warehouse, from the lake or computed again."""
         self.known.learn(batch)
-        if _whole(self.site, batch):
-            writer.load(self.beside, stored_rows(self.site, batch), as_batch(batch))
+        rows = _rows_in_lake(self.site, batch)
+        if rows is not None:
+            writer.load(self.beside, rows, as_batch(batch))
             self.kept += 1
             return
         try:
@@ -258,6 +263,17 @@ class _Rebuilding:
         )
 
 
+def _rows_in_lake(site: Site, batch: RecordedBatch) -> dict[str, pa.Table] | None:
+    """Rows of a batch as the lake has them; None where they must be computed again."""
+    if not _whole(site, batch):
+        return None
+    try:
+        return stored_rows(site, batch)
+    except SiteError:
+        # A column that must be known now was not there when the files were written.
+        return None
+
+
 def _whole(site: Site, batch: RecordedBatch) -> bool:
     """Whether every lake file and gate document of a batch is as it was written."""
     return all(lake.locate(site, file.path, file.sha256) is not None for file in batch.lake_files) and all(
@@ -287,6 +303,11 @@ def _as_stored(file: LakeFile, frame: pd.DataFrame) -> pd.DataFrame:
         return frame
     since = [c.name for c in table(file.table_name).columns if c.name not in file.columns and c.nullable]
     return frame.assign(**dict.fromkeys(since)) if since else frame
+
+
+def _has_all_columns(file: LakeFile) -> bool:
+    """Whether a file was written with every column that must be known now."""
+    return all(c.nullable or c.name in file.columns for c in table(file.table_name).columns)
 
 
 def _unlike_columns(file: LakeFile, now: LakeFile) -> str:

@@ -168,6 +168,8 @@ def _named(site: Site, entries: Sequence[Entry]) -> _Named:
         elif entry.kind == "recipe_kept":
             named.recipes[str(body["recipe_id"])] = None
         elif entry.kind == "published":
+            # A rebuilt warehouse numbers its copies anew: the last entry of a name counts, and stands last.
+            named.published.pop(str(body["file"]), None)
             named.published[str(body["file"])] = str(body["sha256"])
     for batch in recorded_batches(site, entries):
         named.batches.append(batch)
@@ -280,14 +282,14 @@ def _loader(site: Site, named: _Named, notes: list[str]) -> Iterator[Damage]:
 def _since_publication(site: Site, named: _Named, place: str, notes: list[str]) -> Iterator[Damage]:
     """Look into a database that is not the one last published: a killed pass may have loaded more into it."""
     present = _loaded(site.loader_file)
-    if site.published_link.is_file() and present == _loaded(site.published_link):
-        what = "its bytes are not those that were published, though nothing was loaded since"
-        yield Damage(place, what, _REBUILD)
-        return
     recorded = {batch.batch_id: batch for batch in named.batches}
     if unknown := present - set(recorded):
         what = f"it holds {len(unknown)} batches that the ledger does not name: the end of the ledger is lost"
         yield Damage("ledger/ledger.jsonl", what, _BACKUP)
+        return
+    if site.published_link.is_file() and present == _loaded(site.published_link):
+        what = "its bytes are not those that were published, though nothing was loaded since"
+        yield Damage(place, what, _REBUILD)
         return
     lacking = len(set(recorded) - present)
     if lacking:

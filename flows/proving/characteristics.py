@@ -5,7 +5,8 @@ Simulated plates go through the stages of a pass, a few dozen at a time; nothing
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections import Counter
+from collections.abc import Iterator, Mapping, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass
 from multiprocessing import get_context
@@ -16,11 +17,11 @@ from numpy.typing import NDArray
 from scipy.optimize import isotonic_regression
 from scipy.stats import norm
 
-from checks.gates import GATES
+from checks.gates import GATES, GateInput
 from flows.proving.bench import ProvingBench
 from flows.proving.trials import Site, Struck, Trial, for_bench
 from flows.stages.fit import fit_batch
-from flows.stages.gate import gate_batch
+from flows.stages.gate import gate_batch, gate_input
 from flows.stages.rate import rate_batch
 from flows.stages.work import FittedBatch, RatedBatch
 from models.simulation import SimulatedPlate, simulate_plate
@@ -40,13 +41,18 @@ PER_ENZYME_AND_K = ("kcat_per_km", "kcat_per_k_half")
 
 @dataclass(frozen=True)
 class CleanGate:
-    """How often one gate holds clean subjects: subjects tried, held, and not assessed."""
+    """How often one gate holds clean subjects: those that it has a word on, held, and not assessed."""
 
     gate: str
     subject: str
     subjects: int
     held: int
     not_assessed: int
+
+    @property
+    def assessed(self) -> int:
+        """Subjects that the gate could judge."""
+        return self.subjects - self.not_assessed
 
 
 @dataclass(frozen=True)
@@ -92,6 +98,8 @@ class Caught:
         Plates on which the subject was held, and by a gate that names the fault.
     large_caught, large_named
         The same of the large ones; `large_named` counts caught ones.
+    gates
+        Gates that held the subject, with the plates on which each did, the most frequent first.
     """
 
     size: float
@@ -101,6 +109,7 @@ class Caught:
     named: int
     large_caught: int
     large_named: int
+    gates: tuple[tuple[str, int], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -109,6 +118,14 @@ class Curve:
 
     trial: Trial
     points: tuple[Caught, ...]
+
+    def caught_by(self, most: int = 2) -> tuple[str, ...]:
+        """Gates that catch it most often, over all sizes; none that has a tenth of the share of the first."""
+        counts: Counter[str] = Counter()
+        for point in self.points:
+            counts.update(dict(point.gates))
+        ordered = sorted(counts.items(), key=lambda item: (-item[1], item[0]))
+        return tuple(gate for gate, count in ordered[:most] if count > 0.1 * ordered[0][1])
 
     def size_caught(self, share: float) -> float:
         """Size from which so many are caught, by isotonic regression between the sizes tried; NaN if none."""
@@ -142,7 +159,10 @@ def prove_clean(bench: ProvingBench, plates: int, seed: int) -> Clean:
     wells = held = 0
     ratios: list[float] = []
     for numbers in _batches(range(plates)):
-        tables = through_line(bench, [simulate(bench, (seed, 0, n)) for n in numbers]).tables
+        works = [bench.work(k, simulate(bench, (seed, 0, n))) for k, n in enumerate(numbers)]
+        rated = rate_batch(works)
+        tables = fit_batch(gate_batch(rated)).tables
+        data = _judged(rated, tables)
         findings = tables["findings"]
         with_enzyme = tables["wells"]["role"].isin(("sample", "reference"))
         wells += int(with_enzyme.sum())
@@ -150,10 +170,11 @@ def prove_clean(bench: ProvingBench, plates: int, seed: int) -> Clean:
         for gate in GATES.values():
             if not bench.limits[gate.name]["on"]:
                 continue
+            measured = gate.metrics(data)["subject"].value_counts()
             for subject in gate.subjects:
                 mine = findings[(findings["gate"] == gate.name) & (findings["subject"] == subject)]
                 tally = tallies.setdefault((gate.name, subject), [0, 0, 0])
-                tally[0] += _subject_count(subject, tables, int(with_enzyme.sum()))
+                tally[0] += int(measured.get(subject, 0))
                 tally[1] += int((mine["outcome"] == "breach").sum())
                 tally[2] += int((mine["outcome"] == "not_assessed").sum())
         ratios += _log_ratios(tables["estimates"])
@@ -174,7 +195,7 @@ def prove_trial(
 ) -> Curve:
     """Take plates with one kind of fault through the line, at each of its sizes."""
     tried = tuple(trial.sizes if sizes is None else sizes)
-    seen: dict[float, list[tuple[bool, bool, bool]]] = {size: [] for size in tried}
+    seen: dict[float, list[_Outcome]] = {size: [] for size in tried}
     # All sizes go through the line together: a batch costs seconds, a plate in it a fraction of one.
     for numbers in _batches(range(plates), len(tried)):
         clean = [simulate(bench, (seed, 1, n)) for n in numbers]
@@ -192,16 +213,27 @@ def prove_trial(
     return Curve(trial, tuple(points))
 
 
-def _counted(size: float, seen: Sequence[tuple[bool, bool, bool]]) -> Caught:
-    large = [one for one in seen if one[2]]
+@dataclass(frozen=True)
+class _Outcome:
+    """One plate: the gates that held its subject, whether one names the fault, whether it is large."""
+
+    gates: frozenset[str]
+    named: bool
+    large: bool
+
+
+def _counted(size: float, seen: Sequence[_Outcome]) -> Caught:
+    large = [one for one in seen if one.large]
+    counts = Counter(gate for one in seen for gate in one.gates)
     return Caught(
         size,
         len(seen),
         len(large),
-        sum(one[0] for one in seen),
-        sum(one[1] for one in seen),
-        sum(one[0] for one in large),
-        sum(one[1] for one in large),
+        sum(bool(one.gates) for one in seen),
+        sum(one.named for one in seen),
+        sum(bool(one.gates) for one in large),
+        sum(one.named for one in large),
+        tuple(sorted(counts.items(), key=lambda item: (-item[1], item[0]))),
     )
 
 
@@ -266,8 +298,7 @@ def _site(
     return Site(bench, plate, own, np.random.default_rng(list(seed)))
 
 
-def _caught(trial: Trial, struck: Struck, fitted: FittedBatch, analysis_id: str) -> tuple[bool, bool, bool]:
-    """Whether the subject is held, whether by a gate that names the fault, and whether the fault is large."""
+def _caught(trial: Trial, struck: Struck, fitted: FittedBatch, analysis_id: str) -> _Outcome:
     findings = fitted.tables["findings"]
     mine = findings[(findings["analysis_id"] == analysis_id) & (findings["outcome"] == "breach")]
     if trial.subject == "well":
@@ -282,8 +313,8 @@ def _caught(trial: Trial, struck: Struck, fitted: FittedBatch, analysis_id: str)
         mine = mine[of_lot | (mine["well"].isin(struck.wells) & mine["gate"].isin(many))]
     else:
         mine = mine[mine["subject"] == "plate_read"]
-    gates = set(mine["gate"])
-    return bool(gates), bool(gates & set(trial.named_by)), bool(struck.standard_errors > LARGE)
+    gates = frozenset(mine["gate"])
+    return _Outcome(gates, bool(gates & set(trial.named_by)), bool(struck.standard_errors > LARGE))
 
 
 def _series_of(fitted: FittedBatch, analysis_id: str, wells: Sequence[str]) -> set[str]:
@@ -292,14 +323,17 @@ def _series_of(fitted: FittedBatch, analysis_id: str, wells: Sequence[str]) -> s
     return set(table.loc[mine, "series_id"])
 
 
-def _subject_count(subject: str, tables: dict[str, pd.DataFrame], wells: int) -> int:
-    if subject == "well":
-        return wells
-    if subject == "series":
-        return len(tables["series"])
-    if subject == "lot":
-        return len(tables["series"].drop_duplicates(["analysis_id", "lot"]))
-    return len(tables["analyses"])
+def _judged(rated: RatedBatch, tables: Mapping[str, pd.DataFrame]) -> GateInput:
+    """What the gates see of a fitted batch: to count the subjects that they have a word on."""
+    points = tables["fit_points"].merge(tables["fits"][["fit_id", "series_id"]], on="fit_id")
+    return gate_input(
+        rated,
+        series=tables["series"],
+        estimates=tables["estimates"],
+        fits=tables["fits"],
+        points=points,
+        comparisons=tables["comparisons"],
+    )
 
 
 def _log_ratios(estimates: pd.DataFrame) -> list[float]:

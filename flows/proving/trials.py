@@ -181,9 +181,10 @@ def _unsaturated(site: Site, ratio: float) -> Struck:
 
 
 def _overflow(site: Site, share: float) -> Struck:
-    """Something in the well lifts the last `share` of its reads past the detector's linear limit."""
+    """Something in the well lifts the top `share` of its window's reads past the detector's linear limit."""
     row = site.any_well()
-    signal = site.clean.signal[site.clean.wells["well"].tolist().index(row["well"])]
+    window = slice(int(row["window_first_read"]) - 1, int(row["window_last_read"]))
+    signal = site.clean.signal[site.clean.wells["well"].tolist().index(row["well"])][window]
     limit = site.bench.assay.signal.linear_limit
     end = site.bench.design.overflow_above if limit is None else limit
     lifted = np.sort(signal)[::-1][max(int(np.ceil(share * signal.size)) - 1, 0)]
@@ -274,10 +275,10 @@ TRIALS: tuple[Trial, ...] = (
         _unsaturated,
     ),
     Trial(
-        "reads past the linear limit",
+        "top reads past the linear limit",
         "%",
-        (0.02, 0.2, 0.5, 0.8, 1.0),
-        1.0,
+        (0.1, 0.2, 0.5, 0.8, 1.0),
+        0.5,
         "well",
         ("detector_range",),
         _overflow,

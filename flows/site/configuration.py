@@ -1,4 +1,4 @@
-"""A site's configuration as records: settings, export profiles, assays, gate limits, from TOML files.
+"""A site's configuration as records: settings, profiles, assays, gate limits, lot specifications, from TOML.
 
 Says what is wrong with a file in words that name file, key and what is allowed. What the records mean is
 their own business.
@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import tomllib
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from difflib import get_close_matches
 from pathlib import Path
 from types import UnionType
@@ -20,10 +20,16 @@ from pydantic_core import ErrorDetails
 from models.errors import ConfigurationError
 from models.records.assay import Assay, SettingValue
 from models.records.export_profile import ExportProfile
+from models.records.lot_specification import LotSpecification
 from models.records.record import Record
 from models.records.site_settings import SiteSettings
 
-RECORDS: dict[str, type[Record]] = {"site": SiteSettings, "profile": ExportProfile, "assay": Assay}
+RECORDS: dict[str, type[Record]] = {
+    "site": SiteSettings,
+    "profile": ExportProfile,
+    "assay": Assay,
+    "specification": LotSpecification,
+}
 
 R = TypeVar("R", bound=Record)
 
@@ -34,7 +40,7 @@ class Configuration:
 
     Attributes
     ----------
-    profiles, assays
+    profiles, assays, specifications
         By name, which is the file's name without its ending.
     gates
         Content of gates.toml, by gate and setting; which gates there are is known to the checks alone.
@@ -44,6 +50,30 @@ class Configuration:
     profiles: dict[str, ExportProfile]
     assays: dict[str, Assay]
     gates: dict[str, dict[str, SettingValue]]
+    specifications: dict[str, LotSpecification] = field(default_factory=dict)
+
+    def specification_of(self, assay: str, lot: str) -> LotSpecification | None:
+        """The specification that a lot is held against, or None where there is none.
+
+        Raises
+        ------
+        ConfigurationError
+            If several are for this lot: it would be held against one by chance.
+        """
+        found = {
+            name: each
+            for name, each in self.specifications.items()
+            if each.assay == assay and each.covers(lot)
+        }
+        if len(found) > 1 and all(each.reference_lot == lot for each in found.values()):
+            return next(iter(found.values()))
+        if len(found) > 1:
+            raise ConfigurationError(
+                f"several specifications are for lot {lot} of {assay}",
+                where=", ".join(f"specifications/{name}.toml" for name in found),
+                remedy="narrow their lots",
+            )
+        return next(iter(found.values()), None)
 
 
 def load_configuration(config_dir: Path) -> Configuration:
@@ -52,7 +82,8 @@ def load_configuration(config_dir: Path) -> Configuration:
     Parameters
     ----------
     config_dir
-        Folder with site.toml, gates.toml, profiles/*.toml and assays/*.toml; all but site.toml may be absent.
+        Folder with site.toml, gates.toml, profiles/*.toml, assays/*.toml and specifications/*.toml; all but
+        site.toml may be absent.
 
     Raises
     ------
@@ -72,7 +103,9 @@ def load_configuration(config_dir: Path) -> Configuration:
         for path in _toml_files(config_dir / "profiles")
     }
     assays = {path.stem: read_record(path, Assay, config_dir) for path in _toml_files(config_dir / "assays")}
-    return Configuration(settings, profiles, assays, _read_gates(config_dir))
+    return Configuration(
+        settings, profiles, assays, _read_gates(config_dir), _read_specifications(config_dir, assays)
+    )
 
 
 def read_record(path: Path, kind: type[R], config_dir: Path | None = None) -> R:
@@ -92,7 +125,7 @@ def read_record(path: Path, kind: type[R], config_dir: Path | None = None) -> R:
 
 
 def schemas() -> dict[str, dict[str, Any]]:
-    """JSON Schemas of the configuration files, by kind of file: site, profile, assay."""
+    """JSON Schemas of the configuration files, by kind of file: site, profile, assay, specification."""
     return {
         name: {"$schema": "https://json-schema.org/draft/2020-12/schema", **kind.model_json_schema()}
         for name, kind in RECORDS.items()
@@ -154,6 +187,22 @@ def _read_gates(config_dir: Path) -> dict[str, dict[str, SettingValue]]:
                 )
         gates[gate] = dict(settings)
     return gates
+
+
+def _read_specifications(config_dir: Path, assays: dict[str, Assay]) -> dict[str, LotSpecification]:
+    found: dict[str, LotSpecification] = {}
+    for path in _toml_files(config_dir / "specifications"):
+        specification = read_record(path, LotSpecification, config_dir)
+        if specification.assay not in assays:
+            near = get_close_matches(specification.assay, assays, n=1, cutoff=0.5)
+            meant = f"did you mean {near[0]}? " if near else ""
+            raise ConfigurationError(
+                f"there is no assay '{specification.assay}'",
+                where=f"{_name(path, config_dir)}, key assay",
+                remedy=f"{meant}assays are {', '.join(assays) or 'none yet'}",
+            )
+        found[path.stem] = specification
+    return found
 
 
 def _as_configuration_error(invalid: ValidationError, kind: type[Record], where: str) -> ConfigurationError:

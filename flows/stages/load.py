@@ -11,6 +11,7 @@ from collections.abc import Mapping
 from datetime import UTC, datetime
 from pathlib import Path
 
+import duckdb
 import pandas as pd
 import pyarrow as pa
 
@@ -19,9 +20,10 @@ from flows.site.durable import sweep_parts
 from flows.site.layout import Site
 from flows.stages.recorded import RecordedBatch, describe_batch, recorded_batches
 from flows.warehouse import writer
-from flows.warehouse.writer import Batch, DamagedWarehouse
+from flows.warehouse.migrations import DamagedWarehouse, OutdatedWarehouse
+from flows.warehouse.writer import Batch
 from models.identity import Json, content_id, result_id
-from models.tables import ANALYSES, PLATE_READS, READINGS
+from models.tables import ANALYSES, PLATE_READS, READINGS, TABLES
 
 
 def load_results(
@@ -74,8 +76,10 @@ def load_results(
 def repair(site: Site) -> int:
     """Bring the warehouse up to the ledger: load every recorded batch that it lacks, from the lake.
 
-    A damaged or missing warehouse is made anew this way; a damaged one is put aside under another name. What
-    killed writes left behind is cleared away. The caller holds the pass lock.
+    A damaged or missing warehouse is made anew this way, and so is one of an earlier version that cannot be
+    brought up to date in place. A damaged one is put aside under another name; an earlier one is too, until
+    all its batches are in the new one. What killed writes left behind is cleared away. The caller holds the
+    pass lock.
 
     Returns
     -------
@@ -89,32 +93,39 @@ def repair(site: Site) -> int:
     """
     for folder in (site.lake, site.warehouse, site.raw, site.quarantine):
         sweep_parts(folder)
+    aside: Path | None = None
     try:
         with writer.loader(site) as connection:
             present = writer.loaded_batches(connection)
-    except DamagedWarehouse:
-        site.loader_file.rename(_aside(site.loader_file))
-        site.loader_file.with_name(site.loader_file.name + ".wal").unlink(missing_ok=True)
+    except DamagedWarehouse as found:
+        outdated = isinstance(found, OutdatedWarehouse)
+        path = _put_aside(site.loader_file, "outdated" if outdated else "damaged")
+        aside = path if outdated else None
         present = set()
     loaded = 0
     for recorded in recorded_batches(site):
         if recorded.batch_id not in present:
             loaded += writer.load(site, stored_rows(site, recorded), as_batch(recorded))
+    if aside is not None and _holds_all_of(site, aside):
+        aside.unlink()
     return loaded
 
 
 def stored_rows(site: Site, recorded: RecordedBatch) -> dict[str, pa.Table]:
     """Rows of a recorded batch from the lake, by table, in the tables' present columns.
 
+    Rows of a table that there is no more stay in the lake.
+
     Raises
     ------
     SiteError
         If a lake file is missing or has changed, or its rows cannot be given the present columns.
     """
+    known = {each.name for each in TABLES} - {READINGS.name}
     return {
         each.table_name: lake.read_arrow(site, each.path, each.sha256, each.table_name)
         for each in recorded.lake_files
-        if each.table_name != READINGS.name
+        if each.table_name in known
     }
 
 
@@ -123,6 +134,18 @@ def as_batch(recorded: RecordedBatch) -> Batch:
     return Batch(recorded.batch_id, recorded.seq, recorded.time, recorded.lake_files)
 
 
-def _aside(path: Path) -> Path:
+def _put_aside(path: Path, why: str) -> Path:
+    """Give the loader's database another name; its log, which belongs to it alone, goes."""
     stamp = datetime.fromtimestamp(path.stat().st_mtime, UTC).strftime("%Y%m%dT%H%M%S%f")
-    return path.with_name(f"{path.stem}.damaged-{stamp}.duckdb")
+    aside = path.with_name(f"{path.stem}.{why}-{stamp}.duckdb")
+    path.rename(aside)
+    path.with_name(path.name + ".wal").unlink(missing_ok=True)
+    return aside
+
+
+def _holds_all_of(site: Site, earlier: Path) -> bool:
+    """Whether every batch of an earlier database is in the present one."""
+    with duckdb.connect(str(earlier), read_only=True) as connection:
+        wanted = writer.loaded_batches(connection)
+    with writer.loader(site) as connection:
+        return wanted <= writer.loaded_batches(connection)

@@ -12,7 +12,7 @@ import subprocess
 import sys
 import tempfile
 import threading
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from contextlib import suppress
 from dataclasses import dataclass
 
@@ -23,7 +23,7 @@ from flows.site.layout import Site
 from flows.warehouse import sandbox
 from flows.warehouse.bookkeeping import STORED
 from flows.warehouse.explain import explain, too_slow
-from flows.warehouse.sandbox import Request
+from flows.warehouse.sandbox import ParameterValue, Request
 from flows.warehouse.schema import all_views
 from flows.warehouse.views import reading_view
 from models.errors import QueryError, SiteError
@@ -78,7 +78,12 @@ def open_published(site: Site) -> duckdb.DuckDBPyConnection:
     raise SiteError("the published warehouse changes too fast to be opened", where=str(site.published_link))
 
 
-def run_query(site: Site, sql: str, limits: QueryLimits | None = None) -> pa.Table:
+def run_query(
+    site: Site,
+    sql: str,
+    limits: QueryLimits | None = None,
+    parameters: Mapping[str, ParameterValue] | None = None,
+) -> pa.Table:
     """Answer one SELECT from the published copy, in the sandbox.
 
     Parameters
@@ -88,6 +93,8 @@ def run_query(site: Site, sql: str, limits: QueryLimits | None = None) -> pa.Tab
         `flows/warehouse/TABLES.md` lists.
     limits
         Time and memory it may take.
+    parameters
+        Values of its named parameters, `$lot` by `lot`: bound by the database, never part of its text.
 
     Raises
     ------
@@ -97,7 +104,10 @@ def run_query(site: Site, sql: str, limits: QueryLimits | None = None) -> pa.Tab
         If there is nothing published.
     """
     limits = limits or QueryLimits()
-    return _ask_sandbox(request_for(site, sql, limits), limits, names_to_ask(site))
+    request = request_for(site, sql, limits)
+    if parameters:
+        request["parameters"] = dict(parameters)
+    return _ask_sandbox(request, limits, names_to_ask(site))
 
 
 def request_for(site: Site, sql: str, limits: QueryLimits) -> Request:

@@ -11,8 +11,9 @@ import json
 import os
 import resource
 import sys
+from collections.abc import Mapping
 from io import IOBase
-from typing import Literal, TypedDict
+from typing import Literal, NotRequired, TypedDict
 
 import duckdb
 import pyarrow as pa
@@ -21,6 +22,9 @@ _BATCH_ROWS = 65_536
 # What interpreter, DuckDB and Arrow map before the first row, with room for the result on its way out.
 _BASE_MB = 512
 FAILED = 3
+
+
+ParameterValue = str | int | float | None
 
 
 class Request(TypedDict):
@@ -33,6 +37,7 @@ class Request(TypedDict):
     time_ms: int
     memory_mb: int
     threads: int
+    parameters: NotRequired[dict[str, ParameterValue]]
 
 
 class Failure(TypedDict):
@@ -74,8 +79,10 @@ def open_closed(request: Request) -> duckdb.DuckDBPyConnection:
     return connection
 
 
-def answer(connection: duckdb.DuckDBPyConnection, sql: str) -> pa.RecordBatchReader:
-    """Run one SELECT.
+def answer(
+    connection: duckdb.DuckDBPyConnection, sql: str, parameters: Mapping[str, ParameterValue] | None = None
+) -> pa.RecordBatchReader:
+    """Run one SELECT, its named parameters bound to values.
 
     Raises
     ------
@@ -89,14 +96,20 @@ def answer(connection: duckdb.DuckDBPyConnection, sql: str) -> pa.RecordBatchRea
         raise Refused("statements", str(len(statements)))
     if statements[0].type != duckdb.StatementType.SELECT:
         raise Refused("not_select", statements[0].type.name)
-    reader: pa.RecordBatchReader = connection.sql(statements[0]).to_arrow_reader(_BATCH_ROWS)
+    given = dict(parameters) if parameters else None
+    reader: pa.RecordBatchReader = connection.sql(statements[0], params=given).to_arrow_reader(_BATCH_ROWS)
     return reader
 
 
-def respond(connection: duckdb.DuckDBPyConnection, sql: str, output: IOBase) -> Failure | None:
+def respond(
+    connection: duckdb.DuckDBPyConnection,
+    sql: str,
+    output: IOBase,
+    parameters: Mapping[str, ParameterValue] | None = None,
+) -> Failure | None:
     """Write the answer to one SELECT as an Arrow stream; return why there is none, or None."""
     try:
-        reader = answer(connection, sql)
+        reader = answer(connection, sql, parameters)
         with pa.ipc.new_stream(pa.PythonFile(output, "w"), reader.schema) as stream:
             for batch in reader:
                 stream.write_batch(batch)
@@ -120,7 +133,8 @@ def main() -> int:
     limit = (request["memory_mb"] * 2 + _BASE_MB) << 20
     resource.setrlimit(resource.RLIMIT_DATA, (limit, limit))
     resource.setrlimit(resource.RLIMIT_CORE, (0, 0))
-    failure = respond(connection, request["sql"], os.fdopen(sys.stdout.fileno(), "wb", closefd=False))
+    output = os.fdopen(sys.stdout.fileno(), "wb", closefd=False)
+    failure = respond(connection, request["sql"], output, request.get("parameters"))
     if failure is None:
         return 0
     sys.stderr.write("\n" + json.dumps(failure) + "\n")

@@ -21,6 +21,7 @@ from flows.lake import LakeFile
 from flows.site.durable import make_folder, replacing, sync_folder
 from flows.site.layout import Site
 from flows.warehouse.bookkeeping import LAKE_FILES, LOADS, STORED
+from flows.warehouse.migrations import DamagedWarehouse
 from flows.warehouse.schema import prepare
 from models.errors import SiteError
 from models.tables import ANALYSES, FILES, LOT_VALUES, PASSES, Table
@@ -75,10 +76,6 @@ class Published:
     byte_count: int
 
 
-class DamagedWarehouse(SiteError):
-    """The loader's database cannot be opened as one."""
-
-
 @contextmanager
 def loader(site: Site) -> Iterator[duckdb.DuckDBPyConnection]:
     """Open the loader's database, made ready with all tables and views.
@@ -86,9 +83,9 @@ def loader(site: Site) -> Iterator[duckdb.DuckDBPyConnection]:
     Raises
     ------
     SiteError
-        If another process has it open, or it was made by another version of halfsat.
+        If another process has it open, or it was made by a newer version of halfsat.
     DamagedWarehouse
-        If it is no readable database.
+        If it is no readable database, or one of an earlier version that must be made again.
     """
     make_folder(site.warehouse)
     connection = _connect(site)

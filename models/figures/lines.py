@@ -7,12 +7,21 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from numpy.typing import NDArray
 
-from models.figures.drawing import label, legend, limit_line, marks
-from models.figures.theme import DASHES, LIGHT, LINE, SMALL_PT, TEXT_PT, THIN, Theme
+from models.figures.drawing import (
+    empty_figure,
+    house_style,
+    label,
+    legend,
+    limit_line,
+    marks,
+    plain_axes,
+)
+from models.figures.logarithmic import make_logarithmic
+from models.figures.theme import DASHES, LIGHT, LINE, TEXT_PT, THIN, Theme
 
 Floats = NDArray[np.float64]
 
@@ -58,36 +67,35 @@ def draw_panels(panels: Sequence[Panel], theme: Theme = LIGHT, columns: int = 2)
     """Panels side by side, as many rows as they need."""
     columns = max(1, min(columns, len(panels)))
     rows = max(1, math.ceil(len(panels) / columns))
-    figure = Figure(figsize=(3.6 * columns, 2.5 * rows), facecolor=theme.paper, layout="constrained")
-    FigureCanvasAgg(figure)
-    for place, panel in enumerate(panels):
-        axes = figure.add_subplot(rows, columns, place + 1, facecolor=theme.paper)
-        for side in ("top", "right"):
-            axes.spines[side].set_visible(False)
-        for side in ("left", "bottom"):
-            axes.spines[side].set(color=theme.soft, linewidth=THIN)
-        axes.tick_params(colors=theme.soft, labelcolor=theme.ink, labelsize=SMALL_PT, width=THIN, length=3)
-        if panel.logarithmic:
-            axes.set_xscale("log")
-        for number, line in enumerate(panel.lines):
-            if line.joined:
-                axes.plot(
-                    line.x,
-                    line.y,
-                    color=theme.fit,
-                    linewidth=LINE,
-                    linestyle=DASHES[number % len(DASHES)],
-                    label=line.name or None,
-                    zorder=1,
-                )
-            if line.standing is not None or line.error is not None or not line.joined:
-                marks(axes, theme, line.x, line.y, line.standing, line.error)
-        for value, text in panel.limits:
-            limit_line(axes, theme, value, text)
-        if panel.y_range is not None:
-            axes.set_ylim(*panel.y_range)
-        axes.set_title(panel.title, fontsize=TEXT_PT, color=theme.ink, loc="left")
-        label(axes, theme, x=panel.x_label, y=panel.y_label)
-        if any(line.name for line in panel.lines):
-            legend(axes, theme)
+    with house_style():
+        figure = empty_figure((3.6 * columns, 2.5 * rows), theme)
+        for place, panel in enumerate(panels):
+            _draw(plain_axes(figure.add_subplot(rows, columns, place + 1), theme), panel, theme)
     return figure
+
+
+def _draw(axes: Axes, panel: Panel, theme: Theme) -> None:
+    every = np.concatenate([line.x for line in panel.lines]) if panel.lines else np.empty(0)
+    axis = make_logarithmic((axes,), theme, every) if panel.logarithmic else None
+    for number, line in enumerate(panel.lines):
+        x = line.x if axis is None else axis.place(line.x)
+        if line.joined:
+            axes.plot(
+                x,
+                line.y,
+                color=theme.fit,
+                linewidth=LINE if number < len(DASHES) else THIN,
+                linestyle=DASHES[number % len(DASHES)],
+                label=line.name or None,
+                zorder=1,
+            )
+        if line.standing is not None or line.error is not None or not line.joined:
+            marks(axes, theme, x, line.y, line.standing, line.error)
+    for value, text in panel.limits:
+        limit_line(axes, theme, value, text)
+    if panel.y_range is not None:
+        axes.set_ylim(*panel.y_range)
+    axes.set_title(panel.title, fontsize=TEXT_PT, color=theme.ink, loc="left")
+    label(axes, theme, x=panel.x_label, y=panel.y_label)
+    if any(line.name for line in panel.lines):
+        legend(axes, theme)

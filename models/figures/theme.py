@@ -29,8 +29,8 @@ class Theme:
     band: str
 
 
-LIGHT = Theme("#fbf8f2", "#1d1a16", "#5d564c", "#857c6e", "#ddd5c6", "#a84c06", "#0b6b6b", "#cfe3e0")
-DARK = Theme("#171512", "#ece6da", "#b3a999", "#8f8677", "#3a352d", "#ee9a55", "#5fb9b3", "#243c3a")
+LIGHT = Theme("#fbf8f2", "#1d1a16", "#5d564c", "#726a5d", "#ddd5c6", "#a84c06", "#0b6b6b", "#cfe3e0")
+DARK = Theme("#171512", "#ece6da", "#b3a999", "#8f8677", "#3a352d", "#ee9a55", "#5fb9b3", "#2a4745")
 PRINT = Theme("#ffffff", "#000000", "#444444", "#777777", "#cccccc", "#a84c06", "#0b6b6b", "#e2e2e2")
 THEMES = {"light": LIGHT, "dark": DARK, "print": PRINT}
 

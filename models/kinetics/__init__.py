@@ -11,12 +11,12 @@ from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from models.kinetics.notebook import fit, fit_michaelis_menten
-    from models.kinetics.one_fit import Fit, FitRefused
     from models.kinetics.own_laws import own_law
+    from models.kinetics.single_fit import Fit, FitRefused
 
 _HOME = {
-    "Fit": "models.kinetics.one_fit",
-    "FitRefused": "models.kinetics.one_fit",
+    "Fit": "models.kinetics.single_fit",
+    "FitRefused": "models.kinetics.single_fit",
     "fit": "models.kinetics.notebook",
     "fit_michaelis_menten": "models.kinetics.notebook",
     "own_law": "models.kinetics.own_laws",

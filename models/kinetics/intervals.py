@@ -27,6 +27,8 @@ _ROUNDS = 60
 _TOLERANCE = 1e-8
 _WIDEST = np.log(1e9)
 """A constant that may grow or shrink a thousand million times is not held at all."""
+_SHOWN, _SHOWN_OPEN = 1.6, 3.0
+"""How far a profile is shown: of the way to the interval's end; of t standard errors where it is open."""
 _FARTHEST_STEPS = 1e4
 """Standard errors after which the search for an end of an unlimited constant's interval is given up."""
 
@@ -86,15 +88,7 @@ def profile_intervals(
     """
     low = np.full(fit.constants.shape, np.nan)
     high = np.full(fit.constants.shape, np.nan)
-    usable = np.flatnonzero(
-        fit.converged
-        & ~fit.at_limit
-        & (fit.degrees_of_freedom > 0)
-        & (fit.residual_sum > 0)
-        & np.isfinite(fit.constants).all(axis=0)
-    )
-    if fit.law.amplitude is not None:
-        usable = usable[fit.constants[0, usable] > 0]
+    usable = _usable(fit)
     for first in range(0, usable.size, CHUNK):
         part = usable[first : first + CHUNK]
         series = _series_of(fit, conditions, rates, weights, part)
@@ -106,6 +100,77 @@ def profile_intervals(
     exact = np.flatnonzero(fit.converged & (fit.degrees_of_freedom > 0) & (fit.residual_sum == 0))
     low[:, exact] = high[:, exact] = fit.constants[:, exact]
     return low, high
+
+
+def profile_curve(
+    fit: LawFit,
+    conditions: Conditions,
+    rates: Floats,
+    weights: Floats,
+    series: int,
+    constant: int,
+    ends: tuple[float, float],
+    points: int = 61,
+) -> tuple[Floats, Floats, float]:
+    """Profile of one constant of one series: how much worse the best fit becomes as it is held elsewhere.
+
+    Parameters
+    ----------
+    fit, conditions, rates, weights
+        As given to `profile_intervals`.
+    series, constant
+        Which, by number.
+    ends
+        Of its 95 % interval, NaN where open: what is shown reaches some way past them.
+    points
+        Values of the constant, odd so that the best is one of them.
+
+    Returns
+    -------
+    tuple
+        Values and rise of the weighted sum of squares over the residual variance, shape (points,); NaN where
+        no rise is known. The rise at which the 95 % interval ends: the square of t.
+    """
+    data = _series_of(fit, conditions, rates, weights, np.array([series]))
+    step = float(_first_step(fit, np.array([series]), constant)[0])
+    best = float(data.coordinates[constant, 0])
+    target = float(data.target[0])
+    positive = fit.law.constants[constant].positive
+    half = points // 2
+    steps = np.arange(1, half + 1) / half
+    values, rises = np.full(2 * half + 1, best), np.full(2 * half + 1, np.nan)
+    if series not in _usable(fit):
+        return np.exp(values) if positive else values, rises, target**2
+    rises[half] = 0.0
+    profile, place = _profile(data, constant), constant - fit.law.first_shape
+    for side, end in ((-1, ends[0]), (1, ends[1])):
+        with np.errstate(all="ignore"):
+            distance = abs((np.log(end) if positive else end) - best)
+        reach = _SHOWN * distance if np.isfinite(distance) else _SHOWN_OPEN * step * target
+        if place >= 0:
+            limit = float((data.upper if side > 0 else data.lower)[place, 0])
+            reach = min(reach, abs(limit - best))
+        others = data.coordinates[fit.law.first_shape :].copy()
+        # Outwards, each from where the one before it came to rest.
+        for number, share in enumerate(steps, start=1):
+            values[half + side * number] = value = best + side * share * reach
+            height, others = profile(np.array([0]), np.array([value]), others)
+            rises[half + side * number] = height[0] ** 2
+    return np.exp(values) if positive else values, rises, target**2
+
+
+def _usable(fit: LawFit) -> NDArray[np.intp]:
+    """Numbers of the series whose constants have a profile."""
+    usable = (
+        fit.converged
+        & ~fit.at_limit
+        & (fit.degrees_of_freedom > 0)
+        & (fit.residual_sum > 0)
+        & np.isfinite(fit.constants).all(axis=0)
+    )
+    if fit.law.amplitude is not None:
+        usable &= fit.constants[0] > 0
+    return np.flatnonzero(usable)
 
 
 def _series_of(

@@ -1,7 +1,6 @@
 """Fits of arrays and data frames for notebooks: one set of rates in, a typed result out.
 
-The same engine as the overnight pass, without plates or gates. This module reads no files; a result hands out
-its table, its curve and its figure.
+The same engine as the overnight pass, without plates or gates. This module reads no files.
 """
 
 from __future__ import annotations
@@ -19,13 +18,15 @@ from models.kinetics.intervals import profile_intervals
 from models.kinetics.law_fits import LawFit
 from models.kinetics.laws import RateLaw, law
 from models.kinetics.laws.law import Constant, Floats
-from models.kinetics.one_fit import Fit, FitRefused
 from models.kinetics.own_laws import OWN_RANK
 from models.kinetics.packing import Packed, pack
 from models.kinetics.refusals import Counts, Refusal, RefusalKind, refuse_fit, refuse_law, refuse_series
 from models.kinetics.replicate_weights import Scatter, ScatterSource, fit_with_weights, plate_scatter
 from models.kinetics.robust import Loss
 from models.kinetics.selection import UNITS_OF_GRACE, aicc, evidence_weights
+from models.kinetics.single_fit import Fit, FitRefused
+
+__all__ = ["Fit", "FitRefused", "fit", "fit_michaelis_menten"]
 
 Weights = Literal["equal", "replicates"]
 
@@ -142,9 +143,10 @@ def fit(
 
 @dataclass(frozen=True)
 class _Fitted:
-    """One law on the rates: its fit and the ends of its intervals, shape (constants,)."""
+    """One law on the rates: its fit, weights (rates, 1), and the ends of its intervals (constants, 1)."""
 
     fit: LawFit
+    weights: Floats
     low: Floats
     high: Floats
     criterion: float
@@ -251,7 +253,7 @@ def _fitted(
     used = np.where(weighted.weights > 0, weighted.weights, 1.0)
     log_variance = -np.log(used).sum(axis=0)
     criterion = aicc(fit.residual_sum, log_variance, fit.point_count, each.constant_count)
-    return _Fitted(fit, low, high, float(criterion[0]))
+    return _Fitted(fit, weighted.weights, low, high, float(criterion[0]))
 
 
 def _result(fitted: Sequence[_Fitted], packed: Packed, concentration_unit: str, rate_unit: str) -> Fit:
@@ -298,6 +300,8 @@ def _result(fitted: Sequence[_Fitted], packed: Packed, concentration_unit: str, 
         candidates=candidates,
         conditions=packed.conditions,
         rates=packed.rate[:, 0],
+        weights=best.weights[:, 0],
+        law_fit=fit,
         rate_unit=rate_unit,
         concentration_unit=concentration_unit,
     )

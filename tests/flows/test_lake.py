@@ -119,3 +119,62 @@ def test_rows_that_do_not_fit_are_refused(site):
     with pytest.raises(UnknownName, match="no table 'nights'"):
         lake.write_rows(site, "nights", "x", frame)
     assert not (site.lake / "readings").exists()
+
+
+def test_a_files_columns_have_digests_of_their_values_whatever_its_bytes(site, monkeypatch):
+    frame = readings("TP-1", "x")
+    written = lake.write_rows(site, "readings", "x", frame)
+    assert set(written.columns) == set(READINGS.column_names)
+    assert written.columns == lake.column_digests(READINGS.to_arrow(frame))
+    assert lake.describe(site, "readings", "x").columns == written.columns
+    plain = pq.write_table
+    monkeypatch.setattr(
+        lake.pq, "write_table", lambda *given, **more: plain(*given, **{**more, "use_dictionary": False})
+    )
+    other = lake.write_rows(site, "readings", "y", frame)
+    assert other.sha256 != written.sha256
+    assert other.columns == written.columns
+
+
+@settings(max_examples=40, deadline=None)
+@given(
+    values=st.lists(REAL, min_size=1, max_size=12),
+    words=st.lists(st.none() | st.text(max_size=3), min_size=1, max_size=12),
+    place=st.integers(0, 11),
+)
+def test_a_column_digest_tells_any_change_and_only_that(values, words, place):
+    def digest(column: pa.Array) -> str:
+        return lake.column_digests(pa.table({"c": column}))["c"]
+
+    numbers, texts = pa.array(values, pa.float64()), pa.array(words, pa.string())
+    longer = pa.concat_arrays([pa.array([1.5], pa.float64()), numbers]).slice(1)
+    in_chunks = pa.table({"c": pa.chunked_array([texts.slice(0, 1), texts.slice(1)])})
+    assert digest(longer) == digest(numbers)
+    assert lake.column_digests(in_chunks)["c"] == digest(texts)
+    changed = list(values)
+    changed[place % len(values)] = None if changed[place % len(values)] is not None else 0.0
+    assert digest(pa.array(changed, pa.float64())) != digest(numbers)
+    respelt = [*words, "more"]
+    assert digest(pa.array(respelt, pa.string())) != digest(texts)
+    reworded = list(words)
+    reworded[place % len(words)] = (reworded[place % len(words)] or "") + "x"
+    assert digest(pa.array(reworded, pa.string())) != digest(texts)
+
+
+def test_rows_of_an_earlier_shape_get_the_present_columns_or_are_refused():
+    rows = READINGS.to_arrow(readings("TP-1", "x"))
+    earlier = rows.drop_columns(["temperature_c", "source_sheet"]).append_column(
+        "old_note", pa.array(["?"] * rows.num_rows)
+    )
+    now = lake.conformed(READINGS, earlier, "x.parquet")
+    assert now.schema.equals(READINGS.arrow_schema())
+    assert now["temperature_c"].null_count == now["source_sheet"].null_count == rows.num_rows
+    assert now.drop_columns(["temperature_c", "source_sheet"]).equals(
+        rows.drop_columns(["temperature_c", "source_sheet"])
+    )
+    with pytest.raises(SiteError, match=r"x\.parquet: readings\.state must be known now; 45 rows"):
+        lake.conformed(READINGS, rows.drop_columns(["state"]), "x.parquet")
+    words = pa.array(["soon"] * rows.num_rows)
+    other = rows.drop_columns(["time_s"]).append_column("time_s", words)
+    with pytest.raises(SiteError, match="was written as string and is double now"):
+        lake.conformed(READINGS, other, "x.parquet")

@@ -46,7 +46,10 @@ def trial(name: str):
 
 def curve(shares: list[float]) -> Curve:
     sizes = trial("blank").sizes
-    points = [Caught(size, 20, 20, round(20 * s), 0, 0, 0) for size, s in zip(sizes, shares, strict=True)]
+    points = [
+        Caught(size, 20, 20, round(20 * s), 0, 0, 0, (("blank_drift", round(20 * s)), ("fit_misfit", 1)))
+        for size, s in zip(sizes, shares, strict=True)
+    ]
     return Curve(trial("blank"), tuple(points))
 
 
@@ -67,6 +70,9 @@ def test_clean_plates_are_left_alone_and_counted():
     assert subjects["substrate_depletion", "well"] == 6 * 48
     assert subjects["fit_misfit", "series"] == 12
     assert subjects["plate_position", "plate_read"] == 6
+    # A lot at one enzyme level, a plate without standards: there is nothing to judge.
+    assert subjects["enzyme_inactivation", "lot"] == 0
+    assert subjects["standard_curve", "plate_read"] == 0
     assert 0.005 < clean.log_ratio_sd < 0.2
     assert clean.smallest_change(4) == pytest.approx(math.exp(2.8016 * clean.log_ratio_sd / 2) - 1, rel=1e-4)
 
@@ -79,6 +85,13 @@ def test_a_glaring_fault_is_named_by_its_gate_and_a_tiny_one_is_not():
     assert (glaring.caught, glaring.named, glaring.large) == (6, 6, 6)
 
 
+def test_sizes_that_go_through_the_line_together_give_what_each_gives_alone():
+    lag = trial("lag")
+    together = prove_trial(bench(), lag, 2, 3, (0.2, 0.6))
+    alone = [prove_trial(bench(), lag, 2, 3, (size,)).points[0] for size in (0.2, 0.6)]
+    assert list(together.points) == alone
+
+
 def test_a_fault_of_a_lot_and_one_of_the_plate_are_caught():
     for name, size in (("highest substrate", 0.5), ("edge effect", 0.2)):
         (point,) = prove_trial(bench(), trial(name), 4, 1, (size,)).points
@@ -87,7 +100,7 @@ def test_a_fault_of_a_lot_and_one_of_the_plate_are_caught():
 
 def test_a_gate_that_is_off_catches_nothing_and_is_not_counted():
     lenient = bench(gates={"detector_range": {"on": False}})
-    (point,) = prove_trial(lenient, trial("reads past"), 3, 1, (1.0,)).points
+    (point,) = prove_trial(lenient, trial("top reads past"), 3, 1, (1.0,)).points
     assert point.named == 0
     assert "detector_range" not in {gate.gate for gate in prove_clean(lenient, 2, 1).gates}
 
@@ -106,6 +119,12 @@ def test_a_simulated_plate_goes_through_the_line_with_its_constants():
     fitted = through_line(made, [simulate(made, (1, 0, 0))])
     km = fitted.tables["estimates"].query("constant == 'km' and wells == 'clear'")["value"]
     np.testing.assert_allclose(km, 80.0, rtol=0.1)
+
+
+def test_gates_that_catch_are_told_in_order_and_those_of_chance_left_out():
+    (point,) = prove_trial(bench(), trial("edge effect"), 3, 1, (0.2,)).points
+    assert dict(point.gates)["plate_position"] == point.caught == 3
+    assert curve([0.0, 0.2, 0.5, 1.0, 1.0]).caught_by() == ("blank_drift",)
 
 
 def test_the_size_caught_lies_between_the_sizes_tried():
@@ -143,8 +162,11 @@ def test_tables_hold_at_80_columns_and_rows_and_drawing_say_the_same(capsys):
     printed = capsys.readouterr().out
     assert max(len(line) for line in printed.splitlines()) <= 80
     assert "15 %" in printed
+    assert "blank_drift" in printed
     rows = csv_rows(clean, curves)
     assert [row[7] for row in rows[1:]] == [0, 4, 10, 20, 20]
+    assert {len(row) for row in rows} == {len(rows[0])}
+    assert rows[-1][-1] == "blank_drift:20 fit_misfit:1"
     assert b"<svg" in drawing(curves, ".svg")
 
 

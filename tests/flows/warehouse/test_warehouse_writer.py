@@ -182,7 +182,7 @@ def test_a_killed_load_leaves_no_trace(site):
 def test_a_warehouse_of_another_version_or_in_use_or_damaged_is_refused(site):
     with writer.loader(site) as connection:
         connection.execute("UPDATE schema_version SET schema_version = 99")
-    with pytest.raises(SiteError, match=r"another version of halfsat \(its tables are version 99"):
+    with pytest.raises(SiteError, match=r"a newer halfsat \(its tables are version 99"):
         ask(site, "SELECT 1")
     site.loader_file.unlink()
     script = (

@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import re
 import subprocess
 import sys
+from concurrent.futures import ThreadPoolExecutor
 
+import matplotlib
 import numpy as np
 import pytest
 
-from models.figures.drawing import marks, new_figure, pdf_bytes, png_bytes, svg_bytes
+from models.figures.drawing import house_style, marks, pdf_bytes, png_bytes, stacked_panels, svg_bytes
 from models.figures.kinetics import FittedLine, draw_profile, draw_progress, draw_rates
 from models.figures.lines import Line, Panel, draw_panels
 from models.figures.theme import DARK, LIGHT, THEMES
@@ -34,12 +37,72 @@ def test_a_figure_gives_the_same_bytes_every_time(written, theme):
 def test_the_figure_of_a_fit_has_its_residuals_beneath_and_its_band():
     found = a_fit()
     main, below = found.figure().axes
-    assert below.get_xlabel() == "substrate, umol/L"
+    assert below.get_xlabel() == "substrate, µM"
     shown = np.concatenate([line.get_ydata() for line in below.lines if line.get_marker() == "o"])
     np.testing.assert_allclose(shown, found.rates - found.rate(SUBSTRATE), rtol=1e-12)
     (band,) = main.collections
     (curve,) = (line for line in main.lines if line.get_marker() == "None")
     assert band.get_paths()[0].contains_point((curve.get_xdata()[50], curve.get_ydata()[50]))
+
+
+def test_settings_of_a_notebook_neither_show_nor_change():
+    plain = svg_bytes(a_fit().figure())
+    with matplotlib.rc_context({"font.size": 30, "axes.edgecolor": "red", "svg.hashsalt": "other"}):
+        assert svg_bytes(a_fit().figure()) == plain
+        assert matplotlib.rcParams["axes.edgecolor"] == "red"
+
+
+def test_threads_draw_the_same_as_one_alone():
+    plain = svg_bytes(a_fit().figure())
+    with ThreadPoolExecutor(3) as pool:
+        assert set(pool.map(lambda _: svg_bytes(a_fit().figure()), range(3))) == {plain}
+
+
+def test_text_of_an_svg_is_text_in_the_systems_sans():
+    text = svg_bytes(a_fit().figure()).decode()
+    assert ">substrate, µM</text>" in text
+    assert set(re.findall(r"font-family: ([^;\"]*)", text)) == {
+        "system-ui, -apple-system, 'Segoe UI', Roboto, 'Helvetica Neue', 'DejaVu Sans', sans-serif"
+    }
+
+
+@pytest.mark.parametrize("log_substrate", [False, True])
+def test_drawing_leaves_no_state_behind(log_substrate):
+    before = {name: value for name, value in matplotlib.rcParams.items() if name != "backend"}
+    with house_style():
+        assert matplotlib.rcParams["svg.hashsalt"] == "halfsat"
+    a_fit().figure(log_substrate)
+    assert {name: matplotlib.rcParams[name] for name in before} == before
+    assert "matplotlib.pyplot" not in sys.modules
+
+
+def test_rates_without_modulator_stand_apart_on_a_logarithmic_axis():
+    doses = np.repeat([0.0, *np.geomspace(0.02, 60.0, 11)], 2)
+    rate = 0.03 * (0.1 + 0.9 / (1 + (doses / 1.6) ** 1.2)) * (1 + 0.01 * np.cos(7 * np.arange(doses.size)))
+    found = fit(np.full(doses.size, 100.0), rate, "dose_response", modulator=doses)
+    main, below = found.figure(log_substrate=True).axes
+    points = next(line for line in below.lines if line.get_marker() == "o")
+    assert len(points.get_xdata()) == doses.size
+    zero_at = points.get_xdata().min()
+    assert zero_at < 0.02
+    assert main.xaxis.get_major_formatter().format_ticks([zero_at, 0.02])[0] == "0"
+    curve = max(
+        (line for line in main.lines if line.get_marker() == "None"), key=lambda line: len(line.get_xdata())
+    )
+    # The line reaches every dose and does not cross the gap to zero.
+    assert zero_at < curve.get_xdata().min() < 0.02
+    assert curve.get_xdata().max() == pytest.approx(60.0)
+
+
+def test_a_logarithmic_axis_without_a_value_above_zero_stays_linear():
+    x = np.zeros(3)
+    assert draw_rates(x, x, x, [], logarithmic=True).axes[0].get_xscale() == "linear"
+
+
+def test_a_strange_standing_is_an_error():
+    _, (axes,) = stacked_panels()
+    with pytest.raises(ValueError, match="doubtful"):
+        marks(axes, LIGHT, np.ones(1), np.ones(1), ["doubtful"])
 
 
 def test_on_a_logarithmic_axis_nothing_lies_at_zero():
@@ -53,7 +116,8 @@ def test_each_level_of_a_modulator_has_a_line_told_apart_by_its_dashes():
     v = 0.05 * s / (80 * (1 + i / 12) + s) * (1 + 0.01 * np.cos(np.arange(s.size)))
     main, _ = fit(s, v, "competitive_inhibition", modulator=i).figure().axes
     lines = [line for line in main.lines if line.get_marker() == "None"]
-    assert [line.get_label() for line in lines] == ["0 umol/L", "5 umol/L", "20 umol/L"]
+    assert [line.get_label() for line in lines] == ["0", "5", "20"]
+    assert main.get_legend().get_title().get_text() == "modulator, µM"
     assert len({str(line._unscaled_dash_pattern) for line in lines}) == 3
 
 
@@ -70,9 +134,9 @@ def test_the_band_covers_as_often_as_it_says():
     assert 0.92 <= held / 400 <= 0.98
 
 
-@pytest.mark.parametrize(("standing", "fill"), [("clear", "full"), ("held", "bottom"), ("void", "full")])
+@pytest.mark.parametrize(("standing", "fill"), [("clear", "full"), ("held", "left"), ("void", "full")])
 def test_standing_shows_without_colour(standing, fill):
-    _, (axes,) = new_figure()
+    _, (axes,) = stacked_panels()
     marks(axes, LIGHT, np.array([1.0]), np.array([2.0]), [standing])
     ring = axes.lines[0]
     assert ring.get_fillstyle() == fill
@@ -80,7 +144,7 @@ def test_standing_shows_without_colour(standing, fill):
 
 
 def test_points_that_are_not_known_are_left_out():
-    _, (axes,) = new_figure()
+    _, (axes,) = stacked_panels()
     marks(axes, LIGHT, np.array([1.0, np.nan, 3.0]), np.array([2.0, 2.0, np.nan]))
     assert axes.lines[0].get_xdata().tolist() == [1.0]
 
@@ -107,6 +171,15 @@ def test_a_profile_has_its_limit_and_the_ends_that_are_closed():
     (axes,) = draw_profile(values, ((values - 80) / 10) ** 2, 4.0, (60.0, np.nan), "Km", "µM").axes
     assert axes.get_xlabel() == "Km, µM"
     assert len(axes.lines) == 3
+    assert [text.get_text() for text in axes.texts] == ["95 %", "60"]
+
+
+def test_the_profile_of_a_fit_is_drawn_with_its_ends():
+    found = a_fit()
+    (axes,) = found.profile_figure("km", "dark").axes
+    low, high = found.table().loc["km", ["low", "high"]]
+    assert [text.get_text() for text in axes.texts] == ["95 %", f"{low:.4g}", f"{high:.4g}"]
+    assert axes.get_xlabel() == "km, µM"
 
 
 def test_panels_carry_limits_with_their_values():
@@ -123,7 +196,7 @@ def test_a_residual_figure_marks_what_is_held():
     x = np.arange(1.0, 5.0)
     figure = draw_rates(x, x, x, [FittedLine(x, x)], standing=np.array(["clear", "held", "void", "clear"]))
     fills = {line.get_fillstyle() for line in figure.axes[1].lines if line.get_marker() == "o"}
-    assert fills == {"full", "bottom"}
+    assert fills == {"full", "left"}
 
 
 def test_fitting_does_not_import_the_plot_library():

@@ -6,13 +6,16 @@ import doctest
 import pickle
 import subprocess
 import sys
+from dataclasses import replace
 
 import numpy as np
 import pandas as pd
 import pytest
+from scipy.stats import t
 
 import models.kinetics
-from models.kinetics import FitRefused, fit, fit_michaelis_menten, notebook, own_law
+from models.errors import UnknownName
+from models.kinetics import FitRefused, fit, fit_michaelis_menten, notebook, own_law, single_fit
 from models.kinetics.grids import INHIBITION_LAWS
 from models.kinetics.laws import LAWS
 from tests.models.kinetics.test_rate_laws import conditions_for, truth
@@ -21,9 +24,10 @@ from tests.published.published_values import REFERENCE
 
 
 def test_examples_run() -> None:
-    result = doctest.testmod(notebook, optionflags=doctest.NORMALIZE_WHITESPACE)
-    assert result.attempted > 5
-    assert result.failed == 0
+    for module, examples in ((notebook, 5), (single_fit, 4)):
+        result = doctest.testmod(module, optionflags=doctest.NORMALIZE_WHITESPACE)
+        assert result.attempted > examples
+        assert result.failed == 0
 
 
 def test_the_package_is_light_until_asked() -> None:
@@ -77,6 +81,51 @@ def test_every_law_can_be_fitted_and_drawn(each: object) -> None:
     )
     curve = found.curve(30)
     assert curve["rate"].max() == pytest.approx(rates.max(), rel=0.25)
+
+
+@pytest.mark.parametrize("each", LAWS, ids=[each.name for each in LAWS])
+def test_the_profile_meets_its_limit_at_the_ends_of_the_interval(each: object) -> None:
+    conditions = conditions_for(each)
+    rates = each.rate(conditions, tuple(truth(each)))[:, 0]
+    rates = rates * (1.0 + 0.002 * np.random.default_rng(1).standard_normal(rates.size))
+    found = fit(
+        conditions.substrate_um[:, 0],
+        rates,
+        each.name,
+        modulator=conditions.modulator[:, 0] if each.fewest_modulator_levels else None,
+        enzyme=conditions.enzyme[:, 0] if each.needs_enzyme else None,
+    )
+    for constant, row in found.table().iterrows():
+        profile = found.profile(str(constant), 33)
+        assert profile["value"].iloc[16] == pytest.approx(row["value"], rel=1e-12)
+        assert profile["rise"].iloc[16] == 0.0
+        # Its 95 % limit is the square of t, here with the fit's own degrees of freedom.
+        assert profile["limit"].iloc[0] == pytest.approx(t.ppf(0.975, found.degrees_of_freedom) ** 2)
+        below, above = profile.iloc[16::-1], profile.iloc[16:]
+        for side, end in ((below, row["low"]), (above, row["high"])):
+            assert np.all(np.diff(side["rise"]) > -1e-9)
+            if np.isfinite(end):
+                inside = np.interp(0.9 * side["limit"].iloc[0], side["rise"], side["value"])
+                outside = np.interp(1.1 * side["limit"].iloc[0], side["rise"], side["value"])
+                assert min(inside, outside) < end < max(inside, outside)
+
+
+def test_a_profile_with_an_open_end_stays_below_its_limit_there() -> None:
+    s = np.repeat([5.0, 10.0, 15.0, 20.0], 3)
+    v = 0.05 * s / (80.0 + s) * (1.0 + 0.05 * np.random.default_rng(3).standard_normal(s.size))
+    found = fit_michaelis_menten(s, v)
+    assert np.isnan(found.table().loc["km", "high"])
+    profile = found.profile("km")
+    assert profile["rise"].iloc[-1] < profile["limit"].iloc[-1]
+    assert profile["rise"].iloc[0] > profile["limit"].iloc[0]
+
+
+def test_no_profile_is_made_up() -> None:
+    few = fit_michaelis_menten([10.0, 80.0, 960.0], [5.0, 25.0, 46.0])
+    unsettled = replace(few, law_fit=replace(few.law_fit, converged=np.array([False])))
+    assert unsettled.profile("km")["rise"].isna().all()
+    with pytest.raises(UnknownName, match="no constant 'k'"):
+        few.profile("k")
 
 
 def test_weights_of_replicates_and_of_errors_and_robust_loss() -> None:

@@ -1,6 +1,6 @@
-"""What a notebook gets of a fit: constants, covariance, candidates, its curve, band and figure.
+"""One fit for a notebook: its table, curve, band, profiles and figures.
 
-Holds one fit; fits nothing itself.
+Holds a fit and hands out what follows from it; fits nothing itself and reads no files.
 """
 
 from __future__ import annotations
@@ -13,7 +13,9 @@ import pandas as pd
 from numpy.typing import ArrayLike
 from scipy.stats import t as t_distribution
 
-from models.errors import HalfsatError
+from models.errors import HalfsatError, UnknownName
+from models.kinetics.intervals import profile_curve
+from models.kinetics.law_fits import LawFit
 from models.kinetics.laws import Conditions, RateLaw, at_levels
 from models.kinetics.laws.law import Floats
 from models.kinetics.refusals import RefusalKind
@@ -59,8 +61,10 @@ class Fit:
     candidates
         A row a law that could be fitted, the simplest first: law, chosen, aicc, evidence_weight, trusted,
         distrust.
-    conditions, rates
-        What was fitted.
+    conditions, rates, weights
+        What was fitted; weights are one over the variance up to a factor.
+    law_fit
+        The fit as the engine gives it.
     rate_unit, concentration_unit
         Units of the data.
     """
@@ -76,6 +80,8 @@ class Fit:
     candidates: pd.DataFrame
     conditions: Conditions = field(repr=False)
     rates: Floats = field(repr=False)
+    weights: Floats = field(repr=False)
+    law_fit: LawFit = field(repr=False)
     rate_unit: str
     concentration_unit: str
 
@@ -119,9 +125,13 @@ class Fit:
         substrate = self.conditions.substrate_um[:, 0]
         modulator = None if self.conditions.modulator_um is None else self.conditions.modulator_um[:, 0]
         enzyme = None if self.conditions.enzyme_um is None else self._enzyme()
-        # Half of them evenly along a straight axis, half along a logarithmic one.
-        even = points - points // 2
-        low = np.geomspace(1e-3, 1.0, points // 2, endpoint=False)
+        along = substrate
+        if modulator is not None and np.unique(substrate).size == 1:
+            along = modulator
+        # Half of them evenly along a straight axis, half along a logarithmic one from below the lowest level.
+        even, above_zero = points - points // 2, along[along > 0]
+        lowest = min(0.5 * above_zero.min() / along.max(), 0.5) if above_zero.size else 1e-3
+        low = np.geomspace(lowest, 1.0, points // 2, endpoint=False)
         steps = np.sort(np.concatenate([np.linspace(0.0, 1.0, even), low]))
         if modulator is None:
             levels = substrate.max() * steps
@@ -171,9 +181,10 @@ class Fit:
         >>> found = fit_michaelis_menten([10, 20, 40, 80, 160], [11, 20, 33, 50, 67])
         >>> figure = found.figure()
         >>> [axes.get_ylabel() for axes in figure.axes]
-        ['rate, umol/L/s', 'residual']
+        ['rate, µM/s', 'residual,\\nµM/s']
         """
         # Here, since drawing takes a second to import and most fits are never drawn.
+        from models.figures.drawing import quantity
         from models.figures.kinetics import FittedLine, draw_rates
         from models.figures.theme import THEMES
 
@@ -191,7 +202,7 @@ class Fit:
                 part["rate"].to_numpy(dtype=np.float64),
                 part["low"].to_numpy(dtype=np.float64),
                 part["high"].to_numpy(dtype=np.float64),
-                f"{level:g} {self.concentration_unit}" if several else "",
+                f"{level:g}" if several else "",
             )
             for level, part in (curve.groupby("modulator") if several else [(0.0, curve)])
         ]
@@ -203,9 +214,87 @@ class Fit:
             x_label=along,
             x_unit=self.concentration_unit,
             rate_unit=self.rate_unit,
+            lines_title=quantity("modulator", self.concentration_unit),
             logarithmic=log_substrate,
             theme=THEMES[theme],
         )
+
+    def profile(self, constant: str, points: int = 61) -> pd.DataFrame:
+        """Profile likelihood of a constant: how much worse the best fit becomes as it is held elsewhere.
+
+        Parameters
+        ----------
+        constant
+            Its name.
+        points
+            Rows, odd so that the fitted value is one of them.
+
+        Returns
+        -------
+        DataFrame
+            Columns value, rise (of the weighted sum of squares over the residual variance; NaN where there is
+            no profile: a fit that did not converge, or without residuals) and limit (the rise at which the
+            95 % interval ends).
+
+        Raises
+        ------
+        UnknownName
+            If the law has no such constant.
+
+        Examples
+        --------
+        >>> from models.kinetics import fit_michaelis_menten
+        >>> found = fit_michaelis_menten([10, 20, 40, 80, 160], [11, 20, 33, 50, 67])
+        >>> profile = found.profile("km")
+        >>> inside = profile[profile["rise"] < profile["limit"]]
+        >>> bool(inside["value"].between(*found.table().loc["km", ["low", "high"]]).all())
+        True
+        """
+        row = self._row(constant)
+        values, rise, limit = profile_curve(
+            self.law_fit,
+            self.conditions,
+            self.rates[:, None],
+            self.weights[:, None],
+            0,
+            row,
+            (float(self.constants["low"].iloc[row]), float(self.constants["high"].iloc[row])),
+            points,
+        )
+        return pd.DataFrame({"value": values, "rise": rise, "limit": limit})
+
+    def profile_figure(self, constant: str, theme: str = "light") -> Figure:
+        """`profile` drawn, with the ends of the 95 % interval.
+
+        Parameters
+        ----------
+        constant
+            Its name.
+        theme
+            light, dark or print.
+        """
+        from models.figures.kinetics import draw_profile
+        from models.figures.theme import THEMES
+
+        profile, row = self.profile(constant), self.constants.iloc[self._row(constant)]
+        return draw_profile(
+            profile["value"].to_numpy(dtype=np.float64),
+            profile["rise"].to_numpy(dtype=np.float64),
+            float(profile["limit"].iloc[0]),
+            (float(row["low"]), float(row["high"])),
+            constant,
+            str(row["unit"]),
+            THEMES[theme],
+        )
+
+    def _row(self, constant: str) -> int:
+        names = self.constants["constant"].tolist()
+        if constant not in names:
+            raise UnknownName(
+                f"{self.law.title} has no constant '{constant}'",
+                remedy=f"its constants are {', '.join(names)}",
+            )
+        return names.index(constant)
 
     def _enzyme(self) -> float:
         assert self.conditions.enzyme_um is not None
