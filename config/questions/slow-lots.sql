@@ -9,7 +9,7 @@ WITH turnover AS (
     FROM lot_latest
     WHERE constant IN ('kcat', 'specific_activity') AND modulator IS NULL AND value IS NOT NULL
 )
-SELECT l.lot, r.lot AS reference_lot, l.constant, l.value, r.value AS reference_value, l.unit,
+SELECT l.lot, r.lot AS reference, l.constant, l.value, r.value AS of_reference, l.unit,
        100 * (1 - l.value / r.value) AS slower_by_percent, l.high < r.low AS surely, l.standing
 FROM turnover l
 JOIN turnover r ON r.assay = l.assay AND r.constant = l.constant AND r.role = 'reference' AND r.place = 1

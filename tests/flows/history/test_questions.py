@@ -1,8 +1,7 @@
-"""Named questions: each on the demo's night, on rows altered so that the right answer is known; heads."""
+"""Named questions on the demo's night, and on rows altered so that the right answer is known; heads."""
 
 from __future__ import annotations
 
-import re
 import shutil
 from collections.abc import Callable
 from pathlib import Path
@@ -70,9 +69,7 @@ def test_every_question_runs_and_tells_what_it_takes(demo: Site, tiny: Site, nam
     question = load_questions(None)[name]
     assert len(question.title) <= 50
     assert len(question.answers) > 40
-    assert not re.search(r"\d{3}ms|TODO", question.sql)
     of_demo = ask(demo, question, NEEDED.get(name, {}))
-    # No repeated plates, no quarantine and no held series are what an empty answer would be mistaken for.
     assert of_demo.num_rows > 0
     assert len(set(of_demo.column_names)) == of_demo.num_columns
     given = {"lot-trend": {"lot": "QX-7"}, "from-export": {"export": "TP-1.csv"}}.get(name, {})
