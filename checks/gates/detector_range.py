@@ -5,12 +5,15 @@ reads are left out of the window; the reviewer must know that, and that what is 
 
 Formula: n = number of reads that overflowed or are past the assay's linear limit, from the first read to the
 end of the window (all reads where there is no window); n > point_limit holds the well. Where there
-is no window and any read was lost so, the well is void.
+is no window and any read was lost so, the well is void. Where every read after the window up to a lost one is
+unusable, and conversion at that read, by the line through the window, is still below the limit of
+substrate_depletion, it was the detector that ended the window: then the well is held as well.
 
 Source: common practice, no source.
 
 Default: 0 reads. One lost read within the window already means that the signal ran at the detector's end.
-Reads lost after the window's end cost nothing and are not counted.
+Where conversion ended the window, reads lost after it cost nothing and are not counted; a window that the
+detector ended is shorter than planned, and its last reads were made where a detector begins to bend.
 """
 
 from __future__ import annotations
@@ -26,6 +29,7 @@ from checks.gates.gate import (
     GateInput,
     Limits,
     Measure,
+    Reads,
     Row,
     Setting,
     Subject,
@@ -33,13 +37,15 @@ from checks.gates.gate import (
     metrics_frame,
     number,
 )
-from checks.gates.wording import counted, plain
+from checks.gates.wording import beside, counted, plain
 
 NAME = "detector_range"
+CONVERSION = "substrate_depletion"
+"""Gate whose limit ends a window."""
 
 
 def metrics(data: GateInput) -> pd.DataFrame:
-    """Lost reads up to the window's end, and lost reads of wells without a window."""
+    """Lost reads up to the window's end, lost reads of wells without a window, and where one ended it."""
     wells = data.wells_with_rates(READ_ROLES)
     reads = data.reads
     unread = ((wells["shape"] == "unread") | ~(wells["window_point_count"] > 0)).to_numpy()
@@ -56,17 +62,36 @@ def metrics(data: GateInput) -> pd.DataFrame:
         lost_count=lost,
         lost_without_window_count=np.where(unread, all_lost, 0),
         read_count=reads.for_wells(reads.count(within), wells, absent=0),
+        cut_off_conversion=_cut_off_conversion(reads, wells, end, unread),
+        cut_off_count=np.where(unread, 0, all_lost - lost),
     )
 
 
+def _cut_off_conversion(reads: Reads, wells: pd.DataFrame, end: np.ndarray, unread: np.ndarray) -> np.ndarray:
+    """Conversion at the lost read that follows the window, shape (wells,); NaN where none does."""
+    after = reads.read_number > np.nan_to_num(end, nan=np.inf)[reads.code]
+    next_s = np.full(len(reads.wells), np.inf)
+    next_lost = np.zeros(len(reads.wells), dtype=bool)
+    # Backwards, so that the first read after the window is the one that stays.
+    follows = np.flatnonzero(after & ~reads.missing)[::-1]
+    next_s[reads.code[follows]] = reads.time_s[follows]
+    next_lost[reads.code[follows]] = reads.beyond[follows]
+    lost_s = reads.for_wells(np.where(next_lost, next_s, np.nan), wells)
+    start_s, end_s = (wells[name].to_numpy(dtype=float) for name in ("window_start_s", "window_end_s"))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        conversion = wells["conversion"].to_numpy(dtype=float) * (lost_s - start_s) / (end_s - start_s)
+    return np.where(unread, np.nan, conversion)
+
+
 def expectations(limits: Limits, _subject: Subject) -> list[Any]:
-    """Expect no window lost to the detector, and no lost read before the window's end."""
+    """Expect no window lost to the detector, no lost read before a window's end, and none that ends it."""
     from checks import expectations as expect
 
     limit = number(limits, NAME, "point_limit")
     return [
         expect.at_most(NAME, "lost_without_window_count", 0.0, rule="no_window", severity="void"),
         expect.at_most(NAME, "lost_count", limit, rule="lost"),
+        expect.at_least(NAME, "cut_off_conversion", number(limits, CONVERSION, "limit"), rule="cut_off"),
     ]
 
 
@@ -74,6 +99,9 @@ def measure(row: Row, limits: Limits) -> Measure:
     """Lost reads against their limit."""
     if row["rule"] == "no_window":
         return Measure(known_or_none(row["lost_without_window_count"]), 0.0, "1")
+    if row["rule"] == "cut_off":
+        limit = number(limits, CONVERSION, "limit")
+        return Measure(known_or_none(row["cut_off_conversion"]), limit, "1")
     return Measure(known_or_none(row["lost_count"]), number(limits, NAME, "point_limit"), "1")
 
 
@@ -84,6 +112,13 @@ def sentence(row: Row, limits: Limits) -> str:
         return (
             f"{lost:.0f} of {counted(read, 'read')} overflowed or lie past the detector's linear limit "
             "(limit 0): what is left makes no usable window, so the well has no rate."
+        )
+    if row["rule"] == "cut_off":
+        reached, allowed = beside(row["cut_off_conversion"], number(limits, CONVERSION, "limit"), 100.0)
+        return (
+            f"The detector ended the window: {counted(row['cut_off_count'], 'read')} after it overflowed or "
+            f"lie past the linear limit, the first of them at {reached} % conversion (limit {allowed} %). "
+            "The last reads before them may be bent, and the rate rests on fewer reads than planned."
         )
     limit = plain(number(limits, NAME, "point_limit"))
     return (

@@ -6,7 +6,8 @@ has another cause (lag, burst, loss of activity, product inhibition, a bubble), 
 Formula, with c the relative change of slope from start to end of a stretch, from its quadratic term and
 beyond what loss of substrate explains, and t its t value; the first rule that is breached is told:
 
-- shape: the curve begins with a lag or a burst, where hold_lag_and_burst.
+- shape: the curve begins with a lag or a burst, where hold_lag_and_burst. A lag is looked for by its own
+  trace too, an exponential beside start and slope: a parabola sees little of one that ends early.
 - window: |c| > limit and |t| >= t_limit over the chosen window. The window is the longest straight one, so
   this says that even the shortest one bends.
 - early: the same over all reads before the conversion limit, whatever the window; not for a lag or burst,

@@ -60,7 +60,7 @@ def gate_input(rated: RatedBatch, **fitted: pd.DataFrame | None) -> GateInput:
 def _plate_read(work: PlateWork) -> dict[str, object]:
     temperature_c = work.readings["temperature_c"].to_numpy(dtype=float)
     reported = temperature_c[np.isfinite(temperature_c)]
-    positions = [well_position(well) for well in {*work.readings["well"], *work.wells["well"]}]
+    positions = [well_position(well) for well in {*work.readings["well"].unique(), *work.wells["well"]}]
     return {
         "analysis_id": work.analysis_id,
         "plate_format": smallest_format(positions).well_count,

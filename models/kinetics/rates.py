@@ -14,10 +14,11 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from models.kinetics.blanks import MatchedBlanks, match_blanks
+from models.kinetics.curvature import Curves
 from models.kinetics.curves import CurveBatch
 from models.kinetics.prediction import SeriesCourse, no_course, predict_courses
 from models.kinetics.settling import Settling
-from models.kinetics.window_choice import Choice, Curves, choose_windows
+from models.kinetics.window_choice import Choice, choose_windows
 from models.kinetics.windows import WindowFits, windows_from
 from models.statistics.moderation import moderate_variances
 from models.statistics.sums import sum_rows

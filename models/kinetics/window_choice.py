@@ -11,6 +11,14 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from models.kinetics.curvature import (
+    FEWEST_FOR_CURVATURE,
+    Curves,
+    begins_slowly,
+    bend_beyond,
+    curved_early,
+    read_with_count,
+)
 from models.kinetics.prediction import SeriesCourse
 from models.kinetics.settling import Settling, fit_settling, goes_on, slowing
 from models.kinetics.transients import fit_transients
@@ -23,30 +31,6 @@ Flags = NDArray[np.bool_]
 
 _LAG_TIME_CONSTANTS = 3.0
 """A window starts when exp(-3) = 5 % of the lag is left at its first read, far less on average over it."""
-_STRETCHES = (1.0, 0.5, 0.25)
-"""Shares of the reads before the conversion limit on which curvature is looked for: a short lag is lost in a
-long one."""
-_FEWEST_FOR_CURVATURE = 5
-
-
-@dataclass(frozen=True)
-class Curves:
-    """Curves of one plate read with the rules for their windows; arrays (reads, wells) and (wells,).
-
-    `net_um` is product less the matching blank; `plain` marks wells whose whole course is one window
-    (blanks).
-    """
-
-    time_s: Floats
-    net_um: Floats
-    substrate_um: Floats
-    consumable_um: Floats
-    zero_is_blank: Flags
-    plain: Flags
-    depletion_limit: Floats
-    slope_change_limit: Floats
-    slope_change_t_limit: Floats
-    shortest_points: Integers
 
 
 @dataclass(frozen=True)
@@ -90,17 +74,6 @@ class Choice:
         return shape
 
 
-@dataclass(frozen=True)
-class _Bend:
-    """Curvature beyond depletion of one window a well: change of slope over the slope, its t, and the raw
-    ones."""
-
-    change: Floats
-    t: Floats
-    raw_change: Floats
-    raw_t: Floats
-
-
 def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
     """Choose the window of every well.
 
@@ -126,7 +99,7 @@ def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
     early_um = _early_mean(curves.net_um, running, usable)
 
     fits = windows_from(curves.time_s, curves.net_um, first)
-    shortest_end = _read_with_count(running, curves.shortest_points)
+    shortest_end = read_with_count(running, curves.shortest_points)
     before = np.where(
         curves.zero_is_blank, _before_first_read(curves, course, fits.pick(shortest_end).at(first_s)), 0.0
     )
@@ -137,9 +110,10 @@ def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
     predicted = _depletion(curves, course, fits.pick(end), first_s, before, consumed)
     excess = windows_from(curves.time_s, curves.net_um - predicted, first)
     noise = _read_variance(fits.pick(end), readable)
-    early = _bend(fits.pick(end), excess.pick(end), noise, course.known)
-    enough = running[end, wells] >= np.maximum(curves.shortest_points, _FEWEST_FOR_CURVATURE)
-    lagging, falls = _curved_early(curves, fits, excess, noise, course.known, running, end)
+    early = bend_beyond(fits.pick(end), excess.pick(end), noise, course.known)
+    enough = running[end, wells] >= np.maximum(curves.shortest_points, FEWEST_FOR_CURVATURE)
+    lagging, falls = curved_early(curves, fits, excess, noise, course.known, running, end)
+    lagging |= begins_slowly(curves, predicted, fits.pick(end), noise, first, end)
     lagging &= readable & ~curves.plain & enough
     falls &= readable & ~curves.plain & enough & ~lagging
 
@@ -161,7 +135,7 @@ def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
         shortest_end = np.where(lagging, lag_shortest, shortest_end)
 
     end = _straight_end(curves, late_fits, late_excess, noise, course.known, shortest_end, end)
-    bend = _bend(late_fits.pick(end), late_excess.pick(end), noise, course.known)
+    bend = bend_beyond(late_fits.pick(end), late_excess.pick(end), noise, course.known)
     # The line alone would start too high by what depletion bends the curve within the window.
     zero = np.where(course.known, late_excess.pick(end).at(first_s), late_fits.pick(end).at(first_s))
     with np.errstate(invalid="ignore"):
@@ -188,13 +162,6 @@ def choose_windows(curves: Curves, course: SeriesCourse) -> Choice:
         depletion_limit=curves.depletion_limit,
         settling=settling,
     )
-
-
-def _read_with_count(running: Integers, count: Integers) -> Integers:
-    """First read at which so many reads are usable, or the last read."""
-    reached = running >= count
-    read: Integers = np.where(reached.any(axis=0), np.argmax(reached, axis=0), running.shape[0] - 1)
-    return read
 
 
 def _early_mean(net_um: Floats, running: Integers, usable: Flags) -> Floats:
@@ -268,57 +235,6 @@ def _read_variance(line: WindowFits, readable: Flags) -> Floats:
     return steadied.variance
 
 
-def _bend(line: WindowFits, excess: WindowFits, noise: Floats, known: Flags) -> _Bend:
-    """Curvature beyond depletion. Without a prediction, nothing within the band to first-order decay
-    counts."""
-    with np.errstate(all="ignore"):
-        beyond = np.where(
-            known,
-            excess.curvature,
-            np.where(line.curvature > 0, line.curvature, np.minimum(excess.curvature, 0.0)),
-        )
-        # Relative to the slope's size, so that a falling signal's sign does not turn the meaning round.
-        over_slope = 2.0 * (line.end_s - line.start_s) / line.slope
-        sign = np.sign(line.slope)
-        error = np.sqrt(noise * line.curvature_factor)
-        return _Bend(
-            beyond * over_slope,
-            sign * beyond / error,
-            line.curvature * over_slope,
-            sign * line.curvature / error,
-        )
-
-
-def _curved_early(
-    curves: Curves,
-    fits: WindowFits,
-    excess: WindowFits,
-    noise: Floats,
-    known: Flags,
-    running: Integers,
-    end: Integers,
-) -> tuple[Flags, Flags]:
-    """Wells that speed up, and wells that slow down more than depletion explains, before the conversion
-    limit."""
-    wells = np.arange(end.size)
-    lagging, falls = np.zeros(end.size, dtype=bool), np.zeros(end.size, dtype=bool)
-    total = running[end, wells]
-    for share in _STRETCHES:
-        count = np.ceil(share * total).astype(np.intp)
-        enough = count >= np.maximum(curves.shortest_points, _FEWEST_FOR_CURVATURE)
-        stop = np.minimum(_read_with_count(running, count), end)
-        bend = _bend(fits.pick(stop), excess.pick(stop), noise, known)
-        with np.errstate(invalid="ignore"):
-            limit, t_limit = curves.slope_change_limit, curves.slope_change_t_limit
-            rises = (np.minimum(bend.change, bend.raw_change) > limit) & (
-                np.minimum(bend.t, bend.raw_t) > t_limit
-            )
-            slows = (bend.change < -limit) & (bend.t < -t_limit)
-        lagging |= enough & rises & (fits.pick(stop).slope > 0)
-        falls |= enough & slows & (fits.pick(stop).slope > 0)
-    return lagging, falls
-
-
 def _settle(curves: Curves, course: SeriesCourse, base_um: Floats, curved: Flags) -> Settling:
     """Transients of the curved wells, over their reads up to the last one below the conversion limit."""
     ceiling = curves.depletion_limit * curves.consumable_um
@@ -384,7 +300,7 @@ def _straight_end(
     end: Integers,
 ) -> Integers:
     """The last read up to which a straight line holds, not before the shortest window's end."""
-    bend = _bend(fits, excess, noise, known)
+    bend = bend_beyond(fits, excess, noise, known)
     with np.errstate(invalid="ignore"):
         curved = (np.abs(bend.change) > curves.slope_change_limit) & (
             np.abs(bend.t) > curves.slope_change_t_limit

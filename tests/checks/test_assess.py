@@ -138,7 +138,9 @@ def test_a_batch_without_wells_has_neither_findings_nor_runs() -> None:
 
 NUMBER = st.one_of(st.floats(-1.0, 4.0), st.sampled_from([0.0, 0.1, 3.0, 4.0, math.nan, math.inf]))
 COLUMNS: dict[str, tuple[str, ...]] = {
-    "detector_range": ("lost_count", "lost_without_window_count", "read_count"),
+    "detector_range": (
+        "lost_count", "lost_without_window_count", "read_count", "cut_off_conversion", "cut_off_count",
+    ),
     "read_schedule": (
         "made_count", "missing_without_window_count", "disorder_count", "missing_share", "gap_ratio",
         "count_difference", "interval_departure", "read_count", "missing_count", "interval_s",
@@ -209,7 +211,9 @@ def rule_says(gate: str, row: dict[str, Any]) -> bool:
     if gate in BEYOND:
         return BEYOND[gate](row)
     if gate == "detector_range":
-        return row["lost_count"] > 0 or row["lost_without_window_count"] > 0
+        return (
+            row["lost_count"] > 0 or row["lost_without_window_count"] > 0 or row["cut_off_conversion"] < 0.10
+        )
     if gate == "read_schedule":
         return (
             row["made_count"] < 1

@@ -56,6 +56,12 @@ def lost(numbers: list[int], state: str) -> Change:
     return lambda data: with_reads(data, "B3", numbers, state=state, signal=np.nan)
 
 
+def gone_then_lost(gone: int, past: int) -> Change:
+    return lambda data: with_reads(
+        lost([past], "overflow")(data), "B3", [gone], state="missing", signal=np.nan
+    )
+
+
 def timed(number: int, time_s: float) -> Change:
     return lambda data: with_reads(data, "B3", [number], time_s=time_s)
 
@@ -78,6 +84,8 @@ HELD: dict[str, tuple[str, Change]] = {
     "blank just stands out": ("blank_drift", bend(blank_rate_um_per_s=0.15, blank_rate_se_um_per_s=0.0499)),
     "overflow at the window's end": ("detector_range", lost([15], "overflow")),
     "past the limit at once": ("detector_range", lost([1], "past_limit")),
+    "overflow ends the window": ("detector_range", lost([16], "overflow")),
+    "overflow ends the window after a missing read": ("detector_range", gone_then_lost(16, 17)),
     "two of 20 missing": ("read_schedule", lost([17, 20], "missing")),
     "long gap": ("read_schedule", timed(20, 190.0 + 15.1)),
     "time stands still": ("read_schedule", timed(20, 180.0)),
@@ -90,7 +98,8 @@ CLEAR: dict[str, Change] = {
     "early bend not significant": bend(early_slope_change=-0.9, early_slope_change_t=-3.99),
     "blank at the limit": bend(blank_rate_um_per_s=0.10),
     "blank in its noise": bend(blank_rate_um_per_s=0.15, blank_rate_se_um_per_s=0.0501),
-    "overflow after the window": lost([16], "overflow"),
+    "overflow later than the window's end": lost([17], "overflow"),
+    "overflow past the conversion limit": lambda data: lost([16], "overflow")(bend(conversion=0.0934)(data)),
     "one of 20 missing": lost([17], "missing"),
     "gap of one read": timed(20, 190.0 + 14.9),
 }

@@ -193,6 +193,15 @@ def test_lag_is_left_out_and_the_steady_rate_found() -> None:
     assert (fast["window_start_s"] == fast["lag_s"]).all()
 
 
+def test_a_lag_too_short_for_a_parabola_is_seen_by_its_own_trace() -> None:
+    # At these levels the lag ends long before the conversion limit, and stands out of the noise by 5.5 errors.
+    wells = enzyme_wells(measured([Lag(40.0)], plates=12))
+    seen = wells[wells["level_um"].between(130, 300)]
+    assert len(seen) == 72
+    assert (seen["shape"] == "lag").mean() > 0.9
+    assert not (enzyme_wells(measured(plates=12))["shape"] == "lag").any()
+
+
 def test_burst_and_falling_curves_are_told_apart() -> None:
     burst = enzyme_wells(measured([Burst(3.0, 60.0)], noise=Noise(signal_sd=2e-4)))
     fast = burst[burst["level_um"] > 200]
