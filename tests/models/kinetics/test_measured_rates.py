@@ -194,7 +194,7 @@ def test_lag_is_left_out_and_the_steady_rate_found() -> None:
 
 
 def test_a_lag_too_short_for_a_parabola_is_seen_by_its_own_trace() -> None:
-    # At these levels the lag ends long before the conversion limit, and stands out of the noise by 5.5 errors.
+    # Here the lag ends long before the conversion limit, and stands out of the noise by 5.5 errors.
     wells = enzyme_wells(measured([Lag(40.0)], plates=12))
     seen = wells[wells["level_um"].between(130, 300)]
     assert len(seen) == 72
