@@ -118,24 +118,25 @@ def sentence(row: Row, limits: Limits) -> str:
     limits_text = f"limit {limit_text} %; t {t_value:.1f}, limit {plain(t_limit)}"
     if rule == "shape":
         return (
-            f"The curve begins with a burst: its slope changes by {measured} % over the reads before the "
-            f"conversion limit ({limits_text}). The rate may be the burst's, not the steady state's."
+            f"The curve begins with a burst: its slope changes by {measured} % of its mean over the reads "
+            f"before the conversion limit ({limits_text}). The rate may be the burst's, not the steady state's."
         )
     if rule == "window":
         return (
-            f"The slope changes by {measured} % over the window ({limits_text}): even the shortest usable "
-            "window is not straight, so this is no initial rate."
+            f"The slope changes by {measured} % of its mean over the window ({limits_text}): even the "
+            "shortest usable window is not straight, so this is no initial rate."
         )
     if rule == "falling":
         return (
             "The slope falls at the start of the curve more than loss of substrate explains; over all reads "
-            f"before the conversion limit it changes by {measured} % ({limits_text}). See the first reads."
+            f"before the conversion limit it changes by {measured} % of its mean ({limits_text}). "
+            "See the first reads."
         )
     way = "rises" if change > 0 else "falls"
     why = "a slow start" if change > 0 else "loss of activity or a product that inhibits"
     return (
-        f"The slope {way} by {measured} % over the reads before the conversion limit, beyond what loss of "
-        f"substrate explains ({limits_text}): there is another reason, such as {why}."
+        f"The slope {way} by {measured} % of its mean over the reads before the conversion limit, beyond "
+        f"what loss of substrate explains ({limits_text}): there is another reason, such as {why}."
     )
 
 
