@@ -7,7 +7,7 @@ and consequences are sorted out in `checks.verdicts`.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -46,10 +46,11 @@ class GateRun:
 
 @dataclass(frozen=True)
 class Assessment:
-    """Findings (FINDINGS columns) of a batch and the runs behind them."""
+    """Findings (FINDINGS columns) of a batch, the runs behind them, and what each gate measured."""
 
     findings: pd.DataFrame
     runs: list[GateRun]
+    metrics: Mapping[str, pd.DataFrame] = field(default_factory=dict)
 
 
 def assess(
@@ -106,7 +107,7 @@ def assess(
             findings += _findings(on, outcome, table, subject, limits[recipe_id])
             runs.append(_gate_run(outcome, f"{phase}.{subject}", recipe_id, len(table), limits[recipe_id]))
     frame = pd.DataFrame(findings, columns=FINDINGS.column_names) if findings else FINDINGS.empty()
-    return Assessment(frame, runs)
+    return Assessment(frame, runs, metrics)
 
 
 def metrics_table(

@@ -119,8 +119,8 @@ def sentence(row: Row, limits: Limits) -> str:
     if rule == "shape":
         return (
             f"The curve begins with a burst: its slope changes by {measured} % of its mean over the reads "
-            f"before the conversion limit ({limits_text}). The rate may be the burst's, not that of the steady "
-            "state."
+            f"before the conversion limit ({limits_text}). The rate may be the burst's, not the steady "
+            "state's."
         )
     if rule == "window":
         return (

@@ -55,7 +55,7 @@ def metrics(data: GateInput) -> pd.DataFrame:
     if data.points is None or data.fits is None:
         raise ValueError("plate_position judges fits: it needs fits and points")
     plates = data.analyses[["analysis_id"]].reset_index(drop=True)
-    points = _points(data, plates)
+    points = residuals(data)
     number_of = points["plate"].to_numpy(dtype=np.intp)
     ends = np.searchsorted(number_of, np.arange(len(plates) + 1))
     found = [
@@ -75,8 +75,12 @@ def metrics(data: GateInput) -> pd.DataFrame:
     )
 
 
-def _points(data: GateInput, plates: pd.DataFrame) -> pd.DataFrame:
-    """Residuals of the fits that count, with each well's place and condition, in order of plate and place."""
+def residuals(data: GateInput) -> pd.DataFrame:
+    """Residuals of the fits that count, with each well's place and condition, in order of plate and place.
+
+    Columns of FIT_POINTS, and `plate` (row of `data.analyses`), `block` (condition), row_number,
+    column_number, `relative` to the fitted rate, `standardised` and `precision`.
+    """
     assert data.fits is not None
     assert data.points is not None
     fits = data.fits
@@ -91,7 +95,7 @@ def _points(data: GateInput, plates: pd.DataFrame) -> pd.DataFrame:
         points["standardised"] = residual / points["v_sd_um_per_s"].to_numpy(dtype=float)
         points["precision"] = np.abs(fitted) / points["v_sd_um_per_s"].to_numpy(dtype=float)
     points = points[np.isfinite(points["relative"]) & np.isfinite(points["standardised"])]
-    points["plate"] = pd.Index(plates["analysis_id"]).get_indexer(points["analysis_id"])
+    points["plate"] = pd.Index(data.analyses["analysis_id"]).get_indexer(points["analysis_id"])
     points["block"] = points.groupby(["series_id", "substrate_um"], sort=False).ngroup()
     # The order is the plate's own, so that nothing depends on how rows come.
     ordered: pd.DataFrame = points[points["plate"] >= 0].sort_values(["plate", "row_number", "column_number"])

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import pandas as pd
 
 from checks.assess import Assessment, assess
-from checks.gates.gate import Phase
+from checks.gates.gate import GateInput
 from checks.verdicts import (
     plate_read_standing,
     series_standings,
@@ -21,13 +21,25 @@ from checks.verdicts import (
 )
 from flows.stages.gate import gate_input, limits_by_recipe
 from flows.stages.grids import fit_grids_of
+from flows.stages.plate_statistics import plate_statistics
 from flows.stages.stored_fits import StoredFits, joined, law_chosen, stored_fits
 from flows.stages.suggestions import suggest_levels
 from flows.stages.whole_curves import WholeCurves, fit_whole_curves
 from flows.stages.work import FittedBatch, GatedBatch
 from models.kinetics.fit_results import FitResult
 from models.kinetics.fitting import FitSettings, fit_rates
-from models.tables import ANALYSES, COMPARISONS, FINDINGS, GRIDS, RATES, SERIES, SHIFTS, SUGGESTIONS, WELLS
+from models.tables import (
+    ANALYSES,
+    COMPARISONS,
+    FINDINGS,
+    GRIDS,
+    PLATE_STATISTICS,
+    RATES,
+    SERIES,
+    SHIFTS,
+    SUGGESTIONS,
+    WELLS,
+)
 
 CLEAR, ALL, CURVES = "clear", "all", "curves"
 STANDINGS_FITTED = {CLEAR: ("clear",), ALL: ("clear", "held")}
@@ -48,7 +60,9 @@ def fit_batch(gated: GatedBatch) -> FittedBatch:
     """
     rated = gated.rated
     fitted = _fit(gated, CLEAR)
-    by_fit = _assess("fit", gated, _series_rows(gated, fitted), fitted.stored)
+    by_fit = assess(
+        "fit", _gate_input(gated, _series_rows(gated, fitted), fitted.stored), limits_by_recipe(rated.plates)
+    )
     gated, changed = _held_further(gated, by_fit)
     if changed:
         fitted = _fit(gated, CLEAR)
@@ -56,7 +70,8 @@ def fit_batch(gated: GatedBatch) -> FittedBatch:
     stored = joined([fitted.stored, _fit(gated, ALL).stored, curves.stored])
 
     series = _series_rows(gated, fitted)
-    by_series = _assess("series", gated, series, stored, curves)
+    data = _gate_input(gated, series, stored, curves)
+    by_series = assess("series", data, limits_by_recipe(rated.plates))
     findings = _together(gated.findings, without_consequences(by_series.findings))
     series["standing"] = series_standings(series, findings, gated.wells).to_numpy()
     assays = {work.analysis_id: work.recipe.assay for work in rated.plates}
@@ -85,6 +100,7 @@ def fit_batch(gated: GatedBatch) -> FittedBatch:
         COMPARISONS.name: curves.comparisons[COMPARISONS.column_names],
         SHIFTS.name: grids.shifts[SHIFTS.column_names],
         SUGGESTIONS.name: suggestions[SUGGESTIONS.column_names],
+        PLATE_STATISTICS.name: plate_statistics(data, {**gated.metrics, **by_series.metrics}),
     }
     return FittedBatch(rated.plates, tables, (*gated.runs, *by_series.runs))
 
@@ -145,14 +161,10 @@ def _series_rows(gated: GatedBatch, fitted: _Fitted) -> pd.DataFrame:
     return series.reset_index()
 
 
-def _assess(
-    phase: Phase,
-    gated: GatedBatch,
-    series: pd.DataFrame,
-    stored: StoredFits,
-    curves: WholeCurves | None = None,
-) -> Assessment:
-    data = gate_input(
+def _gate_input(
+    gated: GatedBatch, series: pd.DataFrame, stored: StoredFits, curves: WholeCurves | None = None
+) -> GateInput:
+    return gate_input(
         gated.rated,
         series=series.drop(columns="series"),
         estimates=stored.estimates,
@@ -160,7 +172,6 @@ def _assess(
         points=stored.points,
         comparisons=None if curves is None else curves.comparisons,
     )
-    return assess(phase, data, limits_by_recipe(gated.rated.plates))
 
 
 def _held_further(gated: GatedBatch, by_fit: Assessment) -> tuple[GatedBatch, bool]:
@@ -170,7 +181,8 @@ def _held_further(gated: GatedBatch, by_fit: Assessment) -> tuple[GatedBatch, bo
     changed = not standing.equals(gated.wells["standing"])
     wells = gated.wells.assign(standing=standing)
     findings = _together(gated.findings, further)
-    return GatedBatch(gated.rated, wells, findings, (*gated.runs, *by_fit.runs)), changed
+    runs, metrics = (*gated.runs, *by_fit.runs), {**gated.metrics, **by_fit.metrics}
+    return GatedBatch(gated.rated, wells, findings, runs, metrics), changed
 
 
 def _together(first: pd.DataFrame, second: pd.DataFrame) -> pd.DataFrame:

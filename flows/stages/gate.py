@@ -33,7 +33,7 @@ def gate_batch(rated: RatedBatch) -> GatedBatch:
     assessment = assess("wells", gate_input(rated), limits_by_recipe(rated.plates))
     findings = without_consequences(assessment.findings)
     wells = rated.wells.assign(standing=well_standings(rated.wells, findings))
-    return GatedBatch(rated, wells, findings, assessment.runs)
+    return GatedBatch(rated, wells, findings, assessment.runs, assessment.metrics)
 
 
 def gate_input(rated: RatedBatch, **fitted: pd.DataFrame | None) -> GateInput:

@@ -5,7 +5,7 @@ Plain frozen records; nothing here reads, writes or computes.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
 import pandas as pd
@@ -74,12 +74,13 @@ class RatedBatch:
 
 @dataclass(frozen=True)
 class GatedBatch:
-    """Rated plate reads with the findings on wells and plate reads, and each well's standing."""
+    """Rated plate reads with findings on wells and plate reads, each well's standing, and gates' metrics."""
 
     rated: RatedBatch
     wells: pd.DataFrame
     findings: pd.DataFrame
     runs: Sequence[GateRun]
+    metrics: Mapping[str, pd.DataFrame] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)

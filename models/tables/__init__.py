@@ -16,6 +16,7 @@ from models.tables.fits import (
 )
 from models.tables.intake import FILES, PASSES, PLATE_MAPS, PLATE_READS, READINGS
 from models.tables.lots import GATE_RUNS, LOT_VALUE_SOURCES, LOT_VALUES, RECIPES
+from models.tables.plate_statistics import PLATE_STATISTICS
 from models.tables.results import ANALYSES, FINDINGS, RATES, WELLS
 from models.tables.suggestions import SUGGESTIONS
 from models.tables.table import Column, Table
@@ -41,6 +42,7 @@ TABLES: tuple[Table, ...] = (
     COMPARISONS,
     SHIFTS,
     SUGGESTIONS,
+    PLATE_STATISTICS,
     LOT_VALUES,
     LOT_VALUE_SOURCES,
 )
@@ -77,6 +79,7 @@ __all__ = [
     "PASSES",
     "PLATE_MAPS",
     "PLATE_READS",
+    "PLATE_STATISTICS",
     "RATES",
     "READINGS",
     "RECIPES",
