@@ -7,10 +7,6 @@ from pathlib import Path
 
 import click
 
-from flows.cli.night import show_lots, show_pass
-from flows.cli.tables import console
-from flows.demo import write_demo
-from flows.overnight.launch import run_pass_by
 from flows.site.layout import open_site
 
 
@@ -25,6 +21,11 @@ def command(folder: Path) -> None:
     constants and with the faults that a real night brings. In a folder that already holds the demo, the
     night's files are dropped again and nothing new is found.
     """
+    from flows.cli.night import show_lots, show_pass
+    from flows.cli.tables import console
+    from flows.demo import write_demo
+    from flows.overnight.launch import run_pass_by
+
     write_demo(folder)
     site = open_site(folder)
     report = run_pass_by("process", site, lambda: datetime.now(UTC))

@@ -8,10 +8,6 @@ import click
 
 from flows.cli.options import site_option
 from flows.cli.root import EXIT_ATTENTION
-from flows.cli.tables import console, heading
-from flows.history.gate_audit import audit_record
-from flows.history.gate_page import gate_page, gate_summary
-from flows.history.gate_record import Scope
 from flows.site.layout import open_site
 
 
@@ -38,8 +34,14 @@ def command(
     """
     if sum(each is not None for each in (pass_id, analysis_id, plate_id)) > 1:
         raise click.UsageError("--pass, --analysis and --plate exclude each other")
+    from flows.history.gate_audit import audit_record
+    from flows.history.gate_page import gate_page, gate_summary
+    from flows.history.gate_record import Scope
+
     record = audit_record(open_site(site_dir), Scope(pass_id, analysis_id, plate_id))
     if output is None:
+        from flows.cli.tables import console, heading
+
         screen = console()
         heading(screen, f"What the gates found: {record.about}")
         screen.print(gate_summary(record))

@@ -4,19 +4,20 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import click
 from click.core import ParameterSource
-from rich.console import Console
-from rich.text import Text
 
 from flows.cli.options import site_option
-from flows.cli.tables import console, heading, plain_table
-from flows.history.output import FILE_FORMATS, encode, print_answer
-from flows.history.questions import Question, ask, bind, find_question, is_name, load_questions
+from flows.history.formats import FILE_FORMATS
 from flows.site.layout import Site, open_site
-from flows.warehouse.reader import QueryLimits, run_query
 from models.errors import QueryError, SiteError
+
+if TYPE_CHECKING:
+    from rich.console import Console
+
+    from flows.history.questions import Question
 
 
 @click.command(
@@ -74,6 +75,11 @@ def command(
         raise click.UsageError(
             f"there is no option '{question}'; a question's name stands before its parameters"
         )
+    from flows.cli.tables import console
+    from flows.history.output import encode, print_answer
+    from flows.history.questions import ask, bind, find_question, is_name
+    from flows.warehouse.reader import QueryLimits, run_query
+
     site, limits = open_site(site_dir), QueryLimits(time_s=seconds)
     if is_name(question):
         named = find_question(site, question)
@@ -131,6 +137,11 @@ def _site_if_any(ctx: click.Context, site_dir: Path) -> Site | None:
 
 
 def _list(site: Site | None, name: str | None) -> None:
+    from rich.text import Text
+
+    from flows.cli.tables import console, plain_table
+    from flows.history.questions import find_question, load_questions
+
     screen = console()
     if name is not None:
         _show(screen, find_question(site, name))
@@ -145,6 +156,10 @@ def _list(site: Site | None, name: str | None) -> None:
 
 
 def _show(screen: Console, question: Question) -> None:
+    from rich.text import Text
+
+    from flows.cli.tables import heading, plain_table
+
     heading(screen, f"{question.name}: {question.title}")
     screen.print(Text(question.answers))
     screen.print()

@@ -7,8 +7,6 @@ from pathlib import Path
 import click
 
 from flows.cli.options import site_option
-from flows.cli.tables import console
-from flows.history.lineage import lineage, render
 from flows.site.layout import open_site
 
 
@@ -21,5 +19,8 @@ def command(result_id: str, site_dir: Path) -> None:
     ID is that of an estimate, fit, series, analysis, lot value, plate read or file, or the first digits of
     it, as the views show them.
     """
+    from flows.cli.tables import console
+    from flows.history.lineage import lineage, render
+
     site = open_site(site_dir)
     console().print(render(lineage(site, result_id)))

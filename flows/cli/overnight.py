@@ -7,11 +7,9 @@ from pathlib import Path
 
 import click
 
-from flows.cli.night import show_lots, show_pass
 from flows.cli.options import site_option
 from flows.cli.root import EXIT_ATTENTION
-from flows.cli.tables import console
-from flows.overnight.launch import ROUTES, Route, run_pass_by
+from flows.overnight.launch import ROUTES, Route
 from flows.site.layout import open_site
 
 
@@ -32,6 +30,10 @@ def command(site_dir: Path, strict: bool, via: Route) -> None:
     What cannot be read goes to quarantine with its reason; what cannot be trusted waits for a person.
     A second pass over the same files does nothing.
     """
+    from flows.cli.night import show_lots, show_pass
+    from flows.cli.tables import console
+    from flows.overnight.launch import run_pass_by
+
     site = open_site(site_dir)
     report = run_pass_by(via, site, lambda: datetime.now(UTC))
     screen = console()

@@ -7,7 +7,6 @@ from pathlib import Path
 import click
 
 from flows.cli.options import site_option
-from flows.overnight.serve import serve
 from flows.site.layout import open_site
 
 
@@ -19,4 +18,6 @@ def command(site_dir: Path) -> None:
     Starts a scheduler on loopback (port and cron line from config/site.toml) and stops cleanly on SIGTERM or
     Ctrl-C. The scheduler's own page, at the address it prints, shows passes and their steps.
     """
+    from flows.overnight.serve import serve
+
     serve(open_site(site_dir), announce=click.echo)

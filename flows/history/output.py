@@ -26,11 +26,11 @@ from rich.console import Console, Group, RenderableType
 from rich.table import Table
 from rich.text import Text
 
+from flows.history.formats import FILE_FORMATS
 from flows.wording import number
 from models.errors import QueryError
 
 WIDTH = 80
-FILE_FORMATS = ("csv", "json", "parquet", "xlsx")
 ROWS_SHOWN = 200
 _ID_LENGTH = 12
 _LONGEST_WORD = 28

@@ -1,6 +1,6 @@
 """Start one pass the way it is asked for: in this process, or as a Prefect flow.
 
-Prefect is imported only where a pass goes through it.
+Prefect is imported only where a pass goes through it, and what computes only when a pass starts.
 """
 
 from __future__ import annotations
@@ -11,10 +11,7 @@ from collections.abc import Callable
 from datetime import datetime
 from pathlib import Path
 from typing import Literal, get_args
-from urllib.error import URLError
-from urllib.request import urlopen
 
-from flows.overnight.nightly import run_pass
 from flows.overnight.report import PassReport
 from flows.site.layout import Site
 
@@ -55,6 +52,9 @@ def answers(api_url: str) -> bool:
     """Whether a server at this loopback address says that it is healthy."""
     if not api_url.startswith("http://127.0.0.1:"):
         return False
+    from urllib.error import URLError
+    from urllib.request import urlopen
+
     try:
         with urlopen(f"{api_url}/health", timeout=2) as reply:
             return int(reply.status) == 200
@@ -83,6 +83,8 @@ def run_pass_by(route: Route, site: Site, clock: Callable[[], datetime]) -> Pass
     """
     server = running_server(site) if route != "process" else None
     if route == "process" or (route == "auto" and server is None):
+        from flows.overnight.nightly import run_pass
+
         return run_pass(site, clock)
     os.environ.update(_QUIET, PREFECT_HOME=str(prefect_home(site)))
     if server is not None:

@@ -14,7 +14,8 @@ from hypothesis import strategies as st
 from openpyxl import load_workbook
 from rich.console import Console
 
-from flows.history.output import FILE_FORMATS, encode, print_answer
+from flows.history.formats import FILE_FORMATS
+from flows.history.output import encode, print_answer
 from models.errors import QueryError
 
 AT = datetime(2026, 3, 2, 21, 0, 0, 500_000, tzinfo=UTC)

@@ -9,7 +9,7 @@ import pytest
 from click.testing import CliRunner
 
 from checks.gates import GATES, resolve_limits
-from flows.cli.prove import csv_rows, drawing, show
+from flows.cli.proved import csv_rows, drawing, show
 from flows.cli.root import tree
 from flows.cli.tables import console
 from flows.proving.bench import common_bench
