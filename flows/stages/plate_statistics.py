@@ -51,9 +51,9 @@ def _row(analysis_id: object, statistic: str, value: object, reason: object, **r
     return {
         "analysis_id": analysis_id,
         "statistic": statistic,
-        "value": known,
+        "statistic_value": known,
         "p_value": None,
-        "place": None,
+        "where_on_plate": None,
         "well_count": None,
         "reason": unknown,
         **rest,
@@ -82,7 +82,7 @@ def _position(metrics: pd.DataFrame) -> Iterator[Row]:
             plate.effect,
             plate.reason,
             p_value=known_or_none(plate.p_value),
-            place=place,
+            where_on_plate=place,
             well_count=int(plate.well_count),
         )
 

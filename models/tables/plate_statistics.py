@@ -17,7 +17,7 @@ PLATE_STATISTICS = Table(
             "stands out most, and read_order_drift, from the first to the last well read, both of rates "
             "relative to their fit",
         ),
-        Column("value", "real", "The statistic; NULL where it cannot be known", "1", nullable=True),
+        Column("statistic_value", "real", "The statistic; NULL where it cannot be known", "1", nullable=True),
         Column(
             "p_value",
             "real",
@@ -25,7 +25,7 @@ PLATE_STATISTICS = Table(
             "1",
             nullable=True,
         ),
-        Column("place", "text", "Row, column or edge that stands out, such as row C", nullable=True),
+        Column("where_on_plate", "text", "Row, column or edge that stands out, such as row C", nullable=True),
         Column("well_count", "integer", "Wells that it rests on", nullable=True),
         Column("reason", "text", "Why it is not known; NULL where it is", nullable=True),
     ),

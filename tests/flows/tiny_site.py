@@ -262,6 +262,9 @@ def analysed_tables(
             "file": "lake/gate_documents/none.json",
         }
     )
+    given["plate_statistics"].append(
+        {"analysis_id": analysis_id, "statistic": "z_prime", "statistic_value": 0.8, "well_count": 9}
+    )
     for well in all_wells():
         _add_well(made, given, plate, analysis_id, well)
     for row in LOTS:
@@ -393,6 +396,7 @@ _ANALYSED = (
     "comparisons",
     "shifts",
     "suggestions",
+    "plate_statistics",
     "gate_runs",
 )
 

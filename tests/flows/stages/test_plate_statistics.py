@@ -33,7 +33,7 @@ def test_every_plate_read_has_every_statistic(statistics: dict[str, pd.DataFrame
         assert set(table.index) == {
             "z_prime", "signal_to_blank", "replicate_cv", "position_effect", "read_order_drift",
         }  # fmt: skip
-        known = table["value"].notna()
+        known = table["statistic_value"].notna()
         assert known.drop("signal_to_blank").all()
         # The blanks turn nothing over: by chance their mean is below zero, and there is no ratio.
         assert (known == table["reason"].isna()).all()
@@ -41,18 +41,18 @@ def test_every_plate_read_has_every_statistic(statistics: dict[str, pd.DataFrame
 
 def test_a_clean_plate_shows_its_noise_and_nothing_else(statistics: dict[str, pd.DataFrame]) -> None:
     clean = statistics["clean"]
-    assert 0.5 < clean.loc["z_prime", "value"] < 1.0
+    assert 0.5 < clean.loc["z_prime", "statistic_value"] < 1.0
     # 2 % for each of two dispensing steps, and the noise of the reads where rates are low.
-    assert 0.02 < clean.loc["replicate_cv", "value"] < 0.10
+    assert 0.02 < clean.loc["replicate_cv", "statistic_value"] < 0.10
     assert clean.loc["position_effect", "p_value"] > 0.01
     assert clean.loc["read_order_drift", "p_value"] > 0.01
-    assert abs(clean.loc["read_order_drift", "value"]) < 0.02
+    assert abs(clean.loc["read_order_drift", "statistic_value"]) < 0.02
 
 
 def test_what_is_wrong_with_a_plate_is_found_at_its_size(statistics: dict[str, pd.DataFrame]) -> None:
     edge = statistics["edge"]
-    assert edge.loc["position_effect", "place"] == "edge"
-    assert edge.loc["position_effect", "value"] == pytest.approx(-0.10, abs=0.04)
+    assert edge.loc["position_effect", "where_on_plate"] == "edge"
+    assert edge.loc["position_effect", "statistic_value"] == pytest.approx(-0.10, abs=0.04)
     assert edge.loc["position_effect", "p_value"] <= 0.01
 
 
@@ -69,7 +69,7 @@ def test_a_drift_along_the_order_of_reading_is_found_at_its_size() -> None:
     drift = table.set_index("statistic").loc["read_order_drift"]
     assert drift["p_value"] < 1e-4
     # From 1.0 to 1.2, relative to their middle.
-    assert drift["value"] == pytest.approx(0.2 / 1.1, abs=0.05)
+    assert drift["statistic_value"] == pytest.approx(0.2 / 1.1, abs=0.05)
 
 
 def test_a_plate_that_cannot_be_judged_says_why() -> None:
@@ -77,7 +77,7 @@ def test_a_plate_that_cannot_be_judged_says_why() -> None:
     few = wells[(wells["role"] == "sample")].drop_duplicates("substrate_um").head(3)
     bench = replace(BENCH, design=replace(BENCH.design, wells=few))
     table = through_line(bench, [simulate(bench, (7, 2))]).tables["plate_statistics"].set_index("statistic")
-    assert table["value"].isna().all()
+    assert table["statistic_value"].isna().all()
     assert table.loc["z_prime", "reason"] == "the plate has no reference"
     assert table.loc["signal_to_blank", "reason"] == "the plate has no reference"
     assert table.loc["replicate_cv", "reason"] == "no condition has replicates"
