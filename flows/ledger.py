@@ -31,6 +31,8 @@ Kind = Literal[
     "pass_started",
     "pass_finished",
     "published",
+    "verified",
+    "digest_written",
     "ledger_repaired",
 ]
 

@@ -52,6 +52,10 @@ class SiteError(HalfsatError):
     """A site folder is missing, incomplete or in use."""
 
 
+class SiteBusy(SiteError):
+    """Another pass holds the site: nothing is wrong with it."""
+
+
 class LedgerError(HalfsatError):
     """The ledger's chain is broken or an entry cannot be read."""
 

@@ -14,6 +14,7 @@ import click
 from flows.cli.options import site_option
 from flows.cli.prove import prove
 from flows.cli.root import EXIT_ATTENTION
+from flows.cli.status import status
 from flows.site.layout import create_site, open_site
 
 
@@ -23,6 +24,7 @@ def command() -> None:
 
 
 command.add_command(prove)
+command.add_command(status)
 
 
 @command.command("new")

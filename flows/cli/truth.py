@@ -35,16 +35,18 @@ def verify_command(site_dir: Path) -> None:
     """Check every hash: ledger, raw files, lake, warehouse.
 
     Holds each file against the hash that the ledger has of it, and the ledger against its own chain. Names
-    every file that is damaged or missing, and what to do about it; changes nothing.
+    every file that is damaged or missing, and what to do about it; mends nothing. That it ran, and what it
+    found, goes into the ledger.
 
     Exit code 3 where anything is damaged or missing.
     """
     from flows.cli.tables import console
-    from flows.history.verify import verify
+    from flows.history.verify import record_verified, verify
 
     site = open_site(site_dir)
     with _progress() as tell:
         report = verify(site, tell)
+    record_verified(site, report, datetime.now(UTC))
     _show_verified(console(), report)
     if report.damages:
         raise SystemExit(EXIT_FAILED)

@@ -1,6 +1,6 @@
 """Verify: every hash that the site rests on, held against the bytes as they are now.
 
-Changes nothing. The ledger says what must be there; what it does not name is not looked at.
+Changes nothing of what it checks. The ledger says what must be there; what it does not name is not looked at.
 """
 
 from __future__ import annotations
@@ -9,6 +9,7 @@ import hashlib
 import tempfile
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
+from datetime import datetime
 from pathlib import Path
 
 import duckdb
@@ -26,7 +27,7 @@ from flows.warehouse import writer
 from flows.warehouse.bookkeeping import SCHEMA, STORED
 from flows.warehouse.view import quoted
 from models.errors import HalfsatError, LedgerError
-from models.identity import content_id
+from models.identity import Json, content_id
 from models.tables import ANALYSES, FILES, GATE_RUNS
 
 Tell = Callable[[str, int, int], None]
@@ -94,6 +95,27 @@ class _Named:
     profiles: dict[str, None] = field(default_factory=dict)
     batches: list[RecordedBatch] = field(default_factory=list)
     published: dict[str, str] = field(default_factory=dict)
+
+
+def record_verified(site: Site, report: VerifyReport, now: datetime) -> bool:
+    """Write into the ledger that the site was verified, and what came out; not into a damaged one.
+
+    Returns
+    -------
+    bool
+        Whether it was written. A site that may only be read has been verified all the same.
+    """
+    if any(each.name == "ledger entries" and each.damages for each in report.checked):
+        return False
+    body: dict[str, Json] = {
+        "checked": {each.name: each.count for each in report.checked},
+        "damage_count": len(report.damages),
+    }
+    try:
+        ledger.append(site, "verified", body, at=now)
+    except OSError:
+        return False
+    return True
 
 
 def verify(site: Site, tell: Tell | None = None) -> VerifyReport:

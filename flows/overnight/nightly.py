@@ -6,6 +6,7 @@ which. A pass that is killed leaves nothing half done: the next one goes on from
 
 from __future__ import annotations
 
+import logging
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from datetime import datetime
@@ -15,10 +16,11 @@ import pandas as pd
 
 from flows.ledger import append, append_all
 from flows.overnight.pending import Ready, find_pending, load_work
-from flows.overnight.report import PassReport
+from flows.overnight.report import PassReport, log_report
 from flows.site.configuration import Configuration, load_configuration
 from flows.site.layout import Site
 from flows.site.lock import pass_lock
+from flows.site.log import about, site_log
 from flows.site.recipes import code_version, keep_recipe
 from flows.stages.fit import fit_batch
 from flows.stages.gate import gate_batch
@@ -33,6 +35,8 @@ from flows.stages.work import FittedBatch, GatedBatch, PlateWork
 from flows.warehouse.writer import loader
 from models.identity import result_id
 from models.tables import ANALYSES, FILES, GATE_RUNS, PASSES, PLATE_MAPS, PLATE_READS, RECIPES, SERIES, WELLS
+
+log = logging.getLogger(__name__)
 
 Result = TypeVar("Result")
 Clock = Callable[[], datetime]
@@ -87,45 +91,49 @@ def run_pass(site: Site, clock: Clock, run: Run = run_plainly) -> PassReport:
     ConfigurationError
         If a configuration file does not say what it must.
     """
-    with pass_lock(site):
-        started_at = clock()
-        night = _Pass(
-            site,
-            load_configuration(site.config),
-            result_id("pass", started_at.isoformat()),
-            started_at,
-            clock,
-        )
-        repair(site)
-        append(site, "pass_started", {"pass_id": night.pass_id}, at=started_at)
-        staged = _take_in(night, run)
-        ready, waiting = find_pending(site, night.configuration)
-        analysis_ids: list[str] = []
-        held_count = 0
-        off: list[tuple[str, tuple[str, ...]]] = []
-        for part in _batches(ready, night.configuration.settings.plates_per_batch):
-            works, unconverted = load_work(night.site, part)
-            waiting += unconverted
-            if not works:
-                continue
-            gated = run("gate", gate_works, works)
-            fitted = run("fit", fit_batch, gated)
-            run("load", _load_batch, night, fitted)
-            analysis_ids += [work.analysis_id for work in fitted.plates]
-            held_count += _held(fitted)
-            off += [(work.recipe.assay_name, gates_off(work.recipe.limits)) for work in fitted.plates]
-        finished_at = clock()
-        if staged.files or analysis_ids:
-            load_results(
-                site, night.pass_id, _pass_row(night, staged, analysis_ids, finished_at), finished_at
-            )
-        append(
-            site,
-            "pass_finished",
-            {"pass_id": night.pass_id, "analysis_count": len(analysis_ids), "file_count": len(staged.files)},
-            at=finished_at,
-        )
-        run("publish", publish_results, site, finished_at)
+    started_at = clock()
+    pass_id = result_id("pass", started_at.isoformat())
+    with pass_lock(site), site_log(site, started_at), about(pass_id=pass_id):
+        try:
+            night = _Pass(site, load_configuration(site.config), pass_id, started_at, clock)
+            report = _run_steps(night, run)
+        except Exception:
+            log.exception("the pass failed; the next one goes on from what is stored")
+            raise
+        log_report(report)
+    return report
+
+
+def _run_steps(night: _Pass, run: Run) -> PassReport:
+    site, started_at = night.site, night.started_at
+    repair(site)
+    append(site, "pass_started", {"pass_id": night.pass_id}, at=started_at)
+    staged = _take_in(night, run)
+    ready, waiting = find_pending(site, night.configuration)
+    analysis_ids: list[str] = []
+    held_count = 0
+    off: list[tuple[str, tuple[str, ...]]] = []
+    for part in _batches(ready, night.configuration.settings.plates_per_batch):
+        works, unconverted = load_work(night.site, part)
+        waiting += unconverted
+        if not works:
+            continue
+        gated = run("gate", gate_works, works)
+        fitted = run("fit", fit_batch, gated)
+        run("load", _load_batch, night, fitted)
+        analysis_ids += [work.analysis_id for work in fitted.plates]
+        held_count += _held(fitted)
+        off += [(work.recipe.assay_name, gates_off(work.recipe.limits)) for work in fitted.plates]
+    finished_at = night.clock()
+    if staged.files or analysis_ids:
+        load_results(site, night.pass_id, _pass_row(night, staged, analysis_ids, finished_at), finished_at)
+    append(
+        site,
+        "pass_finished",
+        {"pass_id": night.pass_id, "analysis_count": len(analysis_ids), "file_count": len(staged.files)},
+        at=finished_at,
+    )
+    run("publish", publish_results, site, finished_at)
     return PassReport(
         pass_id=night.pass_id,
         started_at=started_at,
@@ -138,6 +146,7 @@ def run_pass(site: Site, clock: Clock, run: Run = run_plainly) -> PassReport:
             if row["kind"] == "quarantined"
         ),
         waiting=tuple(waiting),
+        plates_read=tuple(str(row["plate_id"]) for row in staged.plate_reads),
         analysis_ids=tuple(analysis_ids),
         held_count=held_count,
         gates_off=tuple(dict.fromkeys(off)),

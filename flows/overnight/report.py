@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+import logging
 from dataclasses import dataclass
 from datetime import datetime
+
+log = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True)
@@ -28,6 +31,8 @@ class PassReport:
         Plate reads without plate map or assay, whenever they came in.
     analysis_ids
         Plate reads analysed in this pass.
+    plates_read
+        Plates of the plate reads staged in this pass.
     held_count
         Wells and series that this pass left waiting for a person.
     gates_off
@@ -42,6 +47,7 @@ class PassReport:
     quarantined: tuple[tuple[str, str], ...] = ()
     waiting: tuple[Waiting, ...] = ()
     analysis_ids: tuple[str, ...] = ()
+    plates_read: tuple[str, ...] = ()
     held_count: int = 0
     gates_off: tuple[tuple[str, tuple[str, ...]], ...] = ()
 
@@ -74,3 +80,16 @@ class PassReport:
     def needs_attention(self) -> bool:
         """Whether something was held, quarantined or left waiting."""
         return bool(self.quarantined or self.waiting or self.held_count)
+
+
+def log_report(report: PassReport) -> None:
+    """Log what a pass did: one line, and one for each file that it refused or new plate that has to wait."""
+    for file_name, reason in report.quarantined:
+        log.warning(reason, extra={"file": file_name})
+    new = set(report.plates_read)
+    for each in report.waiting:
+        if each.plate_id in new:
+            log.warning(each.reason, extra={"plate": each.plate_id})
+    took_s = (report.finished_at - report.started_at).total_seconds()
+    counts = {name.replace(" ", "_"): count for name, count in report.counts().items() if count}
+    log.info("the pass is done", extra={"took_s": round(took_s, 3), **counts})

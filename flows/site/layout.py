@@ -88,6 +88,16 @@ class Site:
         return self.warehouse / "published.duckdb"
 
     @property
+    def log(self) -> Path:
+        """Folder of the logs: what passes had to say, and what their helpers wrote. No truth is there."""
+        return self.root / "log"
+
+    @property
+    def outbox(self) -> Path:
+        """What the site hands out: digests and worklists."""
+        return self.root / "outbox"
+
+    @property
     def lock_file(self) -> Path:
         """The file whose lock a pass holds."""
         return self.root / ".pass.lock"

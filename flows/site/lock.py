@@ -11,7 +11,7 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 
 from flows.site.layout import Site
-from models.errors import SiteError
+from models.errors import SiteBusy
 
 
 @contextmanager
@@ -20,7 +20,7 @@ def pass_lock(site: Site) -> Iterator[None]:
 
     Raises
     ------
-    SiteError
+    SiteBusy
         If another pass holds it, in this process or another.
     """
     handle = os.open(site.lock_file, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
@@ -29,7 +29,7 @@ def pass_lock(site: Site) -> Iterator[None]:
             fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
         except BlockingIOError as error:
             holder = os.read(handle, 32).decode(errors="replace").strip()
-            raise SiteError(
+            raise SiteBusy(
                 f"another pass is running{f' (process {holder})' if holder else ''}",
                 where=str(site.root),
                 remedy="wait until it has finished",
@@ -39,3 +39,12 @@ def pass_lock(site: Site) -> Iterator[None]:
         yield
     finally:
         os.close(handle)
+
+
+def is_held(site: Site) -> bool:
+    """Whether a pass holds the site now, in this process or another."""
+    try:
+        with pass_lock(site):
+            return False
+    except SiteBusy:
+        return True

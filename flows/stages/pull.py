@@ -215,6 +215,11 @@ def _inbox(site: Site, settings: InboxSettings) -> Path:
     return inbox
 
 
+def inbox_names(inbox: Path) -> list[str]:
+    """Paths below a local inbox of the files that a pass would look at, with forward slashes, in order."""
+    return sorted(_printable(path.relative_to(inbox).as_posix()) for path in _regular_files(inbox))
+
+
 def _settled_files(inbox: Path, settle_s: float, now: datetime) -> Iterator[tuple[str, bytes]]:
     """Paths below the inbox with forward slashes, and bytes, of all files that nobody is writing."""
     for path in sorted(_regular_files(inbox)):

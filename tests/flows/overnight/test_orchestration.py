@@ -2,38 +2,31 @@
 
 from __future__ import annotations
 
-import json
 import os
-import shutil
-import signal
-import socket
 import subprocess
-import sys
 import time
-from collections.abc import Iterator
+from collections.abc import Callable
 from datetime import UTC, datetime
 from pathlib import Path
-from urllib.request import Request, urlopen
 
-import pytest
+import psutil
 
-from flows.overnight.launch import answers, running_server, server_file
+from flows.ledger import entries
 from flows.overnight.report import PassReport
-from flows.site.layout import Site, open_site
+from flows.overnight.schedule import last_pass_started
+from flows.site.layout import Site
+from flows.site.lock import is_held
 from flows.warehouse.reader import open_published
-
-COMMAND = [sys.executable, "-c", "from flows.cli import main; main()"]
-
-
-def small_site(done: Site, root: Path) -> Site:
-    """A site with one export of the demo and its map in the inbox."""
-    shutil.copytree(done.config, root / "config", ignore=shutil.ignore_patterns("recipes"))
-    for folder in ("inbox", "raw", "ledger"):
-        (root / folder).mkdir()
-    shutil.copy(done.inbox / "cold_SW104412.tsv", root / "inbox")
-    for path in done.inbox.glob("map_*"):
-        shutil.copy(path, root / "inbox")
-    return open_site(root)
+from tests.flows.overnight.served_site import (
+    COMMAND,
+    flow_runs,
+    free_port,
+    post,
+    serving,
+    set_keys,
+    small_site,
+    stop,
+)
 
 
 def analysis_count(site: Site) -> int:
@@ -57,51 +50,57 @@ def test_a_pass_by_prefect_needs_no_server_of_the_user(
     assert analysis_count(site) == 1
 
 
-@pytest.fixture
-def served(demo_night: tuple[Site, PassReport], tmp_path: Path) -> Iterator[tuple[Site, str]]:
-    """A site with `halfsat serve` running on a free port, its schedule far away."""
+def test_serve_runs_the_flow_on_demand_and_on_schedule_and_makes_up_what_a_kill_cost(
+    demo_night: tuple[Site, PassReport], tmp_path: Path
+) -> None:
     site = small_site(demo_night[0], tmp_path / "site")
-    with socket.socket() as probe:
-        probe.bind(("127.0.0.1", 0))
-        port = probe.getsockname()[1]
-    settings = (site.config / "site.toml").read_text()
-    lines = [line for line in settings.splitlines() if not line.startswith(("prefect_port", "cron"))]
-    head = [f"prefect_port = {port}", 'cron = "0 4 1 1 *"']
-    (site.config / "site.toml").write_text("\n".join([*head, *lines]) + "\n")
-    process = subprocess.Popen(
-        [*COMMAND, "serve", "--site", str(site.root)],
-        stdout=subprocess.PIPE,
-        stderr=subprocess.STDOUT,
-        text=True,
-    )
-    try:
-        deadline = time.monotonic() + 240
-        while running_server(site) is None:
-            assert process.poll() is None, process.stdout.read() if process.stdout else ""
-            assert time.monotonic() < deadline, "the server did not come up"
-            time.sleep(0.5)
-        yield site, f"http://127.0.0.1:{port}/api"
-        process.send_signal(signal.SIGTERM)
-        assert process.wait(30) == 0
-        assert not answers(f"http://127.0.0.1:{port}/api")
-        assert not server_file(site).exists()
-    finally:
-        if process.poll() is None:
-            process.kill()
-            process.wait()
+    port = free_port()
+    api_url = f"http://127.0.0.1:{port}/api"
+    set_keys(site, prefect_port=port, cron="0 4 1 1 *")
+    with serving(site) as process:
+        _runs_on_demand(site, api_url)
+        _runs_on_schedule(api_url)
+        # Killed with its server, while a run was under way as the server knows.
+        left = str(flow_runs(api_url)[0]["id"])
+        post(api_url, f"flow_runs/{left}/set_state", {"state": {"type": "RUNNING"}, "force": True})
+        for child in psutil.Process(process.pid).children(recursive=True):
+            child.kill()
+        process.kill()
+        process.wait()
+
+    before = pass_count(site)
+    # Every minute: one was missed by now, and more will be while the server comes up.
+    set_keys(site, cron="* * * * *")
+    time.sleep(max(0.0, 61.0 - (datetime.now(UTC) - last_pass_started(site)).total_seconds()))
+    with serving(site) as process:
+        wait_for(lambda: any(r["name"] == "made-up" for r in flow_runs(api_url)), api_url)
+        wait_for(lambda: state_of(api_url, "made-up") == "COMPLETED", api_url)
+        assert pass_count(site) == before + 1
+        assert state_of(api_url, left, by="id") == "CRASHED"
+        # A pass is under way when it is told to stop.
+        deployment = next(r["deployment_id"] for r in flow_runs(api_url) if r["name"] == "made-up")
+        post(api_url, f"deployments/{deployment}/create_flow_run", {"name": "stopped"})
+        wait_for(lambda: state_of(api_url, "stopped") == "RUNNING", api_url)
+        assert stop(site, process, api_url) < 10
+    assert not is_held(site)
 
 
-def flow_runs(api_url: str) -> list[dict[str, str]]:
-    asked = Request(
-        f"{api_url}/flow_runs/filter", data=b"{}", headers={"content-type": "application/json"}, method="POST"
-    )
-    with urlopen(asked, timeout=10) as reply:
-        runs: list[dict[str, str]] = json.load(reply)
-    return runs
+def pass_count(site: Site) -> int:
+    return sum(entry.kind == "pass_started" for entry in entries(site))
 
 
-def test_serve_runs_the_flow_on_demand_and_on_schedule_and_stops_cleanly(served: tuple[Site, str]) -> None:
-    site, api_url = served
+def state_of(api_url: str, wanted: str, by: str = "name") -> str | None:
+    return next((str(run["state_type"]) for run in flow_runs(api_url) if run[by] == wanted), None)
+
+
+def wait_for(holds: Callable[[], bool], api_url: str, longest_s: float = 240.0) -> None:
+    deadline = time.monotonic() + longest_s
+    while not holds():
+        assert time.monotonic() < deadline, flow_runs(api_url)
+        time.sleep(0.5)
+
+
+def _runs_on_demand(site: Site, api_url: str) -> None:
     done = subprocess.run(
         [*COMMAND, "overnight", "--site", str(site.root)],
         capture_output=True,
@@ -114,24 +113,12 @@ def test_serve_runs_the_flow_on_demand_and_on_schedule_and_stops_cleanly(served:
     assert analysis_count(site) == 1
     assert any(run["state_type"] == "COMPLETED" for run in flow_runs(api_url))
 
-    deadline = time.monotonic() + 90
-    scheduled: list[dict[str, str]] = []
-    while not scheduled:
-        assert time.monotonic() < deadline, "no run of the schedule was planned"
-        time.sleep(1)
-        scheduled = [run for run in flow_runs(api_url) if run["state_type"] == "SCHEDULED"]
+
+def _runs_on_schedule(api_url: str) -> None:
+    wait_for(lambda: any(run["state_type"] == "SCHEDULED" for run in flow_runs(api_url)), api_url)
+    first = next(run["id"] for run in flow_runs(api_url) if run["state_type"] == "SCHEDULED")
     # Started now instead of at new year: the runner picks it up and a process of its own runs the pass.
     now = {"scheduled_time": datetime.now(UTC).isoformat()}
     body = {"state": {"type": "SCHEDULED", "state_details": now}, "force": True}
-    first = scheduled[0]["id"]
-    asked = Request(
-        f"{api_url}/flow_runs/{first}/set_state",
-        data=json.dumps(body).encode(),
-        headers={"content-type": "application/json"},
-        method="POST",
-    )
-    urlopen(asked, timeout=10).close()
-    deadline = time.monotonic() + 240
-    while not any(run["id"] == first and run["state_type"] == "COMPLETED" for run in flow_runs(api_url)):
-        assert time.monotonic() < deadline, flow_runs(api_url)
-        time.sleep(1)
+    post(api_url, f"flow_runs/{first}/set_state", body)
+    wait_for(lambda: state_of(api_url, first, by="id") == "COMPLETED", api_url)
