@@ -34,6 +34,11 @@ Kind = Literal[
     "verified",
     "digest_written",
     "ledger_repaired",
+    "reviewer_added",
+    "reviewer_disabled",
+    "password_reset",
+    "plate_signed",
+    "plate_countersigned",
 ]
 
 GENESIS = "0" * 64

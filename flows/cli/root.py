@@ -40,6 +40,7 @@ COMMANDS: dict[str, Entry] = {
     "replay": Entry("Compute results again from raw bytes and compare.", "truth:replay_command"),
     "verify": Entry("Check every hash: ledger, raw files, lake, warehouse.", "truth:verify_command"),
     "rebuild": Entry("Make lake and warehouse again from raw files and ledger.", "truth:rebuild_command"),
+    "reviewer": Entry("Add, disable, list who may sign in to the review page.", "reviewer"),
 }
 
 

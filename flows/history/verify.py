@@ -19,6 +19,7 @@ from flows.ledger import Entry
 from flows.site import archive
 from flows.site.layout import Site
 from flows.site.recipes import recipe_path
+from flows.site.reviewers import account_rows, recorded_reviewers, reviewers_file
 from flows.stages.gate_runs import read_run
 from flows.stages.kept_profiles import profile_path
 from flows.stages.load import as_batch, stored_rows
@@ -130,7 +131,7 @@ def verify(site: Site, tell: Tell | None = None) -> VerifyReport:
     -------
     VerifyReport
         Counts and damages: the ledger's chain, raw files, kept recipes and profiles, lake files, gate
-        documents, the published copies, and the loader's database.
+        documents, the published copies, the loader's database, and the accounts of reviewers.
     """
     notes: list[str] = []
     chain, entries = _chain(site)
@@ -147,6 +148,7 @@ def verify(site: Site, tell: Tell | None = None) -> VerifyReport:
         _check("gate documents", _gate_runs(site, named).values(), lambda each: _document(site, each), told),
         _check("published copies", _copies(site, named), lambda each: _published(site, named, each), told),
         _check("warehouse", [site.loader_file], lambda _: _loader(site, named, notes), told),
+        *_reviewers(site),
     ]
     return VerifyReport(tuple(checked), tuple(notes))
 
@@ -299,6 +301,30 @@ def _loader(site: Site, named: _Named, notes: list[str]) -> Iterator[Damage]:
             notes.append("A pass is writing the warehouse: the loader's database was not checked.")
         else:
             yield Damage(place, "it cannot be read as a database", _REBUILD)
+
+
+def _reviewers(site: Site) -> list[Checked]:
+    """Accounts of reviewers held against what the ledger says of them; nothing where there are none."""
+    recorded = recorded_reviewers(site)
+    place = _below(site, reviewers_file(site))
+    try:
+        accounts = account_rows(site)
+    except HalfsatError as error:
+        return [Checked("reviewers", len(recorded), (Damage(place, error.what, error.remedy),))]
+    if not recorded and not accounts:
+        return []
+    damages = []
+    for name in sorted({*recorded, *accounts}):
+        if name not in accounts:
+            what = f"the account of {name} is missing, which the ledger names"
+            damages.append(Damage(place, what, f"{_BACKUP}, or type: halfsat reviewer add {name}"))
+        elif name not in recorded:
+            damages.append(Damage(place, f"the ledger does not name the account of {name}", _BACKUP))
+        elif accounts[name] != recorded[name]:
+            unlike = [key for key in recorded[name] if accounts[name].get(key) != recorded[name][key]]
+            what = f"{', '.join(unlike)} of {name} is not what the ledger says"
+            damages.append(Damage(place, what, _BACKUP))
+    return [Checked("reviewers", len({*recorded, *accounts}), tuple(damages))]
 
 
 def _since_publication(site: Site, named: _Named, place: str, notes: list[str]) -> Iterator[Damage]:
