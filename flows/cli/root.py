@@ -32,6 +32,7 @@ COMMANDS: dict[str, Entry] = {
     "demo": Entry("Make a demo site, run one night on it, and show what came out.", "demo"),
     "site": Entry("Make a site, check its configuration, try an export profile.", "site"),
     "overnight": Entry("Run one pass now: pull, stage, gate, fit, load.", "overnight"),
+    "morning": Entry("Serve the review page to a browser until stopped.", "morning"),
     "serve": Entry("Run passes on the site's schedule until stopped.", "serve"),
     "gates": Entry("Show which rules ran on what, and what they found.", "gates"),
     "history": Entry("Ask the warehouse a question in SQL.", "history"),

@@ -38,8 +38,13 @@ def render_page(template: str, **given: object) -> str:
 
 @cache
 def _environment() -> Environment:
+    return page_environment()
+
+
+def page_environment(*folders: Path) -> Environment:
+    """Templates of these folders, then of this one: all escaped, and a missing name is an error."""
     environment = Environment(
-        loader=FileSystemLoader(_HERE / "templates"),
+        loader=FileSystemLoader([*folders, _HERE / "templates"]),
         autoescape=True,
         undefined=StrictUndefined,
         trim_blocks=True,

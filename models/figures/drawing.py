@@ -18,6 +18,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
+from matplotlib.ticker import ScalarFormatter
 from numpy.typing import NDArray
 
 from models.figures.theme import HEAVY, LIGHT, MARK_PT, SMALL_PT, TEXT_PT, THIN, Theme
@@ -39,6 +40,14 @@ _SYSTEM_SANS = (
 )
 _SYMBOLS = {"umol/L": "µM", "umol/L/s": "µM/s", "mmol/L": "mM", "nmol/L": "nM", "1/s": "/s"}
 _LOCK = RLock()
+
+
+class _PlainTicks(ScalarFormatter):
+    """Numbers of ticks as plain text; only a power of ten beside the axis is set as a formula."""
+
+    def __call__(self, x: float, pos: int | None = None) -> str:
+        """Label of a tick. Setting each as a formula takes most of the time of a small figure."""
+        return super().__call__(x, pos).removeprefix(r"$\mathdefault{").removesuffix("}$")
 
 
 @contextmanager
@@ -68,6 +77,7 @@ def plain_axes(panel: Axes, theme: Theme) -> Axes:
     )
     panel.tick_params(which="minor", length=1.5)
     for axis in (panel.xaxis, panel.yaxis):
+        axis.set_major_formatter(_PlainTicks())
         axis.get_offset_text().set(color=theme.ink, fontsize=SMALL_PT)
     return panel
 
