@@ -159,7 +159,7 @@ def _add_pages(app: FastAPI, site: Site) -> None:
             linear_plots=drawings.LINEAR_PLOTS,
         )
 
-    @app.get("/lot/{assay}/{lot}", response_class=HTMLResponse)
+    @app.get("/lot/{assay}/{lot:path}", response_class=HTMLResponse)
     def lot(request: Request, session: Reader, assay: str, lot: str) -> Response:
         with published(site) as connection:
             return page(request, session, "lot.html", lot=the_lot(connection, assay, lot))
