@@ -98,6 +98,7 @@ def metrics(data: GateInput) -> pd.DataFrame:
         plates,
         reason,
         z_prime=np.where(reason == "", window.z_prime, np.nan),
+        signal_to_blank=window.signal_to_blank,
         reference_mean=window.reference_mean,
         reference_sd=window.reference_sd,
         blank_mean=window.blank_mean,

@@ -147,6 +147,13 @@ def _judged(points: pd.DataFrame, size: tuple[int, int]) -> tuple[object, ...]:
     return "", effect[told[most]], p_value[most], kind, place, int(count[told[most]])
 
 
+def place_name(kind: str, place: float) -> str:
+    """Where on the plate: `edge`, `row C`, `column 7`."""
+    if kind == "row":
+        return f"row {row_letters(int(place))}"
+    return f"column {place:.0f}" if kind == "column" else kind
+
+
 def expectations(limits: Limits, _subject: Subject) -> list[Any]:
     """Expect no row, column or edge effect that is large and more than chance."""
     from checks import expectations as expect
@@ -165,12 +172,8 @@ def sentence(row: Row, limits: Limits) -> str:
     """Where the plate runs differently, by how much, and how likely chance is."""
     effect = float(row["effect"])
     measured, limit = beside(abs(effect), number(limits, NAME, "limit"), 100)
-    if row["kind"] == "edge":
-        where = "The edge of the plate"
-    elif row["kind"] == "row":
-        where = f"Row {row_letters(int(row['place']))}"
-    else:
-        where = f"Column {row['place']:.0f}"
+    place = place_name(row["kind"], row["place"])
+    where = "The edge of the plate" if row["kind"] == "edge" else f"{place[0].upper()}{place[1:]}"
     side = "above" if effect > 0 else "below"
     return (
         f"{where} runs {measured} % {side} the same conditions elsewhere on the plate (limit {limit} %), in "

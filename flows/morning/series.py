@@ -12,7 +12,6 @@ import duckdb
 
 from flows.morning.asking import ask, one
 
-WELLS_FITTED = {"clear": "without held wells", "all": "with held wells", "curves": "whole curves"}
 NEIGHBOURS = 1
 
 

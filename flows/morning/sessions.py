@@ -83,11 +83,6 @@ class Sessions:
         with self._lock:
             self._by_digest.pop(_digest(token or ""), None)
 
-    def end_all_of(self, name: str) -> None:
-        """Forget every session of a person."""
-        with self._lock:
-            self._by_digest = {key: each for key, each in self._by_digest.items() if each.name != name}
-
     def _lives(self, session: Session) -> bool:
         now = self.clock()
         return now - session.seen_at <= IDLE_AFTER and now - session.begun_at <= LONGEST

@@ -13,7 +13,6 @@ import pandas as pd
 from checks.gates import GATES, control_window, plate_position
 from checks.gates.gate import ENZYME_ROLES, GateInput, known_or_none
 from flows.frames import rows
-from models.plates import row_letters
 from models.statistics.plate_quality import replicate_cvs
 from models.statistics.position import read_order_drift
 from models.tables import PLATE_STATISTICS
@@ -62,27 +61,23 @@ def _row(analysis_id: object, statistic: str, value: object, reason: object, **r
 
 def _control(metrics: pd.DataFrame) -> Iterator[Row]:
     for plate in rows(metrics):
-        ratio = plate.reference_mean / plate.blank_mean if plate.blank_mean > 0 else np.nan
         no_ratio = plate.reason or "the blanks' mean rate is not above zero"
         count = known_or_none(plate.reference_count + plate.blank_count)
         wells = None if count is None else int(count)
         yield _row(plate.analysis_id, "z_prime", plate.z_prime, plate.reason, well_count=wells)
-        yield _row(plate.analysis_id, "signal_to_blank", ratio, no_ratio, well_count=wells)
+        yield _row(plate.analysis_id, "signal_to_blank", plate.signal_to_blank, no_ratio, well_count=wells)
 
 
 def _position(metrics: pd.DataFrame) -> Iterator[Row]:
     for plate in rows(metrics):
-        place = None
-        if isinstance(plate.kind, str):
-            number = "" if plate.kind == "edge" else f" {int(plate.place)}"
-            place = f"row {row_letters(int(plate.place))}" if plate.kind == "row" else f"{plate.kind}{number}"
+        known = isinstance(plate.kind, str)
         yield _row(
             plate.analysis_id,
             "position_effect",
             plate.effect,
             plate.reason,
             p_value=known_or_none(plate.p_value),
-            where_on_plate=place,
+            where_on_plate=plate_position.place_name(plate.kind, plate.place) if known else None,
             well_count=int(plate.well_count),
         )
 

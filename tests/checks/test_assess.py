@@ -162,8 +162,8 @@ COLUMNS: dict[str, tuple[str, ...]] = {
     "fit_misfit": ("p_value", "lack_of_fit_p", "runs_p"),
     "initial_vs_full_curve": ("p_value", "km_ratio", "km_ratio_low", "km_ratio_high", "vmax_ratio"),
     "control_window": (
-        "z_prime", "reference_mean", "reference_sd", "blank_mean", "blank_sd", "reference_count",
-        "blank_count", "substrate_um",
+        "z_prime", "signal_to_blank", "reference_mean", "reference_sd", "blank_mean", "blank_sd",
+        "reference_count", "blank_count", "substrate_um",
     ),
     "outlier_in_series": ("p_value", "relative_residual", "studentised_residual", "point_count"),
     "enzyme_linearity": ("departure", "certainty", "p_value", "level"),

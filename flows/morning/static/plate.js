@@ -47,7 +47,7 @@ const MOVES = { ArrowUp: [-1, 0], ArrowDown: [1, 0], ArrowLeft: [0, -1], ArrowRi
 
 document.addEventListener("keydown", (event) => {
   if (event.ctrlKey || event.metaKey || event.altKey || event.target.closest("input, textarea, select")) return;
-  if (event.key in MOVES && event.target.closest("#plate, body") && !event.target.closest("main a:not(.well)")) {
+  if (event.key in MOVES && !event.target.closest("main a:not(.well)")) {
     event.preventDefault();
     choose(beside(current(), ...MOVES[event.key]));
   } else if (event.key === "n" || event.key === "p") {
