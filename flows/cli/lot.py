@@ -1,4 +1,4 @@
-"""`halfsat lot`: what a lot comes to, against its specification and its reference; and its report."""
+"""`halfsat lot`: what a lot comes to, against its specification and its reference."""
 
 from __future__ import annotations
 
@@ -8,13 +8,7 @@ from pathlib import Path
 import click
 
 from flows.cli.options import site_option
-from flows.cli.tables import console
-from flows.history.lot_json import lot_json
-from flows.history.lot_text import lot_view
-from flows.history.lots import lot_records
-from flows.site.configuration import read_record
 from flows.site.layout import open_site
-from models.records.lot_specification import LotSpecification
 
 
 @click.command("lot")
@@ -44,6 +38,13 @@ def command(
     the comparison with the reference lot, and the reference lot's control charts. Nothing is stored: the same
     results and the same specification (by its digest) give the same decision at any time.
     """
+    from flows.cli.tables import console
+    from flows.history.lot_json import lot_json
+    from flows.history.lot_text import lot_view
+    from flows.history.lots import lot_records
+    from flows.site.configuration import read_record
+    from models.records.lot_specification import LotSpecification
+
     site = open_site(site_dir)
     given = None if specification_file is None else read_record(specification_file, LotSpecification)
     records = lot_records(site, lot, assay, given)
@@ -55,5 +56,4 @@ def command(
         screen.print()
         screen.print(lot_view(record))
     screen.print()
-    screen.print(f"Next: halfsat lot {lot} --report {lot}.pdf", soft_wrap=True)
-    screen.print(f"      halfsat lineage {records[0].constants[0].lot_value_id[:12]}", soft_wrap=True)
+    screen.print(f"Next: halfsat lineage {records[0].constants[0].lot_value_id[:12]}", soft_wrap=True)

@@ -36,7 +36,7 @@ COMMANDS: dict[str, Entry] = {
     "serve": Entry("Run passes on the site's schedule until stopped.", "serve"),
     "gates": Entry("Show which rules ran on what, and what they found.", "gates"),
     "history": Entry("Ask the warehouse a question in SQL.", "history"),
-    "lot": Entry("Show what a lot comes to, and write its report.", "lot"),
+    "lot": Entry("Hold a lot against its specification and reference.", "lot"),
     "lineage": Entry("Trace a result back to the export's bytes.", "lineage"),
     "replay": Entry("Compute results again from raw bytes and compare.", "truth:replay_command"),
     "verify": Entry("Check every hash: ledger, raw files, lake, warehouse.", "truth:verify_command"),

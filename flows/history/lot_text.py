@@ -1,6 +1,6 @@
 """A lot on the terminal: values, decisions, the reference, charts; holds at 80 columns.
 
-Lays out what `flows.history.lots` gathered; reads nothing. Its words serve the report too.
+Lays out what `flows.history.lots` gathered; reads nothing.
 """
 
 from __future__ import annotations
@@ -277,7 +277,7 @@ def _charts(record: LotRecord) -> list[RenderableType]:
         names = [("constant", False), ("plate", False), ("day", False), ("signal", False)]
         parts += [Text(""), _table(names, told[-SHOWN_SIGNALS:])]
         if len(told) > SHOWN_SIGNALS:
-            parts.append(Text(f"the latest {SHOWN_SIGNALS} of {len(told)}; the report has all", style="dim"))
+            parts.append(Text(f"the latest {SHOWN_SIGNALS} of {len(told)}; --format json has all", style="dim"))
     return parts
 
 

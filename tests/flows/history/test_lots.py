@@ -195,7 +195,7 @@ def test_the_view_holds_at_80_columns(site: Site, lot: str) -> None:
 def test_the_command_prints_and_writes_json(site: Site) -> None:
     printed = call(site, "L-00003").output
     assert printed.count("Lot L-00003: ") == 3
-    assert "halfsat lot L-00003 --report" in printed
+    assert "Next: halfsat lineage" in printed
     one = json.loads(call(site, "L-00003", "--assay", ASSAY, "--format", "json").output)
     (record,) = lot_records(site, "L-00003", ASSAY)
     assert one == [lot_json(record)]
