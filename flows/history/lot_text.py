@@ -277,7 +277,9 @@ def _charts(record: LotRecord) -> list[RenderableType]:
         names = [("constant", False), ("plate", False), ("day", False), ("signal", False)]
         parts += [Text(""), _table(names, told[-SHOWN_SIGNALS:])]
         if len(told) > SHOWN_SIGNALS:
-            parts.append(Text(f"the latest {SHOWN_SIGNALS} of {len(told)}; --format json has all", style="dim"))
+            parts.append(
+                Text(f"the latest {SHOWN_SIGNALS} of {len(told)}; --format json has all", style="dim")
+            )
     return parts
 
 
